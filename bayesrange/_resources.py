@@ -26,9 +26,7 @@ def demo_folder() -> Path:
     Raises:
         FileNotFoundError: the installation is incomplete.
     """
-    return _first_existing(
-        "bundled study", _PACKAGE / "demo", _CHECKOUT / "case_studies" / "marram_heath" / "study"
-    )
+    return _first_existing("bundled study", _PACKAGE / "demo", _CHECKOUT / "case_studies" / "marram_heath" / "study")
 
 
 def _first_existing(what: str, *folders: Path) -> Path:
