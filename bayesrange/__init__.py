@@ -9,13 +9,15 @@ from typing import Any
 
 __version__ = "0.1.0"
 
-# Public name: the subpackage that defines it.
+# Public name: the module that defines it, or that it is.
 _HOMES = {
-    "StudyError": "bayesrange._errors",
+    "Run": "bayesrange.report",
     "Study": "bayesrange.study",
-    "read_study": "bayesrange.study",
+    "StudyError": "bayesrange._errors",
     "cards": "bayesrange.inference",
     "fit": "bayesrange.inference",
+    "read_run": "bayesrange.report",
+    "read_study": "bayesrange.study",
     "report": "bayesrange.report",
 }
 
@@ -26,7 +28,8 @@ def __getattr__(name: str) -> Any:
     """Import a public name from its subpackage on first use (PEP 562)."""
     if name not in _HOMES:
         raise AttributeError(f"module `bayesrange` has no attribute `{name}`; it has {', '.join(__all__)}.")
-    value = getattr(import_module(_HOMES[name]), name)
+    module = import_module(_HOMES[name])
+    value = module if module.__name__ == f"bayesrange.{name}" else getattr(module, name)
     globals()[name] = value
     return value
 

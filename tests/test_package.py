@@ -5,6 +5,7 @@ import importlib.metadata
 import subprocess
 import sys
 import tomllib
+import types
 from pathlib import Path
 
 import pytest
@@ -13,6 +14,7 @@ from packaging.utils import canonicalize_name
 
 import bayesrange
 from bayesrange import _resources
+from bayesrange._callable import make_callable
 
 ROOT = Path(__file__).parents[1]
 PACKAGE = ROOT / "bayesrange"
@@ -66,6 +68,21 @@ def test_public_names_are_found_where_the_table_says():
     for name in bayesrange.__all__:
         assert getattr(bayesrange, name) is not None
         assert name in dir(bayesrange)
+
+
+@pytest.mark.parametrize("first", ["", "import bayesrange.report;"])
+def test_every_command_can_be_called_whatever_was_imported_before(first):
+    printed = in_new_process(f"import bayesrange; {first} print(*map(callable, (bayesrange.fit, bayesrange.report)))")
+    assert printed == ["True", "True"]
+
+
+def test_callable_module_keeps_its_own_names(monkeypatch):
+    module = types.ModuleType("made_up")
+    module.kept = 1
+    monkeypatch.setitem(sys.modules, "made_up", module)
+    make_callable("made_up", lambda x, *, twice: x * 2 if twice else x)
+    assert module(3, twice=True) == 6
+    assert module.kept == 1
 
 
 def test_unknown_name_is_an_attribute_error_that_lists_the_known_ones():
