@@ -1,0 +1,132 @@
+"""Relocations from text tables: one row a fix, in the coordinates of the file.
+
+Rows with blank coordinates are failed fixes: counted and set aside. Anything else that is not well-formed is an
+error, so that no fix is lost by a typing mistake.
+"""
+
+import glob
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+
+from bayesrange._errors import StudyError
+from bayesrange.study._settings import FixesSection
+from bayesrange.study._tables import column_or_error, first_few, numbers, one_name_each, read_table
+from bayesrange.study._times import read_times
+
+_PATTERN = set("*?[")
+
+
+@dataclass(frozen=True)
+class RawFixes:
+    """Fixes before they are placed in the study's reference system."""
+
+    table: pd.DataFrame  # animal, time, x, y [units of the file], group, error_m, file, row
+    counts: dict[str, int]
+    warnings: list[str]
+    files: dict[str, Path]
+
+
+def read_fixes(folder: Path, section: FixesSection) -> RawFixes:
+    """All fixes of the study, sorted by animal and time.
+
+    Raises:
+        StudyError: names file, line and column of what is wrong.
+    """
+    files = _files(folder, [section.file] if isinstance(section.file, str) else section.file)
+    parts, counts, warnings = [], {"rows": 0, "failed": 0}, []
+    for name, path in files.items():
+        table = read_table(path, name)
+        part, said = _fixes_of(table, section, name)
+        counts["rows"] += len(table)
+        counts["failed"] += len(table) - len(part)
+        warnings += said
+        parts.append(part)
+    fixes = pd.concat(parts, ignore_index=True)
+    if fixes.empty:
+        raise StudyError(f"{first_few(files)}: there is no fix with coordinates ({counts['rows']} rows).")
+    one_name_each(fixes["animal"], "animals", first_few(files))
+    _refuse_repeats(fixes)
+    earlier = fixes.groupby("animal")["time"].diff() < pd.Timedelta(0)
+    counts["unsorted"] = int(earlier.sum())
+    fixes = fixes.sort_values(["animal", "time"], kind="stable", ignore_index=True)
+    return RawFixes(fixes, counts, warnings, files)
+
+
+def _files(folder: Path, given: list[str]) -> dict[str, Path]:
+    found: dict[str, Path] = {}
+    for entry in given:
+        path = folder / entry
+        if path.is_dir():
+            names = sorted(str(Path(entry) / p.name) for p in path.glob("*.csv"))
+        elif _PATTERN & set(entry) and not path.is_file():
+            names = sorted(glob.glob(entry, root_dir=folder, recursive=True))
+        else:
+            names = [entry]
+        if not names:
+            raise StudyError(f'[fixes] file: no file matches "{entry}" beside the study file.')
+        found |= {Path(name).as_posix(): folder / name for name in names}
+    return found
+
+
+def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd.DataFrame, list[str]]:
+    x = column_or_error(table, section.x, name, "[fixes] x")
+    y = column_or_error(table, section.y, name, "[fixes] y")
+    half = ((x == "") != (y == "")).to_numpy()
+    if half.any():
+        raise StudyError(
+            f"{name}, line {table.index[half][0]}: one coordinate is blank; give both, or blank both for a failed fix."
+        )
+    table = table[(x != "").to_numpy()]
+    animal = column_or_error(table, section.animal, name, "[fixes] animal")
+    if (animal == "").any():
+        raise StudyError(f"{name}, line {table.index[animal == ''][0]}: the animal is blank; name it.")
+    times, said = read_times(column_or_error(table, str(section.time), name, "[fixes] time"), section.zone, name)
+    error, said_of_error = _errors(table, section, name)
+    part = pd.DataFrame(
+        {
+            "animal": animal.to_numpy(),
+            "time": times.to_numpy(),
+            "x": numbers(table[section.x], name),
+            "y": numbers(table[section.y], name),
+            "group": _groups(table, section, name),
+            "error_m": error,
+            "file": name,
+            "row": table.index.to_numpy(dtype=np.int64),
+        }
+    ).astype({"animal": "str", "group": "str", "file": "str"})
+    part["time"] = part["time"].dt.tz_localize("UTC") if part["time"].dt.tz is None else part["time"]
+    return part, said + said_of_error
+
+
+def _groups(table: pd.DataFrame, section: FixesSection, name: str) -> np.ndarray:
+    """The group column; the default one may be absent, one that the user named may not."""
+    if section.group not in table.columns and "group" not in section.model_fields_set:
+        return np.full(len(table), "")
+    return column_or_error(table, section.group, name, "[fixes] group").to_numpy()
+
+
+def _errors(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[np.ndarray, list[str]]:
+    """Standard deviation per axis [m]; 0 where none is known."""
+    if isinstance(section.error, float | int):
+        return np.full(len(table), float(section.error)), []
+    if section.error not in table.columns and "error" not in section.model_fields_set:
+        return np.zeros(len(table)), []
+    texts = column_or_error(table, section.error, name, "[fixes] error")
+    error = numbers(texts, name, blank=0.0)
+    if (error < 0).any():
+        line = table.index[error < 0][0]
+        raise StudyError(f'{name}, line {line}: the error is "{texts[line]}"; expected at least 0 m (sd per axis).')
+    blank = int((texts == "").sum())
+    return error, [f"{name}: {blank} fixes have no error given and count as exact."] if blank else []
+
+
+def _refuse_repeats(fixes: pd.DataFrame) -> None:
+    again = fixes.duplicated(["animal", "time"])
+    if again.any():
+        rows = first_few(f"{f} line {r}" for f, r in zip(fixes["file"][again], fixes["row"][again], strict=True))
+        raise StudyError(
+            f"{again.sum()} fixes repeat an animal and time that stand before ({rows}); keep one row for each."
+        )

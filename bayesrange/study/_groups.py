@@ -1,0 +1,125 @@
+"""The groups table: home centres, numbers of marking adults, covariates."""
+
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+
+from bayesrange._errors import StudyError
+from bayesrange.study._tables import column_or_error, first_few, numbers, one_name_each, read_table
+
+_OWN = ("group", "x", "y", "animals", "from", "until")
+
+
+def read_groups(path: Path, name: str, covariates: list[str]) -> tuple[pd.DataFrame, list[str]]:
+    """Groups in the order of the file, coordinates as written there, and what has to be said.
+
+    Returns:
+        Columns group, x, y [as written; NaN = to be estimated], animals, then every further column: numbers where
+        all its cells are numbers, else text.
+
+    Raises:
+        StudyError: names file, line and column of what is wrong.
+    """
+    table = read_table(path, name)
+    if table.empty:
+        raise StudyError(f"{name}: there is no group; expected one line a group.")
+    group = column_or_error(table, "group", name, "the heading")
+    if (group == "").any():
+        raise StudyError(f"{name}, line {table.index[group == ''][0]}: the group's name is blank; give it one.")
+    again = group.duplicated()
+    if again.any():
+        raise StudyError(f'{name}, line {table.index[again][0]}: the group "{group[again].iloc[0]}" stands twice.')
+    one_name_each(group, "groups", name)
+    for column in ("from", "until"):
+        if column in table.columns and (table[column] != "").any():
+            raise StudyError(f'{name}, column "{column}": groups that come or go are not built yet; leave it blank.')
+    x, y = (numbers(column_or_error(table, c, name, "the heading"), name, blank=np.nan) for c in ("x", "y"))
+    half = np.isnan(x) != np.isnan(y)
+    if half.any():
+        raise StudyError(
+            f"{name}, line {table.index[half][0]}: one coordinate of the home centre is blank; "
+            "give both, or blank both to have it estimated."
+        )
+    animals, said = _animals(table, name)
+    groups = pd.DataFrame({"group": group.to_numpy(), "x": x, "y": y, "animals": animals}).astype({"group": "str"})
+    for column in table.columns.difference(_OWN, sort=False):
+        groups[column] = _covariate(table[column], name, wanted=column in covariates)
+    for column in covariates:
+        if column not in groups.columns or column in _OWN:
+            column_or_error(table.drop(columns=[*_OWN], errors="ignore"), column, name, "[model] covariates")
+    return groups, said
+
+
+def groups_of_fixes(fixes: pd.DataFrame) -> tuple[pd.DataFrame, list[str]]:
+    """Groups as they stand in the fixes, homes to be estimated, one marking animal each."""
+    names = sorted(set(fixes["group"]) - {""})
+    groups = pd.DataFrame({"group": names, "x": np.nan, "y": np.nan, "animals": 1}).astype(
+        {"group": "str", "x": float, "y": float, "animals": np.int64}
+    )
+    said = "no [groups] table: groups were taken from the fixes, home centres are estimated, each counts 1 animal."
+    return groups, [said] if names else []
+
+
+def match_groups(fixes: pd.DataFrame, groups: pd.DataFrame, name: str) -> list[str]:
+    """Check that fixes and groups belong together; what has to be said of animals and their groups.
+
+    Raises:
+        StudyError: a fix in no known group, a group with neither fixes nor a home centre.
+    """
+    known, places = set(groups["group"]), (fixes["file"] + " line " + fixes["row"].astype(str))
+    blank = (fixes["group"] == "") & bool(known)
+    if blank.any():
+        raise StudyError(
+            f"{blank.sum()} fixes have no group ({first_few(places[blank])}); fill in the group column "
+            "([fixes] group names it), or take [groups] out of the study file."
+        )
+    strange = ~fixes["group"].isin(known) & bool(known)
+    if strange.any():
+        which = first_few(f'"{g}"' for g in sorted(set(fixes["group"][strange])))
+        raise StudyError(
+            f"{strange.sum()} fixes are of a group that is not in {name}: {which} ({first_few(places[strange])}); "
+            "add the group or mend its name."
+        )
+    lost = groups[groups["x"].isna() & ~groups["group"].isin(set(fixes["group"]))]
+    if len(lost):
+        raise StudyError(
+            f'{name}: the group "{lost["group"].iloc[0]}" has neither fixes nor a home centre; '
+            "a group without fixes still marks, so give its x and y."
+        )
+    return _remarks(fixes, groups)
+
+
+def _remarks(fixes: pd.DataFrame, groups: pd.DataFrame) -> list[str]:
+    said = []
+    per_animal = fixes.groupby("animal")["group"].nunique()
+    for animal in per_animal.index[per_animal > 1]:
+        said.append(f'The animal "{animal}" has fixes in more than one group.')
+    tracked = fixes.groupby("group")["animal"].nunique()
+    for group, animals in zip(groups["group"], groups["animals"], strict=True):
+        if tracked.get(group, 0) > animals:
+            said.append(f'The group "{group}" counts {animals} animals, but {tracked[group]} have fixes.')
+    return said
+
+
+def _animals(table: pd.DataFrame, name: str) -> tuple[np.ndarray, list[str]]:
+    if "animals" not in table.columns:
+        return np.ones(len(table), dtype=np.int64), [f"{name}: no column animals; each group counts 1 animal."]
+    texts = table["animals"]
+    counts = numbers(texts, name, blank=1.0)
+    bad = (counts < 1) | (counts != np.round(counts))
+    if bad.any():
+        raise StudyError(
+            f'{name}, line {table.index[bad][0]}, column "animals": expected a whole number of at least 1, '
+            f'got "{texts[bad].iloc[0]}".'
+        )
+    blank = table["group"][(texts == "").to_numpy()]
+    said = [f"{name}: the number of animals is blank and counts 1 for {', '.join(blank)}."] if len(blank) else []
+    return counts.astype(np.int64), said
+
+
+def _covariate(texts: pd.Series, name: str, wanted: bool) -> pd.Series:
+    if wanted and (texts == "").any():
+        raise StudyError(f'{name}, line {texts.index[texts == ""][0]}, column "{texts.name}": the covariate is blank.')
+    values = pd.to_numeric(texts, errors="coerce")
+    return (texts if values.isna().any() else values).reset_index(drop=True)

@@ -1,0 +1,166 @@
+"""Are fixes and home centres where the model can have them, and is the grid fine enough for the ranges."""
+
+import numpy as np
+import pandas as pd
+import shapely
+from jaxtyping import Bool, Float
+from numpy.typing import NDArray
+from scipy import ndimage
+from scipy.spatial import cKDTree
+
+from bayesrange._errors import StudyError
+from bayesrange.study._grid import LARGEST, SUB, Frame, Grid
+from bayesrange.study._tables import first_few
+
+_SDS = 3.0  # a fix may lie outside by this many standard deviations of its error
+_FEWEST_CELLS, _BETTER_CELLS = 10, 20
+_FEWEST_FIXES = 10
+# Bias of `localising` by cells across the 95 % range (measured; docs/mathematics, "Steady-state space use")
+_BIAS_CELLS, _BIAS_PERCENT = np.array([5.0, 8, 16, 24]), np.array([10.0, 5, 1.6, 0.8])
+
+
+class Ground:
+    """The habitable ground as fixes and homes see it: the exact polygon, less the no-go sub-cells."""
+
+    def __init__(
+        self,
+        area: shapely.Polygon | shapely.MultiPolygon,
+        frame: Frame,
+        habitable: Bool[NDArray, "rows columns"],
+        no_go: Bool[NDArray, "rows columns"],
+    ):
+        self._area, self._frame, self._habitable, self._no_go = area, frame, habitable, no_go
+        self._inside = habitable.reshape(frame.ny, SUB, frame.nx, SUB).any(axis=(1, 3))
+        shapely.prepare(area)
+
+    def in_area(self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]) -> Bool[NDArray, " n"]:
+        """Whether each place [m] is in the polygon or on its edge."""
+        return np.asarray(shapely.covers(self._area, shapely.points(x, y)))
+
+    def on_no_go(self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]) -> Bool[NDArray, " n"]:
+        """Whether each place [m] is on a no-go sub-cell."""
+        return self._look_up(self._no_go, self._frame.cell_m / SUB, x, y)
+
+    def habitable(self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]) -> Bool[NDArray, " n"]:
+        """Whether an animal can be at each place [m]: in the polygon, not on no-go ground, in a cell that is inside."""
+        in_cell = self._look_up(self._inside, self._frame.cell_m, x, y)
+        return self.in_area(x, y) & ~self.on_no_go(x, y) & in_cell
+
+    def distance_m(self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]) -> Float[NDArray, " n"]:
+        """Distance to the nearest habitable sub-cell [m], good to half a sub-cell."""
+        edge = self._habitable & ~ndimage.binary_erosion(self._habitable)
+        rows, columns = np.nonzero(edge)
+        size = self._frame.cell_m / SUB
+        centres = np.stack([columns, rows], axis=1) * size + size / 2 + (self._frame.west_m, self._frame.south_m)
+        nearest, _ = cKDTree(centres).query(np.stack([x, y], axis=1))
+        return np.maximum(nearest - size / 2, 0.0)
+
+    def _look_up(
+        self, mask: Bool[NDArray, "rows columns"], size: float, x: Float[NDArray, " n"], y: Float[NDArray, " n"]
+    ) -> Bool[NDArray, " n"]:
+        """The mask's value at each place, False off the grid; a place on the grid's last edge belongs to it."""
+        rows, columns = mask.shape
+        along, up = (x - self._frame.west_m) / size, (y - self._frame.south_m) / size
+        on_grid = (along >= 0) & (along <= columns) & (up >= 0) & (up <= rows)
+        column = np.clip(np.floor(np.where(on_grid, along, 0)).astype(int), 0, columns - 1)
+        row = np.clip(np.floor(np.where(on_grid, up, 0)).astype(int), 0, rows - 1)
+        return on_grid & mask[row, column]
+
+
+def check_fixes(fixes: pd.DataFrame, ground: Ground, swapped: tuple[NDArray, NDArray]) -> int:
+    """Refuse fixes where no animal can be; the number that are outside within their error is returned.
+
+    Args:
+        fixes: in the study's reference system.
+        ground: where animals can be.
+        swapped: easting and northing [m] that the fixes would have if the file's x and y were exchanged.
+    """
+    x, y, error = (fixes[c].to_numpy(dtype=float) for c in ("x", "y", "error_m"))
+    out = np.flatnonzero(~ground.habitable(x, y))
+    if out.size == 0:
+        return 0
+    far = out[ground.distance_m(x[out], y[out]) > _SDS * error[out]]
+    if far.size == 0:
+        return int(out.size)
+    turned = ground.in_area(*swapped)
+    if turned.mean() > 0.5 > ground.in_area(x, y).mean():
+        raise StudyError(
+            f"{_count(far.size, 'fix', 'fixes')} outside the study area, but inside it with x and y exchanged: "
+            "exchange [fixes] x and y in the study file."
+        )
+    raise StudyError(_where(fixes, far, ground, x, y))
+
+
+def _where(fixes: pd.DataFrame, far: NDArray, ground: Ground, x: NDArray, y: NDArray) -> str:
+    beyond = ~ground.in_area(x[far], y[far])
+    no_go = ~beyond & ground.on_no_go(x[far], y[far])
+    parts = {"outside the study area": beyond, "on no-go ground": no_go, "in no cell of the grid": ~beyond & ~no_go}
+    told = []
+    for what, which in parts.items():
+        if which.any():
+            lines = fixes.iloc[far[which]]
+            rows = first_few(f"{f} line {r}" for f, r in zip(lines["file"], lines["row"], strict=True))
+            told.append(f"{_count(int(which.sum()), 'fix', 'fixes')} {what} ({rows})")
+    return (
+        f"{'; '.join(told)}, by more than {_SDS:.0f} standard deviations of their error; mend or take out these rows, "
+        "widen the area, or give the location error by [fixes] error."
+    )
+
+
+def check_homes(groups: pd.DataFrame, ground: Ground, name: str) -> None:
+    """Refuse a given home centre outside the area or on no-go ground."""
+    given = groups[groups["x"].notna()]
+    x, y = given["x"].to_numpy(dtype=float), given["y"].to_numpy(dtype=float)
+    beyond, wrong = ~ground.in_area(x, y), ~ground.habitable(x, y)
+    for group, outside in zip(given["group"][wrong], beyond[wrong], strict=True):
+        what = "outside the study area" if outside else "on no-go ground"
+        raise StudyError(
+            f'{name}: the home centre of "{group}" is {what}; mend its x and y ([study] crs), '
+            "or leave them blank to have it estimated."
+        )
+
+
+def check_size(frame: Frame, groups: int) -> None:
+    """Refuse a grid so large that a fit would take days."""
+    if max(frame.ny, frame.nx) <= LARGEST:
+        return
+    cells = frame.ny * frame.nx
+    # 16 ms for value and gradient at 64 × 64 cells and 6 groups, power 1.2 in cells; 4 × 1000 draws of 15 steps
+    days = 0.016 * (cells / 64**2) ** 1.2 * max(groups, 1) / 6 * 4 * 1000 * 15 / 86400
+    coarser = frame.cell_m * max(frame.ny, frame.nx) / LARGEST
+    raise StudyError(
+        f"[study] cell_m: the grid would have {frame.ny} × {frame.nx} cells, more than {LARGEST} along a side, and a "
+        f"fit would take about {days:.2g} days; use cells of at least {coarser:.0f} m, or a smaller area."
+    )
+
+
+def check_resolution(fixes: pd.DataFrame, grid: Grid) -> list[str]:
+    """Remarks on groups whose range is only 10 to 20 cells across, or that have few fixes.
+
+    Across means twice the distance from the median place that holds 95 % of the group's fixes.
+
+    Raises:
+        StudyError: a group whose range is less than 10 cells across.
+    """
+    said = []
+    for group, own in fixes.groupby("group"):
+        label = f'group "{group}"' if group else "study"
+        if len(own) < _FEWEST_FIXES:
+            said.append(f"The {label} has only {_count(len(own), 'fix', 'fixes')}: too few to judge the cell size by.")
+            continue
+        across_m = 2 * np.quantile(np.hypot(own["x"] - own["x"].median(), own["y"] - own["y"].median()), 0.95)
+        cells = across_m / grid.cell_m
+        bias = np.exp(np.interp(np.log(max(cells, 1)), np.log(_BIAS_CELLS), np.log(_BIAS_PERCENT)))
+        told = f"95 % of the fixes of the {label} lie within {across_m:.0f} m, only {cells:.1f} cells across"
+        if cells < _FEWEST_CELLS:
+            raise StudyError(
+                f"[study] cell_m: {told}, which would bias localising by about {bias:.0f} % or more; "
+                f"use cells of at most {across_m / _FEWEST_CELLS:.0f} m, better {across_m / _BETTER_CELLS:.0f} m."
+            )
+        if cells < _BETTER_CELLS:
+            said.append(f"{told}: expect localising to be biased by about {bias:.1f} %.")
+    return said
+
+
+def _count(n: int, one: str, many: str) -> str:
+    return f"{n} {one if n == 1 else many}"

@@ -1,0 +1,182 @@
+"""Reads a whole study: settings, area, grid, layers, groups and fixes, checked against each other.
+
+Nothing is written. Easting and northing are in metres of the study's reference system.
+"""
+
+import hashlib
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+import pyproj
+import shapely
+from jaxtyping import Bool
+from numpy.typing import NDArray
+
+from bayesrange._errors import StudyError
+from bayesrange.study._area import read_area
+from bayesrange.study._crs import carry, crs_text, look_like_degrees, metric_crs, parse_crs, scale_warnings, utm_for
+from bayesrange.study._fixes import RawFixes, read_fixes
+from bayesrange.study._grid import SUB, Frame, Grid, area_sub_cells, build_grid, frame_of
+from bayesrange.study._groups import groups_of_fixes, match_groups, read_groups
+from bayesrange.study._layers import Layer, no_go_sub_cells, read_layer
+from bayesrange.study._places import Ground, check_fixes, check_homes, check_resolution, check_size
+from bayesrange.study._settings import StudySettings
+from bayesrange.study._settings_file import locate_study, read_settings
+
+
+@dataclass(frozen=True)
+class Study:
+    """Everything the user brings, checked and in one reference system.
+
+    Attributes:
+        path: the study file.
+        settings: its content.
+        crs: the reference system in which everything is computed, in metres.
+        area: the study area's polygon in `crs`.
+        grid: the cells over it.
+        fixes: sorted by animal and time; animal, time (UTC), x, y [m], group ("" if none), error_m (standard deviation
+            per axis, 0 if none), file and row (line number).
+        groups: group, x, y [m; NaN: to be estimated], animals (at least 1), then the covariates.
+        layers: by name, no-go layers left out.
+        counts: what was read and set aside.
+        warnings: sentences for the user.
+        hashes: SHA-256 of every file read, by its name relative to the study.
+    """
+
+    path: Path
+    settings: StudySettings
+    crs: pyproj.CRS
+    area: shapely.Polygon | shapely.MultiPolygon
+    grid: Grid
+    fixes: pd.DataFrame
+    groups: pd.DataFrame
+    layers: dict[str, Layer]
+    counts: dict[str, int]
+    warnings: list[str]
+    hashes: dict[str, str]
+
+
+def read_study(path: str | Path) -> Study:
+    """Read the study file (or the folder with study.toml) and all files it names.
+
+    Raises:
+        StudyError: one sentence on what is wrong, where, and how to mend it.
+    """
+    path = locate_study(path)
+    settings, folder = read_settings(path), path.parent
+    raw = read_fixes(folder, settings.fixes)
+    crs, fixes_crs, said_of_crs = _reference_systems(settings, raw)
+    area = read_area(folder / settings.study.area, settings.study.area, crs)
+    said_of_crs += scale_warnings(crs, area.representative_point().x, area.representative_point().y)
+    fixes = _placed(raw.table, fixes_crs, crs)
+    groups, said_of_groups = _groups(settings, folder, fixes, fixes_crs, crs)
+
+    frame = frame_of(area, settings.study.cell_m)
+    check_size(frame, len(groups))
+    in_area, no_go = area_sub_cells(area, frame), _no_go(settings, folder, frame, crs)
+    grid = build_grid(frame, crs, in_area & ~no_go)
+    ground = Ground(area, frame, in_area & ~no_go, no_go)
+    outside = check_fixes(fixes, ground, carry(*raw.table[["y", "x"]].to_numpy(dtype=float).T, fixes_crs, crs))
+    check_homes(groups, ground, settings.groups.file if settings.groups else "groups")
+    layers, said_of_layers = _layers(settings, folder, grid)
+
+    counts = raw.counts | {"fixes": len(fixes), "animals": fixes["animal"].nunique(), "groups": len(groups)}
+    counts["outside_within_error"] = outside
+    warnings = said_of_crs + raw.warnings + said_of_groups + check_resolution(fixes, grid) + said_of_layers
+    hashes = _hashes(path, settings, raw.files)
+    return Study(path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes)
+
+
+def _reference_systems(settings: StudySettings, raw: RawFixes) -> tuple[pyproj.CRS, pyproj.CRS, list[str]]:
+    """The study's system, the fixes' system, and what has to be said."""
+    x, y = raw.table["x"].to_numpy(dtype=float), raw.table["y"].to_numpy(dtype=float)
+    degrees = look_like_degrees(x, y)
+    given = settings.study.crs and metric_crs(settings.study.crs, "[study] crs")
+    if settings.fixes.crs is None:
+        if degrees:
+            raise StudyError(
+                "[fixes] crs: the coordinates look like longitude and latitude; "
+                'say so by crs = "EPSG:4326" in [fixes].'
+            )
+        if not given:
+            raise StudyError('[study] crs: this is missing; expected a metric system such as "EPSG:32631".')
+        return given, given, []
+    of_fixes = parse_crs(settings.fixes.crs, "[fixes] crs")
+    if of_fixes.is_geographic and not degrees:
+        row = raw.table[~((np.abs(x) <= 180) & (np.abs(y) <= 90))].iloc[0]
+        raise StudyError(
+            f"{row['file']}, line {row['row']}: x = {row['x']:g}, y = {row['y']:g} is no longitude and latitude, "
+            f"but [fixes] crs is {settings.fixes.crs}; mend crs, or exchange x and y."
+        )
+    if given:
+        return given, of_fixes, []
+    if not of_fixes.is_geographic:
+        raise StudyError('[study] crs: this is missing; expected a metric system such as "EPSG:32631".')
+    chosen = utm_for(x, y, of_fixes)
+    return chosen, of_fixes, [f"[study] crs was chosen from the fixes: {crs_text(chosen)} ({chosen.name})."]
+
+
+def _placed(table: pd.DataFrame, source: pyproj.CRS, target: pyproj.CRS) -> pd.DataFrame:
+    """The fixes in the study's reference system."""
+    x, y = carry(table["x"].to_numpy(dtype=float), table["y"].to_numpy(dtype=float), source, target)
+    lost = ~(np.isfinite(x) & np.isfinite(y))
+    if lost.any():
+        row = table[lost].iloc[0]
+        raise StudyError(
+            f"{row['file']}, line {row['row']}: x = {row['x']:g}, y = {row['y']:g} lies where [study] crs does not "
+            "reach; check [fixes] crs and the order of x and y."
+        )
+    return table.assign(x=x, y=y)
+
+
+def _groups(
+    settings: StudySettings, folder: Path, fixes: pd.DataFrame, fixes_crs: pyproj.CRS, crs: pyproj.CRS
+) -> tuple[pd.DataFrame, list[str]]:
+    """Groups in the study's reference system, matched to the fixes."""
+    if settings.groups is None:
+        groups, said = groups_of_fixes(fixes)
+        return groups, said + match_groups(fixes, groups, "[fixes] group")
+    name = settings.groups.file
+    groups, said = read_groups(folder / name, name, settings.model.covariates)
+    given = groups["x"].notna().to_numpy()
+    x, y = groups["x"].to_numpy(dtype=float)[given], groups["y"].to_numpy(dtype=float)[given]
+    source = crs if settings.study.crs else fixes_crs
+    if look_like_degrees(x, y) and not source.is_geographic:
+        if not fixes_crs.is_geographic:
+            raise StudyError(f"{name}: the home centres look like degrees; give them in {crs_text(crs)} [m].")
+        source = fixes_crs
+        said.append(f"{name}: home centres look like degrees and were read in {crs_text(fixes_crs)}, as the fixes are.")
+    elif source.is_geographic and len(x) and not look_like_degrees(x, y):
+        raise StudyError(f"{name}: expected home centres in degrees as the fixes are, or say [study] crs.")
+    groups.loc[given, "x"], groups.loc[given, "y"] = carry(x, y, source, crs)
+    return groups, said + match_groups(fixes, groups, name)
+
+
+def _no_go(settings: StudySettings, folder: Path, frame: Frame, crs: pyproj.CRS) -> Bool[NDArray, "rows columns"]:
+    found = np.zeros((frame.ny * SUB, frame.nx * SUB), dtype=bool)
+    for layer in settings.layers.values():
+        if layer.no_go and layer.file:
+            found |= no_go_sub_cells(folder / layer.file, layer.file, frame, crs)
+    return found
+
+
+def _layers(settings: StudySettings, folder: Path, grid: Grid) -> tuple[dict[str, Layer], list[str]]:
+    layers: dict[str, Layer] = {}
+    said: list[str] = []
+    for name, entry in settings.layers.items():
+        if not entry.no_go and entry.file:
+            wanted = name in settings.model.layers
+            layers[name], remarks = read_layer(folder / entry.file, entry.file, name, entry.unit, grid, wanted)
+            said += remarks
+    return layers, said
+
+
+def _hashes(path: Path, settings: StudySettings, fixes: dict[str, Path]) -> dict[str, str]:
+    """SHA-256 of every file that was read, by its name as the user wrote it."""
+    named = [settings.study.area, *(layer.file for layer in settings.layers.values() if layer.file)]
+    if settings.groups is not None:
+        named.append(settings.groups.file)
+    files = {path.name: path} | fixes | {name: path.parent / name for name in named}
+    return {name: hashlib.sha256(file.read_bytes()).hexdigest() for name, file in files.items()}

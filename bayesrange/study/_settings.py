@@ -1,0 +1,141 @@
+"""The study file's keys, their types and defaults.
+
+One class a section. A field's `description` is the end of the sentence "expected …", so that a wrong value is
+answered in the user's words. `_settings_file.py` reads the file; keys of the design that are not used yet are known
+here and refused there.
+"""
+
+from datetime import date, datetime
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, ConfigDict, Field
+
+type Metres = Annotated[float, Field(gt=0, allow_inf_nan=False)]
+type Share = Annotated[float, Field(gt=0, lt=1)]
+type Name = Annotated[str, Field(min_length=1)]
+type Moment = date | datetime
+
+A_NAME = "a name in quotes"
+A_COLUMN = "the name of a column in quotes"
+A_FILE = "the name of a file in quotes"
+METRES = "a number of metres above 0"
+
+
+class Section(BaseModel):
+    """A table of the study file: unknown keys are errors, values keep the type that TOML gave them."""
+
+    model_config = ConfigDict(extra="forbid", strict=True, frozen=True, populate_by_name=True)
+
+
+class StudySection(Section):
+    """`[study]`: name, reference system, grid and area."""
+
+    name: Name = Field(description=A_NAME)
+    crs: Name | None = Field(None, description='a metric reference system such as "EPSG:32631"')
+    cell_m: Metres | Literal["auto"] = Field(description='a number of metres above 0, or "auto"')
+    area: Name = Field(description="the file with the study area's polygon in quotes")
+    sensitive: Literal["no", "high"] = Field("no", description='"no" or "high"')
+
+
+class KeepSection(Section):
+    """`[fixes.keep]`: which fixes are used."""
+
+    sun: Literal["night", "day"] | None = Field(None, description='"night" or "day"')
+    hours: Name | None = Field(None, description='two clock times such as "18:00-06:00"')
+    column: dict[str, Any] | None = Field(None, description='a column and its value such as { activity = "active" }')
+
+
+class FixesSection(Section):
+    """`[fixes]`: files and columns of the relocations."""
+
+    file: Name | list[Name] = Field(description="a file, a pattern such as \"collars/*.csv\", a folder, or a list of these")
+    animal: Name = Field("animal", description=A_COLUMN)
+    tag: Name | None = Field(None, description=A_COLUMN)
+    time: Name | list[Name] = Field("time", description="the name of a column in quotes, or a list of two")
+    x: Name = Field("x", description=A_COLUMN)
+    y: Name = Field("y", description=A_COLUMN)
+    group: Name = Field("group", description=A_COLUMN)
+    error: Name | Annotated[float, Field(ge=0, allow_inf_nan=False)] = Field(
+        "error_m", description="a column, or a number of metres of at least 0 (standard deviation per axis)"
+    )
+    zone: Name | None = Field(None, description='a time zone such as "Europe/Oslo"')
+    crs: Name | None = Field(None, description='the reference system of x and y, such as "EPSG:4326"')
+    keep: KeepSection | None = Field(None, description="the keys sun, hours or column")
+
+
+class AnimalsSection(Section):
+    """`[animals]`: one row a deployment."""
+
+    file: Name | None = Field(None, description=A_FILE)
+    settle_in_days: float = Field(0, ge=0, description="a number of days of at least 0")
+
+
+class GroupsSection(Section):
+    """`[groups]`: the social groups, their home centres and sizes."""
+
+    file: Name = Field(description=A_FILE)
+
+
+class PeriodSection(Section):
+    """One entry of `[periods]`."""
+
+    start: Moment = Field(alias="from", description="a date such as 2031-03-01, without quotes")
+    until: Moment = Field(description="a date such as 2031-06-10, without quotes")
+
+
+class LayerSection(Section):
+    """`[layers.NAME]`: a map layer."""
+
+    file: Name | None = Field(None, description=A_FILE)
+    files: dict[str, Name] | None = Field(None, description='one file a period, such as { before = "…", after = "…" }')
+    unit: str = Field("", description="a unit in quotes")
+    fill: Literal["nearest"] | None = Field(None, description='"nearest"')
+    fill_within_m: Metres | None = Field(None, description=METRES)
+    no_go: bool = Field(False, description="true or false")
+
+
+class ModelSection(Section):
+    """`[model]`: which model card, and how it is applied."""
+
+    card: Name = Field(description='the name of a model card such as "avoidance-resources"')
+    layers: list[Name] = Field([], description='a list of layer names such as ["earthworms"]')
+    pooling: Literal["shared", "hierarchical", "individual"] = Field(
+        "shared", description='"shared", "hierarchical" or "individual"'
+    )
+    autocorrelation: Literal["weighted", "ignored"] = Field("weighted", description='"weighted" or "ignored"')
+    reading: Literal["bilinear", "cell"] = Field("bilinear", description='"bilinear" or "cell"')
+    covariates: list[Name] = Field([], description='a list of columns of the groups table such as ["sex_ratio"]')
+    memory_start: Literal["naive", "learned"] = Field("naive", description='"naive" or "learned"')
+    learning_days: float | None = Field(None, gt=0, description="a number of days above 0")
+    interval_h: float | None = Field(None, gt=0, description="a number of hours above 0")
+    encoding_range_m: Metres | Literal["estimate"] | None = Field(None, description=METRES + ', or "estimate"')
+    shortest_step_m: Metres | None = Field(None, description=METRES)
+    perception_m: Metres | None = Field(None, description=METRES)
+    over_marking: bool = Field(False, description="true or false")
+    smallest_effect: dict[str, float] | None = Field(None, description="numbers such as { avoidance = 0.1 }")
+    priors: dict[str, dict[str, Any]] = Field(
+        {}, description='a prior such as avoidance = { family = "half-normal", scale = 2.0 }'
+    )
+
+
+class SamplingSection(Section):
+    """`[sampling]`: how long and from which seed."""
+
+    chains: int = Field(4, ge=1, description="a whole number of at least 1")
+    warmup: int = Field(500, ge=1, description="a whole number of at least 1")
+    draws: int = Field(500, ge=1, description="a whole number of at least 1")
+    seed: int = Field(20, ge=0, lt=2**32, description="a whole number from 0 to 4294967295")
+    target_accept: Share = Field(0.9, description="a number between 0 and 1")
+
+
+class StudySettings(Section):
+    """The whole study file."""
+
+    study: StudySection = Field(description="the section [study]")
+    fixes: FixesSection = Field(description="the section [fixes]")
+    animals: AnimalsSection | None = Field(None, description="the section [animals]")
+    groups: GroupsSection | None = Field(None, description="the section [groups]")
+    periods: dict[str, PeriodSection] = Field({}, description="periods such as before = { from = …, until = … }")
+    layers: dict[str, LayerSection] = Field({}, description="sections such as [layers.earthworms]")
+    model: ModelSection = Field(description="the section [model]")
+    sampling: SamplingSection = Field(SamplingSection(), description="the section [sampling]")

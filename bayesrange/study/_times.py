@@ -1,0 +1,71 @@
+"""Times of fixes: ISO 8601 text to moments in UTC."""
+
+import re
+from zoneinfo import ZoneInfo, available_timezones
+
+import numpy as np
+import pandas as pd
+
+from bayesrange._errors import StudyError
+from bayesrange.study._settings_file import nearest
+from bayesrange.study._tables import first_few
+
+_ISO = re.compile(r"\d{4}-\d\d-\d\d(?P<clock>[T ]\d\d:\d\d(:\d\d([.,]\d+)?)?(?P<offset> ?(Z|[+-]\d\d(:?\d\d)?))?)?")
+_EXAMPLE = "expected ISO 8601 such as 2031-03-01T04:00:00+01:00"
+
+
+def read_times(texts: pd.Series, zone: str | None, name: str) -> tuple[pd.Series, list[str]]:
+    """Moments in UTC, and what has to be said about them.
+
+    Args:
+        texts: one time a cell, blanks cut off; the index holds line numbers.
+        zone: IANA name of the zone in which times without an offset are, or None.
+        name: what the user calls the file.
+
+    Raises:
+        StudyError: not ISO 8601, no such day, no offset and no zone, or a clock time that the zone skips or repeats.
+    """
+    found = [_ISO.fullmatch(text) for text in texts]
+    bad = np.array([match is None for match in found], dtype=bool)
+    _refuse(texts, bad, name, _EXAMPLE)
+    naive = np.array([match is not None and match["offset"] is None for match in found], dtype=bool)
+    if naive.any() and zone is None:
+        raise StudyError(
+            f"{name}, line {texts.index[naive][0]}: the time {texts[naive].iloc[0]} has no offset from UTC; write it as "
+            'in 2031-03-01T04:00:00+01:00, or say the zone by [fixes] zone = "Europe/Oslo".'
+        )
+    times = pd.Series(pd.NaT, index=texts.index, dtype="datetime64[ns, UTC]")
+    plain = texts.str.replace(",", ".", regex=False)
+    times[~naive] = _parsed(plain[~naive], texts, name)
+    if naive.any():
+        local = _parsed(plain[naive], texts, name).dt.tz_localize(None)
+        times[naive] = _in_zone(local, texts, str(zone), name)
+    days = sum(match is not None and match["clock"] is None for match in found)
+    said = [f"{name}: {days} times are a day without a clock time and were read as 00:00."] if days else []
+    return times, said
+
+
+def _parsed(texts: pd.Series, original: pd.Series, name: str) -> pd.Series:
+    """Moments read as if in UTC where no offset is given."""
+    times = pd.to_datetime(texts, format="ISO8601", utc=True, errors="coerce").astype("datetime64[ns, UTC]")
+    lost = original.loc[texts.index]
+    _refuse(lost, times.isna().to_numpy(), name, "there is no such day or time of day")
+    return times
+
+
+def _in_zone(local: pd.Series, texts: pd.Series, zone: str, name: str) -> pd.Series:
+    if zone not in available_timezones():
+        close = nearest(zone, sorted(available_timezones()))
+        hint = f'did you mean "{close}"?' if close else 'expected a name such as "Europe/Oslo".'
+        raise StudyError(f'[fixes] zone: there is no time zone "{zone}"; {hint}')
+    placed = local.dt.tz_localize(ZoneInfo(zone), ambiguous="NaT", nonexistent="NaT")
+    lost = placed.isna().to_numpy()
+    _refuse(texts.loc[local.index], lost, name, f"summer time in {zone} skips or repeats it; write it with its offset")
+    return placed.dt.tz_convert("UTC")
+
+
+def _refuse(texts: pd.Series, bad: np.ndarray, name: str, why: str) -> None:
+    if bad.any():
+        lines = first_few(texts.index[bad])
+        word = "lines" if bad.sum() > 1 else "line"
+        raise StudyError(f'{name}, {word} {lines}: the time "{texts[bad].iloc[0]}" cannot be read: {why}.')
