@@ -36,4 +36,4 @@ def __getattr__(name: str) -> Any:
 
 def __dir__() -> list[str]:
     """The public names, whether they were used yet or not."""
-    return sorted({*globals(), *__all__})
+    return sorted(__all__)
