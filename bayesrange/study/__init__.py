@@ -1,9 +1,13 @@
 """What the user brings: study file, relocations, groups, layers, the grid; and what autocorrelation leaves of it."""
 
+from bayesrange._errors import StudyError as StudyError
 from bayesrange.study._autocorrelation import Weights as Weights
 from bayesrange.study._autocorrelation import autocorrelation_weights as autocorrelation_weights
+from bayesrange.study._autocorrelation import interval_weights as interval_weights
 from bayesrange.study._grid import Grid as Grid
 from bayesrange.study._layers import Layer as Layer
+from bayesrange.study._ornstein import CrossingTime as CrossingTime
+from bayesrange.study._ornstein import OrnsteinUhlenbeck as OrnsteinUhlenbeck
 from bayesrange.study._read import Study as Study
 from bayesrange.study._read import read_study as read_study
 from bayesrange.study._settings import StudySettings as StudySettings

@@ -13,7 +13,7 @@ import pandas as pd
 
 from bayesrange._errors import StudyError
 from bayesrange.study._settings import FixesSection
-from bayesrange.study._tables import column_or_error, first_few, numbers, one_name_each, read_table
+from bayesrange.study._tables import column_or_error, counted, first_few, numbers, one_name_each, read_table
 from bayesrange.study._times import read_times
 
 _PATTERN = set("*?[")
@@ -88,7 +88,7 @@ def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd
     part = pd.DataFrame(
         {
             "animal": animal.to_numpy(),
-            "time": times.to_numpy(),
+            "time": times.array,
             "x": numbers(table[section.x], name),
             "y": numbers(table[section.y], name),
             "group": _groups(table, section, name),
@@ -97,7 +97,6 @@ def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd
             "row": table.index.to_numpy(dtype=np.int64),
         }
     ).astype({"animal": "str", "group": "str", "file": "str"})
-    part["time"] = part["time"].dt.tz_localize("UTC") if part["time"].dt.tz is None else part["time"]
     return part, said + said_of_error
 
 
@@ -120,13 +119,13 @@ def _errors(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[np.n
         line = table.index[error < 0][0]
         raise StudyError(f'{name}, line {line}: the error is "{texts[line]}"; expected at least 0 m (sd per axis).')
     blank = int((texts == "").sum())
-    return error, [f"{name}: {blank} fixes have no error given and count as exact."] if blank else []
+    said = f"{name}: {counted(blank, 'fix has', 'fixes have')} no error given, taken as exact."
+    return error, [said] if blank else []
 
 
 def _refuse_repeats(fixes: pd.DataFrame) -> None:
     again = fixes.duplicated(["animal", "time"])
     if again.any():
         rows = first_few(f"{f} line {r}" for f, r in zip(fixes["file"][again], fixes["row"][again], strict=True))
-        raise StudyError(
-            f"{again.sum()} fixes repeat an animal and time that stand before ({rows}); keep one row for each."
-        )
+        number = counted(int(again.sum()), "fix repeats", "fixes repeat")
+        raise StudyError(f"{number} an animal and time that stand before ({rows}); keep one row for each.")

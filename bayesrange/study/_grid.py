@@ -20,7 +20,7 @@ from bayesrange._errors import StudyError
 
 SUB = 8  # sub-cells along a cell's edge
 LARGEST = 400  # cells along a side, above which a fit would take days
-_EDGE = 1e-6  # share of a cell by which rounding may push the area over a cell's edge
+_EDGE = 0.06  # an overhang by this share of a cell holds no sub-cell's centre (those lie 1/16 in): no cells for it
 
 
 @dataclass(frozen=True)
@@ -68,7 +68,7 @@ class Grid:
     @property
     def habitable_km2(self) -> float:
         """Habitable area [km²]."""
-        return float(self.habitable.sum()) * (self.cell_m / 1000) ** 2
+        return float(self.habitable.sum() * self.cell_m**2 / 1e6)
 
     @property
     def transform(self) -> Affine:
@@ -98,9 +98,7 @@ class Grid:
         right, upper = along - column, up - row
         columns = np.stack([column, column + 1, column, column + 1], axis=1)
         rows = np.stack([row, row, row + 1, row + 1], axis=1)
-        weights = np.stack(
-            [(1 - right) * (1 - upper), right * (1 - upper), (1 - right) * upper, right * upper], axis=1
-        )
+        weights = np.stack([(1 - right) * (1 - upper), right * (1 - upper), (1 - right) * upper, right * upper], axis=1)
         on_grid = (columns >= 0) & (columns < nx) & (rows >= 0) & (rows < ny)
         rows = np.where(on_grid, rows, 0).astype(np.int64)
         columns = np.where(on_grid, columns, 0).astype(np.int64)
@@ -126,7 +124,10 @@ class Frame:
 
 
 def frame_of(area: shapely.Polygon | shapely.MultiPolygon, cell_m: float) -> Frame:
-    """The area's bounding box, snapped outward to multiples of the cell [m]."""
+    """The area's bounding box, snapped outward to multiples of the cell [m].
+
+    Rounded coordinates (GeoJSON has 6 or 7 decimals of a degree) do not add a row of empty cells.
+    """
     west, south, east, north = (np.asarray(area.bounds) / cell_m).tolist()
     first_x, first_y = int(np.floor(west + _EDGE)), int(np.floor(south + _EDGE))
     last_x, last_y = int(np.ceil(east - _EDGE)), int(np.ceil(north - _EDGE))
@@ -135,9 +136,9 @@ def frame_of(area: shapely.Polygon | shapely.MultiPolygon, cell_m: float) -> Fra
 
 def area_sub_cells(area: shapely.Polygon | shapely.MultiPolygon, frame: Frame) -> Bool[NDArray, "rows columns"]:
     """Sub-cells whose centre is in the area; row 0 south."""
-    return rasterio.features.geometry_mask(
-        [area], (frame.ny * SUB, frame.nx * SUB), frame.transform(SUB), invert=True
-    )[::-1]
+    return rasterio.features.geometry_mask([area], (frame.ny * SUB, frame.nx * SUB), frame.transform(SUB), invert=True)[
+        ::-1
+    ]
 
 
 def build_grid(frame: Frame, crs: pyproj.CRS, habitable_sub_cells: Bool[NDArray, "rows columns"]) -> Grid:
@@ -173,9 +174,7 @@ def refuse_pieces(habitable: Float[NDArray, "ny nx"], frame: Frame) -> None:
     )
 
 
-def _basis_share(
-    blocks: Bool[NDArray, "ny nx sub sub"], inside: Bool[NDArray, "ny nx"]
-) -> Float[NDArray, "ny nx"]:
+def _basis_share(blocks: Bool[NDArray, "ny nx sub sub"], inside: Bool[NDArray, "ny nx"]) -> Float[NDArray, "ny nx"]:
     """Midpoint rule over habitable sub-cells of each inside cell's renormalised bilinear weight [cell areas]."""
     ny, nx = inside.shape
     padded = np.pad(inside.astype(float), 1)

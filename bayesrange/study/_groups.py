@@ -6,7 +6,7 @@ import numpy as np
 import pandas as pd
 
 from bayesrange._errors import StudyError
-from bayesrange.study._tables import column_or_error, first_few, numbers, one_name_each, read_table
+from bayesrange.study._tables import column_or_error, counted, first_few, numbers, one_name_each, read_table
 
 _OWN = ("group", "x", "y", "animals", "from", "until")
 
@@ -70,15 +70,17 @@ def match_groups(fixes: pd.DataFrame, groups: pd.DataFrame, name: str) -> list[s
     known, places = set(groups["group"]), (fixes["file"] + " line " + fixes["row"].astype(str))
     blank = (fixes["group"] == "") & bool(known)
     if blank.any():
+        number = counted(int(blank.sum()), "fix has", "fixes have")
         raise StudyError(
-            f"{blank.sum()} fixes have no group ({first_few(places[blank])}); fill in the group column "
+            f"{number} no group ({first_few(places[blank])}); fill in the group column "
             "([fixes] group names it), or take [groups] out of the study file."
         )
     strange = ~fixes["group"].isin(known) & bool(known)
     if strange.any():
         which = first_few(f'"{g}"' for g in sorted(set(fixes["group"][strange])))
+        number = counted(int(strange.sum()), "fix is", "fixes are")
         raise StudyError(
-            f"{strange.sum()} fixes are of a group that is not in {name}: {which} ({first_few(places[strange])}); "
+            f"{number} of a group that is not in {name}: {which} ({first_few(places[strange])}); "
             "add the group or mend its name."
         )
     lost = groups[groups["x"].isna() & ~groups["group"].isin(set(fixes["group"]))]

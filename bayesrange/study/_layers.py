@@ -110,7 +110,7 @@ def _read_raster(path: Path, file: str, frame: Frame, crs: pyproj.CRS) -> _Raste
     try:
         with _opened(path) as source:
             if source.crs is None:
-                raise StudyError(f"{file}: the raster does not say its reference system; save it as a GeoTIFF with one.")
+                raise StudyError(f"{file}: the raster does not say its reference system; save it with one.")
             if source.count != 1:
                 raise StudyError(f"{file}: the raster has {source.count} bands; expected one, so save the wanted band.")
             system = pyproj.CRS.from_user_input(source.crs)
@@ -143,7 +143,7 @@ def _window(source: rasterio.DatasetReader, frame: Frame, crs: pyproj.CRS) -> Wi
     tilted = source.transform.b != 0 or source.transform.d != 0
     if tilted:
         return whole
-    corners = [~source.transform * corner for corner in ((box[0], box[1]), (box[2], box[3]))]
+    corners = [_applied(~source.transform, x, y) for x, y in ((box[0], box[1]), (box[2], box[3]))]
     (left, right), (top, bottom) = (sorted(c[k] for c in corners) for k in (0, 1))
     left, top = max(int(np.floor(left)) - 1, 0), max(int(np.floor(top)) - 1, 0)
     right, bottom = min(int(np.ceil(right)) + 1, source.width), min(int(np.ceil(bottom)) + 1, source.height)
@@ -160,7 +160,7 @@ def _onto_cells(raster: _Raster, frame: Frame, crs: pyproj.CRS) -> Float[NDArray
 def _same_cells(raster: _Raster, frame: Frame, crs: pyproj.CRS) -> bool:
     """Whether the raster's pixels are the grid's cells."""
     t, cells = raster.transform, frame.transform()
-    column, row = ~cells * (t.c, t.f)
+    column, row = _applied(~cells, t.c, t.f)
     aligned = max(abs(column - round(column)), abs(row - round(row))) < _SAME
     alike = max(abs(t.a / cells.a - 1), abs(t.e / cells.e - 1)) < _SAME / max(raster.values.shape)
     return raster.crs == crs and t.b == t.d == 0 and aligned and alike
@@ -169,7 +169,7 @@ def _same_cells(raster: _Raster, frame: Frame, crs: pyproj.CRS) -> bool:
 def _pixel_m(raster: _Raster, frame: Frame, crs: pyproj.CRS) -> float:
     """Edge of a pixel amid the raster [m]: root of its area in the study's reference system."""
     rows, columns = raster.values.shape
-    corners = [raster.transform * (columns / 2 + i, rows / 2 + j) for i, j in ((0, 0), (1, 0), (0, 1))]
+    corners = [_applied(raster.transform, columns / 2 + i, rows / 2 + j) for i, j in ((0, 0), (1, 0), (0, 1))]
     x, y = pyproj.Transformer.from_crs(raster.crs, crs, always_xy=True).transform(*np.transpose(corners))
     return float(np.sqrt(abs((x[1] - x[0]) * (y[2] - y[0]) - (x[2] - x[0]) * (y[1] - y[0]))))
 
@@ -192,3 +192,7 @@ def _warp(
         tolerance=0.0,
     )
     return onto[::-1].copy()
+
+
+def _applied(t: Affine, x: float, y: float) -> tuple[float, float]:
+    return t.a * x + t.b * y + t.c, t.d * x + t.e * y + t.f

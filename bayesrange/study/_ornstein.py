@@ -105,9 +105,7 @@ class OrnsteinUhlenbeck:
             return bound
         return float(brentq(lambda s: self.profile(np.exp(s)) - drop, peak, bound, xtol=1e-3))
 
-    def _terms(
-        self, tau_h: float, variance: float, error_m2: Float[NDArray, " fixes"]
-    ) -> tuple[float, float, float]:
+    def _terms(self, tau_h: float, variance: float, error_m2: Float[NDArray, " fixes"]) -> tuple[float, float, float]:
         """log|V|, 1ᵀV⁻¹1 and the sum over axes of zᵀPz, P = V⁻¹ less its part along the mean."""
         ratio = self.interval_h / tau_h
         beyond = 1 / np.expm1(np.minimum(2 * ratio, 700))  # φ²/(1 − φ²)

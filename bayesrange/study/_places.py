@@ -10,7 +10,7 @@ from scipy.spatial import cKDTree
 
 from bayesrange._errors import StudyError
 from bayesrange.study._grid import LARGEST, SUB, Frame, Grid
-from bayesrange.study._tables import first_few
+from bayesrange.study._tables import counted, first_few
 
 _SDS = 3.0  # a fix may lie outside by this many standard deviations of its error
 _FEWEST_CELLS, _BETTER_CELLS = 10, 20
@@ -25,12 +25,12 @@ class Ground:
     def __init__(
         self,
         area: shapely.Polygon | shapely.MultiPolygon,
-        frame: Frame,
+        grid: Grid,
         habitable: Bool[NDArray, "rows columns"],
         no_go: Bool[NDArray, "rows columns"],
+        reading: str,
     ):
-        self._area, self._frame, self._habitable, self._no_go = area, frame, habitable, no_go
-        self._inside = habitable.reshape(frame.ny, SUB, frame.nx, SUB).any(axis=(1, 3))
+        self._area, self._grid, self._habitable, self._no_go, self._reading = area, grid, habitable, no_go, reading
         shapely.prepare(area)
 
     def in_area(self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]) -> Bool[NDArray, " n"]:
@@ -38,33 +38,31 @@ class Ground:
         return np.asarray(shapely.covers(self._area, shapely.points(x, y)))
 
     def on_no_go(self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]) -> Bool[NDArray, " n"]:
-        """Whether each place [m] is on a no-go sub-cell."""
-        return self._look_up(self._no_go, self._frame.cell_m / SUB, x, y)
+        """Whether each place [m] is on a no-go sub-cell; never so off the grid."""
+        rows, columns = self._no_go.shape
+        size = self._grid.cell_m / SUB
+        column = np.floor((x - self._grid.west_m) / size)
+        row = np.floor((y - self._grid.south_m) / size)
+        on_grid = (column >= 0) & (column < columns) & (row >= 0) & (row < rows)
+        return on_grid & self._no_go[np.where(on_grid, row, 0).astype(int), np.where(on_grid, column, 0).astype(int)]
 
     def habitable(self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]) -> Bool[NDArray, " n"]:
-        """Whether an animal can be at each place [m]: in the polygon, not on no-go ground, in a cell that is inside."""
-        in_cell = self._look_up(self._inside, self._frame.cell_m, x, y)
-        return self.in_area(x, y) & ~self.on_no_go(x, y) & in_cell
+        """Whether an animal can be at each place [m]: in the polygon, not on no-go ground, where the grid is read."""
+        if self._reading == "cell":
+            row, column = self._grid.cell_of(x, y)
+            readable = (row >= 0) & self._grid.inside[row, column]
+        else:
+            readable = self._grid.bilinear(x, y)[2].any(axis=1)
+        return self.in_area(x, y) & ~self.on_no_go(x, y) & readable
 
     def distance_m(self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]) -> Float[NDArray, " n"]:
         """Distance to the nearest habitable sub-cell [m], good to half a sub-cell."""
         edge = self._habitable & ~ndimage.binary_erosion(self._habitable)
         rows, columns = np.nonzero(edge)
-        size = self._frame.cell_m / SUB
-        centres = np.stack([columns, rows], axis=1) * size + size / 2 + (self._frame.west_m, self._frame.south_m)
+        size = self._grid.cell_m / SUB
+        centres = np.stack([columns, rows], axis=1) * size + size / 2 + (self._grid.west_m, self._grid.south_m)
         nearest, _ = cKDTree(centres).query(np.stack([x, y], axis=1))
         return np.maximum(nearest - size / 2, 0.0)
-
-    def _look_up(
-        self, mask: Bool[NDArray, "rows columns"], size: float, x: Float[NDArray, " n"], y: Float[NDArray, " n"]
-    ) -> Bool[NDArray, " n"]:
-        """The mask's value at each place, False off the grid; a place on the grid's last edge belongs to it."""
-        rows, columns = mask.shape
-        along, up = (x - self._frame.west_m) / size, (y - self._frame.south_m) / size
-        on_grid = (along >= 0) & (along <= columns) & (up >= 0) & (up <= rows)
-        column = np.clip(np.floor(np.where(on_grid, along, 0)).astype(int), 0, columns - 1)
-        row = np.clip(np.floor(np.where(on_grid, up, 0)).astype(int), 0, rows - 1)
-        return on_grid & mask[row, column]
 
 
 def check_fixes(fixes: pd.DataFrame, ground: Ground, swapped: tuple[NDArray, NDArray]) -> int:
@@ -85,7 +83,7 @@ def check_fixes(fixes: pd.DataFrame, ground: Ground, swapped: tuple[NDArray, NDA
     turned = ground.in_area(*swapped)
     if turned.mean() > 0.5 > ground.in_area(x, y).mean():
         raise StudyError(
-            f"{_count(far.size, 'fix', 'fixes')} outside the study area, but inside it with x and y exchanged: "
+            f"{counted(far.size, 'fix', 'fixes')} outside the study area, but inside it with x and y exchanged: "
             "exchange [fixes] x and y in the study file."
         )
     raise StudyError(_where(fixes, far, ground, x, y))
@@ -98,9 +96,9 @@ def _where(fixes: pd.DataFrame, far: NDArray, ground: Ground, x: NDArray, y: NDA
     told = []
     for what, which in parts.items():
         if which.any():
-            lines = fixes.iloc[far[which]]
+            lines = fixes.iloc[far[which]].sort_values(["file", "row"])
             rows = first_few(f"{f} line {r}" for f, r in zip(lines["file"], lines["row"], strict=True))
-            told.append(f"{_count(int(which.sum()), 'fix', 'fixes')} {what} ({rows})")
+            told.append(f"{counted(int(which.sum()), 'fix', 'fixes')} {what} ({rows})")
     return (
         f"{'; '.join(told)}, by more than {_SDS:.0f} standard deviations of their error; mend or take out these rows, "
         "widen the area, or give the location error by [fixes] error."
@@ -146,7 +144,7 @@ def check_resolution(fixes: pd.DataFrame, grid: Grid) -> list[str]:
     for group, own in fixes.groupby("group"):
         label = f'group "{group}"' if group else "study"
         if len(own) < _FEWEST_FIXES:
-            said.append(f"The {label} has only {_count(len(own), 'fix', 'fixes')}: too few to judge the cell size by.")
+            said.append(f"The {label} has only {counted(len(own), 'fix', 'fixes')}: too few to judge the cell size by.")
             continue
         across_m = 2 * np.quantile(np.hypot(own["x"] - own["x"].median(), own["y"] - own["y"].median()), 0.95)
         cells = across_m / grid.cell_m
@@ -160,7 +158,3 @@ def check_resolution(fixes: pd.DataFrame, grid: Grid) -> list[str]:
         if cells < _BETTER_CELLS:
             said.append(f"{told}: expect localising to be biased by about {bias:.1f} %.")
     return said
-
-
-def _count(n: int, one: str, many: str) -> str:
-    return f"{n} {one if n == 1 else many}"

@@ -77,7 +77,7 @@ def read_study(path: str | Path) -> Study:
     check_size(frame, len(groups))
     in_area, no_go = area_sub_cells(area, frame), _no_go(settings, folder, frame, crs)
     grid = build_grid(frame, crs, in_area & ~no_go)
-    ground = Ground(area, frame, in_area & ~no_go, no_go)
+    ground = Ground(area, grid, in_area & ~no_go, no_go, settings.model.reading)
     outside = check_fixes(fixes, ground, carry(*raw.table[["y", "x"]].to_numpy(dtype=float).T, fixes_crs, crs))
     check_homes(groups, ground, settings.groups.file if settings.groups else "groups")
     layers, said_of_layers = _layers(settings, folder, grid)
@@ -97,8 +97,7 @@ def _reference_systems(settings: StudySettings, raw: RawFixes) -> tuple[pyproj.C
     if settings.fixes.crs is None:
         if degrees:
             raise StudyError(
-                "[fixes] crs: the coordinates look like longitude and latitude; "
-                'say so by crs = "EPSG:4326" in [fixes].'
+                '[fixes] crs: the coordinates look like longitude and latitude; say so by crs = "EPSG:4326" in [fixes].'
             )
         if not given:
             raise StudyError('[study] crs: this is missing; expected a metric system such as "EPSG:32631".')

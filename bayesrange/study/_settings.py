@@ -48,7 +48,9 @@ class KeepSection(Section):
 class FixesSection(Section):
     """`[fixes]`: files and columns of the relocations."""
 
-    file: Name | list[Name] = Field(description="a file, a pattern such as \"collars/*.csv\", a folder, or a list of these")
+    file: Name | list[Name] = Field(
+        description='a file, a pattern such as "collars/*.csv", a folder, or a list of them'
+    )
     animal: Name = Field("animal", description=A_COLUMN)
     tag: Name | None = Field(None, description=A_COLUMN)
     time: Name | list[Name] = Field("time", description="the name of a column in quotes, or a list of two")

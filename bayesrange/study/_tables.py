@@ -87,6 +87,11 @@ def first_few(items: Iterable[object]) -> str:
     return shown if len(items) <= _SHOWN else f"{shown} and {len(items) - _SHOWN} more"
 
 
+def counted(n: int, one: str, many: str) -> str:
+    """A number and its noun: "1 fix", "3 fixes"."""
+    return f"{n} {one if n == 1 else many}"
+
+
 def one_name_each(names: Iterable[str], what: str, name: str) -> None:
     """Refuse two names that differ only by upper case or blanks: one thing would be taken for two."""
     seen: dict[str, str] = {}

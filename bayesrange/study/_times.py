@@ -8,7 +8,7 @@ import pandas as pd
 
 from bayesrange._errors import StudyError
 from bayesrange.study._settings_file import nearest
-from bayesrange.study._tables import first_few
+from bayesrange.study._tables import counted, first_few
 
 _ISO = re.compile(r"\d{4}-\d\d-\d\d(?P<clock>[T ]\d\d:\d\d(:\d\d([.,]\d+)?)?(?P<offset> ?(Z|[+-]\d\d(:?\d\d)?))?)?")
 _EXAMPLE = "expected ISO 8601 such as 2031-03-01T04:00:00+01:00"
@@ -31,8 +31,8 @@ def read_times(texts: pd.Series, zone: str | None, name: str) -> tuple[pd.Series
     naive = np.array([match is not None and match["offset"] is None for match in found], dtype=bool)
     if naive.any() and zone is None:
         raise StudyError(
-            f"{name}, line {texts.index[naive][0]}: the time {texts[naive].iloc[0]} has no offset from UTC; write it as "
-            'in 2031-03-01T04:00:00+01:00, or say the zone by [fixes] zone = "Europe/Oslo".'
+            f"{name}, line {texts.index[naive][0]}: the time {texts[naive].iloc[0]} has no offset from UTC; write it "
+            'as in 2031-03-01T04:00:00+01:00, or say the zone by [fixes] zone = "Europe/Oslo".'
         )
     times = pd.Series(pd.NaT, index=texts.index, dtype="datetime64[ns, UTC]")
     plain = texts.str.replace(",", ".", regex=False)
@@ -41,8 +41,8 @@ def read_times(texts: pd.Series, zone: str | None, name: str) -> tuple[pd.Series
         local = _parsed(plain[naive], texts, name).dt.tz_localize(None)
         times[naive] = _in_zone(local, texts, str(zone), name)
     days = sum(match is not None and match["clock"] is None for match in found)
-    said = [f"{name}: {days} times are a day without a clock time and were read as 00:00."] if days else []
-    return times, said
+    what = counted(days, "time is a day", "times are days")
+    return times, [f"{name}: {what} without a clock time, read as 00:00."] if days else []
 
 
 def _parsed(texts: pd.Series, original: pd.Series, name: str) -> pd.Series:
