@@ -11,12 +11,12 @@ __version__ = "0.1.0"
 
 # Public name: the module that defines it, or that it is.
 _HOMES = {
-    "Run": "bayesrange.report",
+    "Run": "bayesrange.inference",
     "Study": "bayesrange.study",
     "StudyError": "bayesrange._errors",
     "cards": "bayesrange.inference",
     "fit": "bayesrange.inference",
-    "read_run": "bayesrange.report",
+    "open_run": "bayesrange.inference",
     "read_study": "bayesrange.study",
     "report": "bayesrange.report",
 }

@@ -29,6 +29,19 @@ def demo_folder() -> Path:
     return _first_existing("bundled study", _PACKAGE / "demo", _CHECKOUT / "case_studies" / "marram_heath" / "study")
 
 
+def demo_truth() -> Path:
+    """The file that says what is true in the bundled study; in a checkout it lies beside the study's folder.
+
+    Raises:
+        FileNotFoundError: the installation is incomplete.
+    """
+    folder = demo_folder()
+    for file in (folder / "truth.json", folder.parent / "truth.json"):
+        if file.is_file():
+            return file
+    raise FileNotFoundError(f"The truth of the bundled study should be in '{folder}', and it is not there; install bayesrange anew.")
+
+
 def _first_existing(what: str, *folders: Path) -> Path:
     for folder in folders:
         if folder.is_dir():

@@ -8,6 +8,7 @@ import jax
 jax.config.update("jax_enable_x64", True)
 
 from bayesrange.spaceuse._domain import Domain, make_domain  # noqa: E402
+from bayesrange.spaceuse._gibbs import gibbs  # noqa: E402
 from bayesrange.spaceuse._reading import Reading, log_fix_density  # noqa: E402
 from bayesrange.spaceuse._solution import (  # noqa: E402
     NO_STEADY_SCENT,
@@ -18,11 +19,12 @@ from bayesrange.spaceuse._solution import (  # noqa: E402
     Solution,
     SolveError,
 )
+from bayesrange.spaceuse._starts import arrival_scent  # noqa: E402
 from bayesrange.spaceuse._steady_state import SOLVERS, steady_state  # noqa: E402
 from bayesrange.spaceuse._terms import Parameters, Setting, home_distance, solitary_potential  # noqa: E402
 
 __all__ = [
     "Domain", "NOT_CONVERGED", "NOT_FINITE", "NO_STEADY_SCENT", "Parameters", "Reading", "SENTENCES", "SOLVED",
-    "SOLVERS", "Setting", "Solution", "SolveError", "home_distance", "log_fix_density", "make_domain",
+    "SOLVERS", "Setting", "Solution", "SolveError", "arrival_scent", "gibbs", "home_distance", "log_fix_density", "make_domain",
     "solitary_potential", "steady_state",
 ]  # fmt: skip

@@ -14,13 +14,20 @@ from bayesrange.spaceuse._solution import Solution, result_code
 from bayesrange.spaceuse._terms import Parameters, Setting, solitary_potential
 
 
-def gibbs(parameters: Parameters, setting: Setting, coupled: bool = True) -> Solution:
+def gibbs(
+    parameters: Parameters,
+    setting: Setting,
+    coupled: bool = True,
+    start: Float[Array, "groups ny nx"] | None = None,
+) -> Solution:
     """Steady state of the gradient terms.
 
     Args:
         parameters: the terms; `retreat` must be 0 (it is not a gradient: use `flux`).
         setting: area, layers, groups.
         coupled: False where no term uses foreign scent: then the law is explicit.
+        start: foreign scent to begin from [1]; default: that of groups without neighbours. Only for checks that the
+            steady state is the only one.
 
     Returns:
         The solution; differentiable in `parameters` once (reverse mode).
@@ -39,8 +46,8 @@ def gibbs(parameters: Parameters, setting: Setting, coupled: bool = True) -> Sol
         def step(flat: Float[Array, " n"], theta: tuple) -> Float[Array, " n"]:
             return _perceived(flat.reshape(shape), theta)[0].ravel()
 
-        start = step(jnp.zeros(domain.area.size * shape[0]), jax.lax.stop_gradient(theta))
-        flat, found = implicit_fixed_point(step, theta, start)
+        first = jnp.zeros(shape) if start is None else start
+        flat, found = implicit_fixed_point(step, theta, step(first.ravel(), jax.lax.stop_gradient(theta)))
         foreign = flat.reshape(shape)
         law = _law(foreign, theta)
         load = jax.lax.stop_gradient(_perceived(foreign, theta)[1])

@@ -1,0 +1,172 @@
+"""Model cards: which drift terms a model has, their priors, and what to say about them.
+
+A card is a TOML file in `models/`; one of the same name in the study's folder goes first, so that a user copies a
+card, edits it and names it in the study file.
+"""
+
+import tomllib
+from dataclasses import dataclass, field, replace
+from difflib import get_close_matches
+from pathlib import Path
+from typing import Any
+
+from bayesrange._errors import StudyError
+from bayesrange._resources import models_folder
+from bayesrange.inference._priors import Prior, read_prior
+
+TERMS = {"localising": "localising", "avoidance": "avoidance", "retreat": "retreat", "resources": "resource"}
+"""Term → the parameter it brings."""
+
+SCENT_TERMS = ("avoidance", "retreat")
+SIGNED = ("resource",)
+"""Parameters that may be negative; all others are at least 0."""
+
+VARYING = ("localising", "avoidance", "resource")
+"""Parameters that may differ between groups under `pooling = "hierarchical"`."""
+
+_KEYS = {"name", "kind", "title", "terms", "solver", "says", "use_when", "not_when", "priors", "between_groups"} | {
+    "covariate_effect", "references"
+}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Card:
+    """One model: its terms, priors and words."""
+
+    name: str
+    title: str
+    terms: tuple[str, ...]
+    solver: str
+    says: str
+    use_when: str
+    not_when: str
+    priors: dict[str, Prior]
+    between_groups: dict[str, Prior]
+    covariate_effect: Prior
+    references: tuple[str, ...]
+    file: Path
+    kind: str = "range"
+    changed: tuple[str, ...] = field(default=())
+
+    @property
+    def scent(self) -> bool:
+        """Whether a term uses foreign scent."""
+        return any(term in SCENT_TERMS for term in self.terms)
+
+    @property
+    def parameters(self) -> tuple[str, ...]:
+        """Parameters of the card's terms, in the order of the terms."""
+        return tuple(TERMS[term] for term in self.terms)
+
+    def with_priors(self, overrides: dict[str, dict[str, Any]], where: str) -> "Card":
+        """The card with priors of the study file in place of its own.
+
+        Raises:
+            StudyError: a parameter that the card does not have, or a prior that cannot be read.
+        """
+        priors = dict(self.priors)
+        for name, table in overrides.items():
+            if name not in self.priors:
+                near = get_close_matches(name, self.priors, 1)
+                hint = f" Did you mean {near[0]}?" if near else ""
+                raise StudyError(
+                    f"{where}, [model.priors] {name}: the card {self.name} has no such parameter; "
+                    f"it has {', '.join(self.priors)}.{hint}"
+                )
+            priors[name] = read_prior(table, f"{where}, [model.priors] {name}", name not in SIGNED)
+        return replace(self, priors=priors, changed=tuple(overrides))
+
+
+def find_card(name: str, folder: Path | None = None) -> Path:
+    """File of a card: in the study's folder first, then among those that come with the package."""
+    if Path(name).name != name:
+        raise StudyError(f"[model] card: expected the name of a card without a folder, got {name!r}.")
+    places = [place for place in (folder, models_folder()) if place is not None]
+    for place in places:
+        file = place / f"{name}.toml"
+        if file.is_file():
+            return file
+    known = sorted(file.stem for file in models_folder().glob("*.toml"))
+    near = get_close_matches(name, known, 1)
+    hint = f" Did you mean {near[0]}?" if near else ""
+    raise StudyError(
+        f"[model] card: no card called {name!r}; there are {', '.join(known)}, or {name}.toml in the study's folder.{hint}"
+    )
+
+
+def read_card(file: Path) -> Card:
+    """Card from its file.
+
+    Raises:
+        StudyError: one sentence that names the file and the key.
+    """
+    try:
+        table = tomllib.loads(file.read_text(encoding="utf-8"))
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
+        raise StudyError(f"{file.name}: not a TOML file that can be read ({error}).") from error
+    unknown = sorted(set(table) - _KEYS)
+    if unknown:
+        near = get_close_matches(unknown[0], _KEYS, 1)
+        hint = f" Did you mean {near[0]}?" if near else ""
+        raise StudyError(f"{file.name}, {unknown[0]}: a model card has no such key.{hint}")
+    terms = table.get("terms")
+    if not isinstance(terms, list) or not terms or any(term not in TERMS for term in terms):
+        raise StudyError(f"{file.name}, terms: expected a list with some of {', '.join(TERMS)}, got {terms!r}.")
+    if len(set(terms)) < len(terms):
+        raise StudyError(f"{file.name}, terms: each term once, got {terms!r}.")
+    solver = table.get("solver", "gibbs")
+    if solver not in ("gibbs", "flux") or (solver == "gibbs" and "retreat" in terms):
+        raise StudyError(
+            f'{file.name}, solver: expected "flux"{"" if "retreat" in terms else ' or "gibbs"'}, got {solver!r}.'
+        )
+    priors = _read_priors(table.get("priors", {}), file, "priors")
+    wanted = [TERMS[term] for term in terms] + (["over_marking"] if set(terms) & set(SCENT_TERMS) else [])
+    missing = [name for name in wanted if name not in priors]
+    if missing:
+        raise StudyError(
+            f"{file.name}: no prior for {', '.join(missing)}; write [priors.{missing[0]}] with family and numbers."
+        )
+    superfluous = [name for name in priors if name not in wanted]
+    if superfluous:
+        raise StudyError(f"{file.name}, [priors.{superfluous[0]}]: no term of this card has such a parameter.")
+    effect = read_prior(
+        table.get("covariate_effect", {"family": "normal", "mean": 0.0, "sd": 0.5}),
+        f"{file.name}, [covariate_effect]",
+        False,
+    )
+    words = {key: " ".join(str(table.get(key, "")).split()) for key in ("title", "says", "use_when", "not_when")}
+    references = tuple(str(entry.get("text", "")) for entry in table.get("references", []))
+    return Card(
+        name=file.stem, terms=tuple(terms), solver=solver, priors=priors,
+        between_groups=_read_priors(table.get("between_groups", {}), file, "between_groups", positive=True),
+        covariate_effect=effect, references=references, file=file, kind=str(table.get("kind", "range")), **words,
+    )  # fmt: skip
+
+
+def cards(folder: Path | None = None) -> list[Card]:
+    """Every card that comes with the package, then those of the study's folder.
+
+    Args:
+        folder: a study's folder; None for the package's own cards only.
+    """
+    found = [read_card(file) for file in sorted(models_folder().glob("*.toml"))]
+    if folder is not None:
+        own = [file for file in sorted(folder.glob("*.toml")) if _is_card(file)]
+        found += [read_card(file) for file in own]
+    return found
+
+
+def _is_card(file: Path) -> bool:
+    try:
+        return "terms" in tomllib.loads(file.read_text(encoding="utf-8"))
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError):
+        return False
+
+
+def _read_priors(table: Any, file: Path, section: str, positive: bool = False) -> dict[str, Prior]:
+    if not isinstance(table, dict) or any(not isinstance(value, dict) for value in table.values()):
+        raise StudyError(f"{file.name}, [{section}]: expected one table a parameter, such as [{section}.localising].")
+    return {
+        name: read_prior(value, f"{file.name}, [{section}.{name}]", positive or name not in SIGNED)
+        for name, value in table.items()
+    }

@@ -1,0 +1,115 @@
+"""Which cells a fix reads, and with what weights: location error as a fixed quadrature.
+
+The error is integrated by Gauss–Hermite on the bilinear density: 1 node below 0.1 cell, 3 per axis to 1 cell, 5 to 2;
+beyond that by the Gaussian mass of each cell. None of it depends on the parameters, so it is done once.
+"""
+
+from collections.abc import Iterator
+
+import numpy as np
+from scipy.special import ndtr
+
+from bayesrange._errors import StudyError
+from bayesrange.study import Grid
+
+ORDERS = ((0.1, 1), (1.0, 3), (2.0, 5))
+"""Error sd in cells up to which an order serves, and the nodes per axis."""
+
+REACH = 5.0
+"""Error sds beyond which cell masses are left out (less than 1e-6 of the mass)."""
+
+
+def fix_entries(
+    grid: Grid, x: np.ndarray, y: np.ndarray, error_m: np.ndarray, reading: str
+) -> tuple[np.ndarray, np.ndarray]:
+    """Cells and log weights of each fix, padded to the longest.
+
+    Args:
+        grid: the study's cells.
+        x: easting of each fix [m].
+        y: northing [m].
+        error_m: error sd per axis [m]; 0 where the place is known.
+        reading: "bilinear" or "cell".
+
+    Returns:
+        Flat cell index (fixes, entries) and log weight, −inf for padding.
+
+    Raises:
+        StudyError: fixes that read no habitable ground at all, with their count.
+    """
+    order = np.digitize(error_m / grid.cell_m, [limit for limit, _ in ORDERS])
+    pieces: list[tuple[np.ndarray, np.ndarray, np.ndarray]] = []
+    for level, (_, nodes) in enumerate(ORDERS):
+        chosen = np.flatnonzero(order == level)
+        pieces.append(_hermite(grid, chosen, x, y, error_m, nodes, reading))
+    pieces.extend(_cell_masses(grid, np.flatnonzero(order == len(ORDERS)), x, y, error_m))
+    fix = np.concatenate([piece[0] for piece in pieces])
+    cell = np.concatenate([piece[1] for piece in pieces])
+    share = np.concatenate([piece[2] for piece in pieces])
+    return _pad(fix, cell, share, x.size, grid)
+
+
+def _hermite(
+    grid: Grid, chosen: np.ndarray, x: np.ndarray, y: np.ndarray, error_m: np.ndarray, nodes: int, reading: str
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Entries of Gauss–Hermite nodes; nodes off habitable ground carry no density."""
+    at, weight = np.polynomial.hermite_e.hermegauss(nodes)
+    weight = weight / weight.sum()
+    step_x, step_y = (step.ravel() for step in np.meshgrid(at, at))
+    node_weight = np.outer(weight, weight).ravel()
+    fix = np.repeat(chosen, nodes**2)
+    node_x = (x[chosen, None] + error_m[chosen, None] * step_x).ravel()
+    node_y = (y[chosen, None] + error_m[chosen, None] * step_y).ravel()
+    mass = np.tile(node_weight, chosen.size)
+    if nodes > 1:  # a single node is the fix itself, which the study reader has found on habitable ground
+        mass = mass * grid.habitable_at(node_x, node_y)
+    if reading == "cell":
+        rows, columns = grid.cell_of(node_x, node_y)
+        within = (rows >= 0) & (rows < grid.shape[0]) & (columns >= 0) & (columns < grid.shape[1])
+        flat = np.where(within, rows * grid.shape[1] + columns, 0)
+        mass = np.where(within & grid.inside.ravel()[flat], mass, 0.0)
+        return fix, flat, mass
+    rows, columns, corner = grid.bilinear(node_x, node_y)
+    flat = rows * grid.shape[1] + columns
+    return np.repeat(fix, 4), flat.ravel(), (corner * mass[:, None]).ravel()
+
+
+def _cell_masses(
+    grid: Grid, chosen: np.ndarray, x: np.ndarray, y: np.ndarray, error_m: np.ndarray
+) -> Iterator[tuple[np.ndarray, np.ndarray, np.ndarray]]:
+    """Entries of wide errors: the Gaussian mass of each cell, times its habitable share."""
+    half = grid.cell_m / 2
+    for k in chosen:
+        reach = REACH * error_m[k]
+        columns = np.flatnonzero(np.abs(grid.x_m - x[k]) < reach + half)
+        rows = np.flatnonzero(np.abs(grid.y_m - y[k]) < reach + half)
+        along_x, along_y = (
+            ndtr((centre + half - at) / error_m[k]) - ndtr((centre - half - at) / error_m[k])
+            for centre, at in ((grid.x_m[columns], x[k]), (grid.y_m[rows], y[k]))
+        )
+        mass = np.outer(along_y, along_x) * grid.habitable[np.ix_(rows, columns)]
+        flat = rows[:, None] * grid.shape[1] + columns[None, :]
+        yield np.full(mass.size, k), flat.ravel(), mass.ravel()
+
+
+def _pad(fix: np.ndarray, cell: np.ndarray, share: np.ndarray, fixes: int, grid: Grid) -> tuple[np.ndarray, np.ndarray]:
+    """Entries of the same fix and cell merged, in rows of equal length."""
+    kept = share > 0
+    cells = grid.shape[0] * grid.shape[1]
+    key, place = np.unique(fix[kept].astype(np.int64) * cells + cell[kept], return_inverse=True)
+    merged = np.bincount(place, weights=share[kept], minlength=key.size)
+    owner, index = key // cells, key % cells
+    count = np.bincount(owner, minlength=fixes)
+    if (count == 0).any():
+        lost = np.flatnonzero(count == 0)
+        raise StudyError(
+            f"fixes: {lost.size} fix(es) lie where no cell is habitable (the first is number {lost[0] + 1} of those used); "
+            "check them against the area and the no-go layers."
+        )
+    width = int(count.max())
+    slot = np.arange(key.size) - np.repeat(np.cumsum(count) - count, count)
+    padded = np.full((fixes, width), np.argmax(grid.inside.ravel()), dtype=np.int32)
+    log_share = np.full((fixes, width), -np.inf)
+    padded[owner, slot] = index
+    log_share[owner, slot] = np.log(merged)
+    return padded, log_share

@@ -1,0 +1,63 @@
+"""Run folders: where a run goes, what lies in it, and that nothing finished is overwritten."""
+
+import json
+import os
+from pathlib import Path
+from typing import Any
+
+from bayesrange._errors import StudyError
+
+FORMAT = 1
+"""Number of the run folder's format; it changes when a table or a key changes its meaning."""
+
+
+def choose_folder(study_folder: Path, card: str, out: Path | None, again: bool) -> Path:
+    """Folder of a run: `runs/<card>` beside the study, or `out`.
+
+    Args:
+        study_folder: where the study file is.
+        card: name of the model card.
+        out: folder that the user asked for.
+        again: make a new folder (`-2`, `-3`, …) where a finished run stands.
+
+    Raises:
+        StudyError: a finished run, or something that is no run, is there already.
+    """
+    folder = out or study_folder / "runs" / card
+    if again:
+        number, base = 1, folder
+        while folder.exists():
+            number += 1
+            folder = base.with_name(f"{base.name}-{number}")
+        return folder
+    if (folder / "run.json").exists():
+        raise StudyError(
+            f"{folder}: a finished run is here and is never overwritten; add --again for a new one, or --out with another folder."
+        )
+    if folder.exists() and not folder.is_dir():
+        raise StudyError(
+            f"{folder}: expected a folder to write the run into, and a file is there; choose another with --out."
+        )
+    if folder.exists() and any(folder.iterdir()) and not (folder / "checkpoints").is_dir():
+        raise StudyError(f"{folder}: this folder holds other things than a run; choose another with --out.")
+    return folder
+
+
+def write_atomically(path: Path, content: bytes) -> None:
+    """Write a file so that it is there whole or not at all."""
+    partial = path.with_name(f".{path.name}.{os.getpid()}")
+    try:
+        with partial.open("wb") as file:
+            file.write(content)
+            file.flush()
+            os.fsync(file.fileno())
+        os.replace(partial, path)
+    except BaseException:
+        partial.unlink(missing_ok=True)
+        raise
+
+
+def write_json(path: Path, content: dict[str, Any]) -> None:
+    """Write JSON, readable and whole."""
+    text = json.dumps(content, indent=2, ensure_ascii=False, allow_nan=False)
+    write_atomically(path, (text + "\n").encode())

@@ -1,0 +1,228 @@
+"""The compiled functions of a fit: log-density, sampler, and what is derived from each draw.
+
+Positions are flat vectors on the unconstrained space. The sampler moves in w, z = mode + L w, with L from the
+curvature at the mode, so that NUTS meets a target near a standard normal from its first draw. Data, mode and L are
+arguments of every compiled function: another data set of the same shape compiles nothing.
+"""
+
+from collections.abc import Callable
+from functools import cached_property, partial
+from typing import Any, NamedTuple
+
+import jax
+import jax.numpy as jnp
+import numpy as np
+import numpyro
+from jax.flatten_util import ravel_pytree
+from jaxtyping import Array, Float, Int
+from numpyro.infer.hmc import hmc
+from numpyro.infer.util import constrain_fn, potential_energy, unconstrain_fn
+
+from bayesrange.inference._derived import ISOPLETHS, isopleth_levels, overlaps, rank_mass
+from bayesrange.inference._priors import POSITIVE
+from bayesrange.inference._range_data import RangeData, RangeSpec
+from bayesrange.inference._range_model import log_likelihood, range_model, sample_parameters
+from bayesrange.spaceuse import SOLVED, Parameters, arrival_scent, gibbs
+
+MAX_TREE_DEPTH = 10
+
+
+class Whitening(NamedTuple):
+    """z = mode + scale @ w."""
+
+    mode: Float[Array, " d"]
+    scale: Float[Array, "d d"]
+
+
+class Recorded(NamedTuple):
+    """What is kept of each transition of a chunk; row i belongs to draw i.
+
+    `before` (in w) and `key` are the state before the transition, so that a divergent one can be run again; `position` is
+    z after it.
+    """
+
+    before: Float[Array, "n d"]
+    key: Array
+    position: Float[Array, "n d"]
+    diverging: Array
+    energy: Float[Array, " n"]
+    potential: Float[Array, " n"]
+    gradients: Int[Array, " n"]
+    accept: Float[Array, " n"]
+    step_size: Float[Array, " n"]
+
+
+class Program:
+    """Compiled functions of one model; build once a process.
+
+    Args:
+        spec: the static part of the model.
+        data: any data of the right shapes; used to find the layout of the parameters.
+        warmup: adaptation steps.
+        target_accept: target of the step size adaptation.
+        chunk: most transitions in one call of `advance`.
+    """
+
+    def __init__(self, spec: RangeSpec, data: RangeData, warmup: int, target_accept: float, chunk: int) -> None:
+        self.spec, self.warmup, self.target_accept, self.chunk = spec, warmup, target_accept, chunk
+        self.model = partial(range_model, spec)
+        self.prior = partial(sample_parameters, spec)
+        flat, self._unravel = ravel_pytree(self.first_guess(data))
+        self.dimension = flat.size
+        self._init_kernel, self._sample_kernel = hmc(potential_fn_gen=self.potential_in_w, algo="NUTS")
+
+    def first_guess(self, data: RangeData) -> dict[str, Array]:
+        """Unconstrained parameters at prior centres and first homes; no differences between groups."""
+        trace = numpyro.handlers.trace(numpyro.handlers.seed(self.prior, 0)).get_trace(data)
+        sites = {name: site["value"] for name, site in trace.items() if site["type"] == "sample"}
+        guess = {name: self._centre(name, value, data) for name, value in sites.items()}
+        return unconstrain_fn(self.prior, (data,), {}, guess)
+
+    def _centre(self, name: str, value: Array, data: RangeData) -> Array:
+        if name in ("home_x", "home_y"):
+            axis = ("home_x", "home_y").index(name)
+            low, high = data.box[axis], data.box[axis + 2]
+            margin = 1e-3 * (high - low)
+            return jnp.clip(jnp.asarray(data.home)[jnp.array(self.spec.estimated), axis], low + margin, high - margin)
+        if name == "group_correlation":
+            return jnp.eye(value.shape[0])
+        if name.endswith("_spread"):
+            return jnp.full_like(value, 0.2)
+        parameter = name.removesuffix("_population")
+        if parameter in data.priors:
+            family, numbers = self.spec.family(parameter), data.priors[parameter]
+            if family in POSITIVE:
+                return jnp.full_like(value, numbers[0] * (1.0 if family == "log-normal" else 0.3))
+            return jnp.full_like(value, numbers.mean() if family == "uniform" else numbers[0])
+        return jnp.zeros_like(value)
+
+    # --- log-density -------------------------------------------------------------------------------------------
+
+    def _potential(self, z: Float[Array, " d"], data: RangeData) -> Float[Array, ""]:
+        """Negative log posterior density on the unconstrained space."""
+        return potential_energy(self.model, (data,), {}, self._unravel(z))
+
+    def potential_in_w(self, data: RangeData, whitening: Whitening) -> Callable[[dict[str, Array]], Array]:
+        """Log-density in the sampler's coordinates, as NumPyro's kernel wants it."""
+        return lambda w: self._potential(whitening.mode + whitening.scale @ w["w"], data)
+
+    def value_and_gradient(self, z: Float[Array, " d"], data: RangeData) -> tuple[Array, Array]:
+        """Potential and its gradient; the same compiled program as `begin`, to spare a compilation."""
+        plain = Whitening(jnp.zeros(self.dimension), jnp.eye(self.dimension))
+        state = self.begin(z, jax.random.key_data(jax.random.key(0)), data, plain)
+        return state.potential_energy, state.z_grad["w"]
+
+    # --- sampler -----------------------------------------------------------------------------------------------
+
+    @cached_property
+    def begin(self) -> Callable[..., Any]:
+        """(w, key, data, whitening) → sampler state before the first transition."""
+
+        def begin(w: Array, key: Array, data: RangeData, whitening: Whitening) -> Any:
+            return self._init_kernel(
+                {"w": w}, self.warmup, step_size=0.5, inverse_mass_matrix=jnp.ones(self.dimension), dense_mass=False,
+                target_accept_prob=self.target_accept, max_tree_depth=MAX_TREE_DEPTH,
+                model_args=(data, whitening), rng_key=key,
+            )  # fmt: skip
+
+        return jax.jit(begin)
+
+    @cached_property
+    def advance(self) -> Callable[..., tuple[Any, Recorded]]:
+        """(state, count, data, whitening) → state after `count` ≤ chunk transitions, and their record."""
+
+        def advance(state: Any, count: Array, data: RangeData, whitening: Whitening) -> tuple[Any, Recorded]:
+            places = jnp.zeros((self.chunk, self.dimension))
+            empty = Recorded(
+                places, jnp.zeros((self.chunk, 2), jnp.uint32), places, jnp.zeros(self.chunk, bool), *(jnp.zeros(self.chunk),) * 2,
+                jnp.zeros(self.chunk, int), *(jnp.zeros(self.chunk),) * 2,
+            )  # fmt: skip
+
+            def one(i: Array, carry: tuple[Any, Recorded]) -> tuple[Any, Recorded]:
+                last, kept = carry
+                state = self._sample_kernel(last, model_args=(data, whitening))
+                row = Recorded(
+                    last.z["w"], last.rng_key,
+                    whitening.mode + whitening.scale @ state.z["w"], state.diverging, state.energy, state.potential_energy,
+                    state.num_steps, state.accept_prob, state.adapt_state.step_size,
+                )  # fmt: skip
+                return state, jax.tree.map(lambda column, value: column.at[i].set(value), kept, row)
+
+            return jax.lax.fori_loop(0, count, one, (state, empty))
+
+        return jax.jit(advance)
+
+    def ready(self, data: RangeData, whitening: Whitening) -> None:
+        """Trace `begin`: NumPyro's transition kernel learns its adaptation schedule there. Needed before `advance`."""
+        jax.eval_shape(self.begin, jnp.zeros(self.dimension), jax.random.key_data(jax.random.key(0)), data, whitening)
+
+    # --- derived quantities ------------------------------------------------------------------------------------
+
+    @cached_property
+    def constrain(self) -> Callable[..., dict[str, Array]]:
+        """(z draws, data) → constrained parameters by site, deterministic sites included."""
+
+        def one(z: Array, data: RangeData) -> dict[str, Array]:
+            return constrain_fn(self.prior, (data,), {}, self._unravel(z), return_deterministic=True)
+
+        return jax.jit(jax.vmap(one, in_axes=(0, None)))
+
+    @cached_property
+    def prior_draws(self) -> Callable[..., dict[str, Array]]:
+        """(keys, data) → draws from the prior by site."""
+
+        def one(key: Array, data: RangeData) -> dict[str, Array]:
+            trace = numpyro.handlers.trace(numpyro.handlers.seed(self.prior, key)).get_trace(data)
+            return {name: site["value"] for name, site in trace.items() if site["type"] in ("sample", "deterministic")}
+
+        return jax.jit(jax.vmap(one, in_axes=(0, None)))
+
+    @cached_property
+    def other_state(self) -> Callable[..., Array]:
+        """(z, data) → whether groups that arrive one by one, in either order, settle in another steady state."""
+
+        def other_state(z: Array, data: RangeData) -> Array:
+            parameters = self.parameters(z, data)
+            usual = gibbs(parameters, data.setting)
+            order = range(len(self.spec.groups))
+            differs = jnp.zeros((), bool)
+            for arrival in (order, order[::-1]):
+                other = gibbs(parameters, data.setting, start=arrival_scent(parameters, data.setting, arrival))
+                gap = jnp.max(jnp.abs(other.density - usual.density)) / jnp.max(usual.density)
+                differs = differs | ((other.result == SOLVED) & (gap > 1e-5))
+            return differs
+
+        return jax.jit(other_state)
+
+    def parameters(self, z: Float[Array, " d"], data: RangeData) -> Parameters:
+        """Solver parameters of one unconstrained position."""
+        values = constrain_fn(self.prior, (data,), {}, self._unravel(z))
+        return numpyro.handlers.substitute(self.prior, values)(data)
+
+    @cached_property
+    def derive(self) -> Callable[..., dict[str, Array]]:
+        """(z, data) → what the run folder keeps of one draw: log-likelihood per fix, density, isopleths, overlaps."""
+
+        def derive(z: Array, data: RangeData) -> dict[str, Array]:
+            parameters = self.parameters(z, data)
+            terms, solution = log_likelihood(self.spec, data, parameters)
+            area = data.setting.domain.area
+            density = solution.density
+            denser, own = rank_mass(density, area)
+            inside, areas = isopleth_levels(denser, own, area, jnp.array(ISOPLETHS) / 100)
+            return {
+                "log_likelihood": terms.astype(jnp.float32), "density": density, "inside": inside, "area_km2": areas,
+                "overlap": overlaps(density, area), "solved": solution.result == SOLVED,
+            }  # fmt: skip
+
+        return jax.jit(derive)
+
+
+def as_arrays(data: RangeData) -> RangeData:
+    """The same data on the device, once, so that calls don't copy."""
+    return jax.tree.map(jnp.asarray, data)
+
+
+def to_numpy(tree: Any) -> Any:
+    """The same pytree with NumPy leaves."""
+    return jax.tree.map(np.asarray, tree)

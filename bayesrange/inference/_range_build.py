@@ -1,0 +1,183 @@
+"""From a study and a card to the arrays of a range model."""
+
+import numpy as np
+
+from bayesrange._errors import StudyError
+from bayesrange.inference._cards import VARYING, Card
+from bayesrange.inference._fix_entries import fix_entries
+from bayesrange.inference._priors import Prior
+from bayesrange.inference._range_data import RangeData, RangeSpec
+from bayesrange.inference._scales import Scales
+from bayesrange.spaceuse import Reading, Setting, make_domain
+from bayesrange.study import Study
+
+BUCKET = 256
+"""Fixes are padded to a multiple of this, so that data sets of nearly the same size share one compiled program."""
+
+
+def make_spec(study: Study, card: Card) -> RangeSpec:
+    """The static part, from a study and a card.
+
+    Raises:
+        StudyError: the card and the study do not fit together.
+    """
+    model, where = study.settings.model, study.path.name
+    _check_card(study, card)
+    needs_home = "localising" in card.terms
+    hierarchical = model.pooling == "hierarchical"
+    if model.covariates and not hierarchical:
+        raise StudyError(f'{where}, [model] covariates: covariates of groups need pooling = "hierarchical".')
+    if hierarchical and len(study.groups) < 3:
+        raise StudyError(
+            f'{where}, [model] pooling: "hierarchical" needs at least 3 groups, the study has {len(study.groups)}; use "shared".'
+        )
+    unknown_home = study.groups[["x", "y"]].isna().any(axis=1).to_numpy()
+    names = card.parameters + (("over_marking",) if model.over_marking else ())
+    return RangeSpec(
+        parameters=card.parameters,
+        families=tuple((name, card.priors[name].family) for name in names),
+        varying=tuple(name for name in card.parameters if name in VARYING) if hierarchical else (),
+        solver=card.solver,
+        coupled=card.scent and len(study.groups) > 1,
+        over_marking=model.over_marking,
+        layers=tuple(model.layers) if "resources" in card.terms else (),
+        groups=tuple(study.groups["group"]),
+        covariates=tuple(name for name, _ in code_covariates(study)),
+        estimated=tuple(int(i) for i in np.flatnonzero(unknown_home)) if needs_home else (),
+    )
+
+
+def _check_card(study: Study, card: Card) -> None:
+    model, where = study.settings.model, study.path.name
+    if card.kind != "range":
+        raise StudyError(f'{where}, [model] card: {card.name} is a card of kind "{card.kind}", which is not built yet.')
+    if model.pooling == "individual":
+        raise StudyError(
+            f'{where}, [model] pooling: range cards take "shared" or "hierarchical"; "individual" is for memory cards.'
+        )
+    if not len(study.groups):
+        raise StudyError(f"{where}: range cards need groups; add a [groups] table, or a group column to the fixes.")
+    if "resources" in card.terms and not model.layers:
+        raise StudyError(
+            f'{where}, [model] layers: the card {card.name} responds to layers; list at least one, such as layers = ["forage"].'
+        )
+    if model.layers and "resources" not in card.terms:
+        raise StudyError(
+            f"{where}, [model] layers: the card {card.name} has no resource term; take the list out or choose another card."
+        )
+    if model.over_marking and not card.scent:
+        raise StudyError(f"{where}, [model] over_marking: the card {card.name} has no term that uses scent.")
+    if card.scent and len(study.groups) < 2:
+        raise StudyError(
+            f"{where}, [model] card: {card.name} is about neighbours, and the study has one group; use localising or resources."
+        )
+
+
+def code_covariates(study: Study) -> list[tuple[str, np.ndarray]]:
+    """Covariates of the groups as numbers: (name, value per group), each with mean 0 over the groups.
+
+    A number is standardised; a text column becomes one contrast for each level but the first in alphabetical order.
+
+    Raises:
+        StudyError: a column that is missing, empty in places, or constant.
+    """
+    coded: list[tuple[str, np.ndarray]] = []
+    for name in study.settings.model.covariates:
+        where = f"{study.path.name}, [model] covariates"
+        if name not in study.groups.columns or name in ("group", "x", "y"):
+            raise StudyError(f"{where}: the groups table has no column {name!r} that could be a covariate.")
+        column = study.groups[name]
+        if column.isna().any():
+            raise StudyError(
+                f"{where}: column {name!r} of the groups table is empty for group {study.groups['group'][column.isna().idxmax()]!r}."
+            )
+        if column.nunique() < 2:
+            raise StudyError(f"{where}: column {name!r} of the groups table has the same value for every group.")
+        if column.dtype.kind in "iuf":
+            values = column.to_numpy(float)
+            coded.append((name, (values - values.mean()) / values.std()))
+            continue
+        for level in sorted(column.astype(str).unique())[1:]:
+            indicator = (column.astype(str) == level).to_numpy(float)
+            coded.append((f"{name}={level}", indicator - indicator.mean()))
+    return coded
+
+
+def make_setting(study: Study, scales: Scales, spec: RangeSpec) -> Setting:
+    """Area, standardised layers and marking of a study, in the given scales (NumPy leaves)."""
+    grid = study.grid
+    area = grid.habitable * (grid.cell_m / 1000) ** 2
+    domain = make_domain(grid.x_m / 1000, grid.y_m / 1000, area, scales.perception_m / 1000)
+    layers = np.zeros((len(spec.layers), *grid.shape))
+    for k, name in enumerate(spec.layers):
+        scale = scales.layers[name]
+        layers[k] = np.where(grid.inside, (study.layers[name].values - scale.mean) / scale.sd, 0.0)
+    marking = study.groups["animals"].to_numpy(float) * scales.a0_km2
+    return Setting(domain, layers, marking, np.asarray(scales.eps_m / 1000))
+
+
+def make_data(study: Study, card: Card, spec: RangeSpec, scales: Scales, weight: np.ndarray) -> RangeData:
+    """The numbers of a range model.
+
+    Args:
+        study: what the user brought.
+        card: with the study's own priors.
+        spec: from `make_spec`.
+        scales: frozen scales.
+        weight: weight of each fix.
+    """
+    grid, fixes, groups = study.grid, study.fixes, study.groups
+    x, y = fixes["x"].to_numpy(float), fixes["y"].to_numpy(float)
+    cell, log_share = fix_entries(grid, x, y, fixes["error_m"].to_numpy(float), study.settings.model.reading)
+    owner = fixes["group"].map({name: i for i, name in enumerate(groups["group"])}).to_numpy(np.int32)
+    share = grid.basis_share if study.settings.model.reading == "bilinear" else grid.habitable
+    padding = -len(fixes) % BUCKET
+    reading = Reading(
+        np.concatenate([cell, np.repeat(cell[:1], padding, axis=0)]),
+        np.concatenate([log_share, np.repeat(log_share[:1], padding, axis=0)]),
+        np.concatenate([owner, np.repeat(owner[:1], padding)]),
+        share * (grid.cell_m / 1000) ** 2,
+    )
+    rows, columns = np.nonzero(grid.inside)
+    half = grid.cell_m / 2
+    box = [
+        grid.x_m[columns.min()] - half,
+        grid.y_m[rows.min()] - half,
+        grid.x_m[columns.max()] + half,
+        grid.y_m[rows.max()] + half,
+    ]
+    coded = [values for _, values in code_covariates(study)]
+    return RangeData(
+        setting=make_setting(study, scales, spec),
+        reading=reading,
+        weight=np.concatenate([weight, np.zeros(padding)]),
+        home=first_homes(study) / 1000,
+        box=np.array(box) / 1000,
+        priors={name: np.array(card.priors[name].scaled(scales.home_length_km).numbers) for name, _ in spec.families},
+        spread_scale=np.array([_spread(card, name) for name in spec.varying for _ in range(_copies(name, spec))]),
+        covariates=np.stack(coded, axis=1) if coded else np.zeros((len(groups), 0)),
+        effect_sd=np.asarray(card.covariate_effect.numbers[1]),
+    )
+
+
+def first_homes(study: Study) -> np.ndarray:
+    """Home centres [m]: those given, else the mean of the group's fixes."""
+    homes = study.groups[["x", "y"]].to_numpy(float)
+    means = study.fixes.groupby("group")[["x", "y"]].mean()
+    for i, name in enumerate(study.groups["group"]):
+        if np.isnan(homes[i]).any():
+            homes[i] = means.loc[name].to_numpy()
+    return homes
+
+
+def _copies(name: str, spec: RangeSpec) -> int:
+    return len(spec.layers) if name == "resource" else 1
+
+
+def _spread(card: Card, name: str) -> float:
+    prior = card.between_groups.get(name, Prior("half-normal", (0.5,)))
+    if prior.family != "half-normal":
+        raise StudyError(
+            f"{card.file.name}, [between_groups.{name}]: the spread between groups takes a half-normal, got {prior.family}."
+        )
+    return prior.numbers[0]

@@ -1,0 +1,79 @@
+"""What turns a study's own units into the numbers that parameters refer to; made once, at the fit.
+
+Forecasts, scores and plans take the fitted study's `Scales`, never their own: a wider polygon, one group less or a
+changed layer must not silently rescale a parameter.
+"""
+
+from dataclasses import asdict, dataclass
+from typing import Any
+
+import numpy as np
+
+from bayesrange._errors import StudyError
+from bayesrange.study import Study
+
+
+@dataclass(frozen=True)
+class LayerScale:
+    """Mean and sd of a layer over the habitable area of the fitted study, in the layer's unit."""
+
+    mean: float
+    sd: float
+    unit: str
+
+
+@dataclass(frozen=True)
+class Scales:
+    """The frozen scales of a fit.
+
+    Attributes:
+        a0_km2: A₀, habitable area per marking animal [km²].
+        home_length_km: L₀ = √(habitable area / groups) = √(A₀ × mean animals per group) [km].
+        perception_m: sd of the Gaussian over which scent is perceived [m].
+        eps_m: softening of the distance to the home centre, half a cell [m].
+        layers: scale of each layer that the model uses, in the model's order.
+    """
+
+    a0_km2: float
+    home_length_km: float
+    perception_m: float
+    eps_m: float
+    layers: dict[str, LayerScale]
+
+    def as_json(self) -> dict[str, Any]:
+        """Plain numbers for run.json."""
+        return asdict(self)
+
+    @classmethod
+    def from_json(cls, table: dict[str, Any]) -> "Scales":
+        """The scales that a run.json holds."""
+        layers = {name: LayerScale(**scale) for name, scale in table["layers"].items()}
+        return cls(**{**table, "layers": layers})
+
+
+def make_scales(study: Study, layers: list[str]) -> Scales:
+    """Scales of a study, from its grid, groups and layers; never from its fixes.
+
+    Raises:
+        StudyError: a layer that the study lacks, or one without variation.
+    """
+    grid = study.grid
+    area = grid.habitable_km2
+    animals = float(study.groups["animals"].sum())
+    scales = {}
+    for name in layers:
+        if name not in study.layers:
+            known = ", ".join(study.layers) or "none"
+            raise StudyError(f"{study.path.name}, [model] layers: no layer called {name!r}; the study has {known}.")
+        layer = study.layers[name]
+        values, weight = layer.values[grid.inside], grid.habitable[grid.inside]
+        mean = float(np.average(values, weights=weight))
+        sd = float(np.sqrt(np.average((values - mean) ** 2, weights=weight)))
+        if not sd > 1e-12 * max(abs(mean), 1e-300):
+            raise StudyError(
+                f"{layer.file}: layer {name!r} has the same value everywhere in the area, so no response to it can be told; "
+                "leave it out of [model] layers."
+            )
+        scales[name] = LayerScale(mean, sd, layer.unit)
+    perception = study.settings.model.perception_m or 2 * grid.cell_m
+    return Scales(area / animals, float(np.sqrt(area / len(study.groups))), perception, grid.cell_m / 2, scales)
