@@ -7,6 +7,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 from rich.console import Console
+from rich.markup import escape
 from rich.table import Table
 from scipy.stats import binom
 
@@ -70,7 +71,7 @@ def compare_with_truth(run: Run) -> None:
     for row in table.itertuples():
         interval = f"{row.lower:.3g} to {row.upper:.3g}"
         screen.add_row(
-            row.parameter.replace("[", "\\["), row.unit, f"{row.truth:.3g}", f"{row.median:.3g}", interval, f"{row.z:+.1f}",
+            escape(row.parameter), row.unit, f"{row.truth:.3g}", f"{row.median:.3g}", interval, f"{row.z:+.1f}",
             "yes" if row.inside else "no",
         )  # fmt: skip
     console.print(screen)
@@ -78,6 +79,7 @@ def compare_with_truth(run: Run) -> None:
     low, high = binom.interval(0.95, count, 0.9)
     far = int((np.abs(table["z"]) > TOO_FAR).sum())
     console.print(
-        f"{int(table['inside'].sum())} of {count} 90 % intervals hold the truth; by chance {int(low)} to {int(high)} would (95 % of "
+        f"{int(table['inside'].sum())} of {count} 90 % intervals hold the truth; by chance {int(low)} to {int(high)} "
+        "would (95 % of "
         f"data sets). {'No parameter is' if not far else f'{far} parameter(s) are'} beyond |z| = {TOO_FAR}."
     )

@@ -39,7 +39,9 @@ def demo_truth() -> Path:
     for file in (folder / "truth.json", folder.parent / "truth.json"):
         if file.is_file():
             return file
-    raise FileNotFoundError(f"The truth of the bundled study should be in '{folder}', and it is not there; install bayesrange anew.")
+    raise FileNotFoundError(
+        f"The truth of the bundled study should be in '{folder}', and it is not there; install bayesrange anew."
+    )
 
 
 def _first_existing(what: str, *folders: Path) -> Path:

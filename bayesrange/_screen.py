@@ -65,8 +65,10 @@ class FitView:
             f"[bold]{escape(study.settings.study.name)}[/bold]: {escape(prepared.card.title)} ({prepared.card.name})"
         )
         self.console.print(
-            f"{len(study.fixes):,} fixes of {study.fixes['animal'].nunique()} animals in {len(study.groups)} groups{failed}; "
-            f"{nx} × {ny} cells of {study.grid.cell_m:g} m, {study.grid.habitable_km2:.1f} km²; {escape(study.crs.to_string())}"
+            f"{len(study.fixes):,} fixes of {study.fixes['animal'].nunique()} animals in {len(study.groups)} "
+            f"groups{failed}; "
+            f"{nx} × {ny} cells of {study.grid.cell_m:g} m, {study.grid.habitable_km2:.1f} km²; "
+            f"{escape(study.crs.to_string())}"
         )
         if prepared.weights is not None:
             self.console.print(f"{prepared.weights.sentence}, because an animal's next fix is near its last.")
@@ -164,11 +166,13 @@ def show_cards(name: str | None, study: Path | None) -> None:
     card = read_card(find_card(name, folder))
     console.print(f"[bold]{escape(card.name)}[/bold]: {escape(card.title)}\n{escape(card.says)}")
     console.print(
-        f"Use when: {escape(card.use_when)}\nNot when: {escape(card.not_when)}\nTerms: {', '.join(card.terms)}; solver: {card.solver}"
+        f"Use when: {escape(card.use_when)}\nNot when: {escape(card.not_when)}\nTerms: {', '.join(card.terms)}; "
+        f"solver: {card.solver}"
     )
     for parameter, prior in card.priors.items():
         console.print(
-            f"{parameter}: {prior.in_words()}{' × ' + prior.scaled_by if prior.scaled_by else ''}. {escape(prior.reason)}"
+            f"{parameter}: {prior.in_words()}{' × ' + prior.scaled_by if prior.scaled_by else ''}. "
+            f"{escape(prior.reason)}"
         )
     for reference in card.references:
         console.print(escape(reference))

@@ -164,13 +164,15 @@ def build_tree(
     fixes, groups, grid = study.fixes, study.groups, study.grid
     known = [i not in spec.estimated for i in range(len(groups))]
     places = {"x": grid.x_m, "y": grid.y_m}
+    layers = np.array([study.layers[name].values for name in spec.layers])
     constant = xr.Dataset(
         {
             "weight": ("fix", weight), "error_m": ("fix", fixes["error_m"].to_numpy(float)),
-            "group_of_fix": ("fix", fixes["group"].to_numpy(object).astype(str)), "animal": ("fix", fixes["animal"].to_numpy(object).astype(str)),
+            "group_of_fix": ("fix", fixes["group"].to_numpy(object).astype(str)),
+            "animal": ("fix", fixes["animal"].to_numpy(object).astype(str)),
             "time": ("fix", fixes["time"].dt.tz_convert("UTC").dt.tz_localize(None).to_numpy("datetime64[ns]")),
             "habitable": (("y", "x"), grid.habitable),
-            "layer_value": (("layer", "y", "x"), np.array([study.layers[name].values for name in spec.layers]).reshape(-1, *grid.shape)),
+            "layer_value": (("layer", "y", "x"), layers.reshape(-1, *grid.shape)),
             "home_x": ("group", np.where(known, groups["x"].to_numpy(float), np.nan)),
             "home_y": ("group", np.where(known, groups["y"].to_numpy(float), np.nan)),
             "animals": ("group", groups["animals"].to_numpy(int)),

@@ -90,7 +90,8 @@ def find_card(name: str, folder: Path | None = None) -> Path:
     near = get_close_matches(name, known, 1)
     hint = f" Did you mean {near[0]}?" if near else ""
     raise StudyError(
-        f"[model] card: no card called {name!r}; there are {', '.join(known)}, or {name}.toml in the study's folder.{hint}"
+        f"[model] card: no card called {name!r}; there are {', '.join(known)}, or {name}.toml in the study's "
+        f"folder.{hint}"
     )
 
 

@@ -83,11 +83,13 @@ def _problems(
     if not rhat < RHAT:
         worst = table.loc[table["rhat"].where(~individual).idxmax(), "parameter"]
         said.append(
-            f"R-hat reaches {rhat:.3f} (wanted below {RHAT}; worst parameter {worst}): the chains disagree; raise warmup and draws."
+            f"R-hat reaches {rhat:.3f} (wanted below {RHAT}; worst parameter {worst}): the chains disagree; raise "
+            "warmup and draws."
         )
     if individual.any() and not table["rhat"][individual].max() < RHAT_INDIVIDUAL:
         said.append(
-            f"R-hat of a single group reaches {table['rhat'][individual].max():.3f} (wanted below {RHAT_INDIVIDUAL}); raise draws."
+            f"R-hat of a single group reaches {table['rhat'][individual].max():.3f} (wanted below {RHAT_INDIVIDUAL}); "
+            "raise draws."
         )
     wanted = ESS_PER_CHAIN * chains
     if not min(bulk, tail) >= wanted:
@@ -96,20 +98,24 @@ def _problems(
         )
     if divergences:
         said.append(
-            f"{divergences} transition(s) diverged: part of the posterior may be missing; raise target_accept towards 0.99, or look at "
+            f"{divergences} transition(s) diverged: part of the posterior may be missing; raise target_accept towards "
+            "0.99, or look at "
             "tighter priors for the parameters with the widest intervals."
         )
     if failed:
         said.append(
-            f"{failed} of the divergences ended where no steady state was found; the posterior reaches where groups' coupling is too strong."
+            f"{failed} of the divergences ended where no steady state was found; the posterior reaches where groups' "
+            "coupling is too strong."
         )
     if two_states:
         said.append(
-            f"At {two_states} of the checked draws another start led to another steady state; raise perception_m or give home centres."
+            f"At {two_states} of the checked draws another start led to another steady state; raise perception_m or "
+            "give home centres."
         )
     if not bfmi >= BFMI:
         said.append(
-            f"Energy BFMI is {bfmi:.2f} (wanted at least {BFMI}): the sampler moves slowly between energies; raise warmup."
+            f"Energy BFMI is {bfmi:.2f} (wanted at least {BFMI}): the sampler moves slowly between energies; raise "
+            "warmup."
         )
     if deepest:
         said.append(f"{deepest} transition(s) reached the deepest tree; raise warmup so that the step size can adapt.")

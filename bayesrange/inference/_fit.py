@@ -55,7 +55,7 @@ def fit(
 ) -> Run:
     """Sample the posterior of a study and write a run folder.
 
-    A fit that was interrupted goes on where it stopped when called again with the same study. Call `report.write` on the
+    A fit that was interrupted goes on where it stopped when called again with the same study. Call `report` on the
     run's folder for tables of ranges, maps and the page (the command `bayesrange fit` does).
 
     Args:
@@ -122,7 +122,8 @@ def prepare(study: Study) -> Prepared:
     warnings = list(study.warnings) + (list(weights.warnings) if weights else [])
     if weights is None:
         warnings.append(
-            "Autocorrelation is ignored, as the study file asks: intervals are too narrow where fixes follow one another quickly."
+            "Autocorrelation is ignored, as the study file asks: intervals are too narrow where fixes follow one "
+            "another quickly."
         )
     return Prepared(study, card, spec, scales, weights, task, inputs, warnings)
 
@@ -142,7 +143,8 @@ def _refuse_changes(checkpoints: Path, prepared: Prepared) -> None:
     old, new = before["inputs"], prepared.inputs
     changed = sorted(name for name in old.keys() | new.keys() if old.get(name) != new.get(name))
     raise StudyError(
-        f"{checkpoints.parent}: an unfinished run is here, and since it began {', '.join(changed)} changed; undo the change to go on "
+        f"{checkpoints.parent}: an unfinished run is here, and since it began {', '.join(changed)} changed; undo the "
+        "change to go on "
         "with it, delete the folder, or use --again for a new one."
     )
 
@@ -205,7 +207,7 @@ def _prior_draws(task: Task) -> dict[str, np.ndarray]:
 def _describe(prepared: Prepared, diagnostics: Any, costs: dict[str, Any]) -> dict[str, Any]:
     """run.json."""
     study, card, task = prepared.study, prepared.card, prepared.task
-    settings, weights = study.settings, prepared.weights
+    settings, weights, home_length = study.settings, prepared.weights, prepared.scales.home_length_km
     animals = [] if weights is None else json.loads(weights.table.to_json(orient="records"))
     count = len(study.fixes)
     sentence = (
@@ -213,18 +215,19 @@ def _describe(prepared: Prepared, diagnostics: Any, costs: dict[str, Any]) -> di
     )
     return {
         "format": FORMAT, "name": settings.study.name,
-        "study": {"file": study.path.name, "name": settings.study.name, "sha256": study.hashes.get(study.path.name, "")},
+        "study": {"file": study.path.name, "name": settings.study.name, "sha256": prepared.inputs[study.path.name]},
         "files": prepared.inputs, "crs": study.crs.to_string(), "cell_m": study.grid.cell_m,
         "card": {
             "name": card.name, "title": card.title, "terms": list(card.terms), "solver": card.solver, "says": card.says,
             "use_when": card.use_when, "not_when": card.not_when, "pooling": settings.model.pooling,
-            "priors": {name: prior.scaled(prepared.scales.home_length_km).in_words() for name, prior in card.priors.items()},
+            "priors": {name: prior.scaled(home_length).in_words() for name, prior in card.priors.items()},
             "prior_reasons": {name: prior.reason for name, prior in card.priors.items()},
             "changed_priors": list(card.changed), "references": list(card.references),
         },
         "scales": prepared.scales.as_json(), "reading": settings.model.reading,
         "sampling": {
-            "chains": task.chains, "warmup": task.warmup, "draws": task.draws, "seed": task.seed, "target_accept": task.target_accept,
+            "chains": task.chains, "warmup": task.warmup, "draws": task.draws, "seed": task.seed,
+            "target_accept": task.target_accept,
         },
         "versions": {"bayesrange": bayesrange.__version__, **{name: version(name) for name in LIBRARIES}},
         "finished": datetime.now(UTC).isoformat(timespec="seconds"), "times": costs,

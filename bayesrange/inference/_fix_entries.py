@@ -103,7 +103,8 @@ def _pad(fix: np.ndarray, cell: np.ndarray, share: np.ndarray, fixes: int, grid:
     if (count == 0).any():
         lost = np.flatnonzero(count == 0)
         raise StudyError(
-            f"fixes: {lost.size} fix(es) lie where no cell is habitable (the first is number {lost[0] + 1} of those used); "
+            f"fixes: {lost.size} fix(es) lie where no cell is habitable (the first is number {lost[0] + 1} of those "
+            "used); "
             "check them against the area and the no-go layers."
         )
     width = int(count.max())

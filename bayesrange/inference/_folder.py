@@ -32,7 +32,8 @@ def choose_folder(study_folder: Path, card: str, out: Path | None, again: bool) 
         return folder
     if (folder / "run.json").exists():
         raise StudyError(
-            f"{folder}: a finished run is here and is never overwritten; add --again for a new one, or --out with another folder."
+            f"{folder}: a finished run is here and is never overwritten; add --again for a new one, or --out with "
+            "another folder."
         )
     if folder.exists() and not folder.is_dir():
         raise StudyError(

@@ -37,8 +37,8 @@ class Whitening(NamedTuple):
 class Recorded(NamedTuple):
     """What is kept of each transition of a chunk; row i belongs to draw i.
 
-    `before` (in w) and `key` are the state before the transition, so that a divergent one can be run again; `position` is
-    z after it.
+    `before` (in w) and `key` are the state before the transition, so that a divergent one can be run again;
+    `position` is z after it.
     """
 
     before: Float[Array, "n d"]
@@ -134,8 +134,8 @@ class Program:
         def advance(state: Any, count: Array, data: RangeData, whitening: Whitening) -> tuple[Any, Recorded]:
             places = jnp.zeros((self.chunk, self.dimension))
             empty = Recorded(
-                places, jnp.zeros((self.chunk, 2), jnp.uint32), places, jnp.zeros(self.chunk, bool), *(jnp.zeros(self.chunk),) * 2,
-                jnp.zeros(self.chunk, int), *(jnp.zeros(self.chunk),) * 2,
+                places, jnp.zeros((self.chunk, 2), jnp.uint32), places, jnp.zeros(self.chunk, bool),
+                *(jnp.zeros(self.chunk),) * 2, jnp.zeros(self.chunk, int), *(jnp.zeros(self.chunk),) * 2,
             )  # fmt: skip
 
             def one(i: Array, carry: tuple[Any, Recorded]) -> tuple[Any, Recorded]:
@@ -143,7 +143,8 @@ class Program:
                 state = self._sample_kernel(last, model_args=(data, whitening))
                 row = Recorded(
                     last.z["w"], last.rng_key,
-                    whitening.mode + whitening.scale @ state.z["w"], state.diverging, state.energy, state.potential_energy,
+                    whitening.mode + whitening.scale @ state.z["w"], state.diverging, state.energy,
+                    state.potential_energy,
                     state.num_steps, state.accept_prob, state.adapt_state.step_size,
                 )  # fmt: skip
                 return state, jax.tree.map(lambda column, value: column.at[i].set(value), kept, row)

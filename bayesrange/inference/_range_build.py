@@ -29,7 +29,8 @@ def make_spec(study: Study, card: Card) -> RangeSpec:
         raise StudyError(f'{where}, [model] covariates: covariates of groups need pooling = "hierarchical".')
     if hierarchical and len(study.groups) < 3:
         raise StudyError(
-            f'{where}, [model] pooling: "hierarchical" needs at least 3 groups, the study has {len(study.groups)}; use "shared".'
+            f'{where}, [model] pooling: "hierarchical" needs at least 3 groups, the study has {len(study.groups)}; '
+            'use "shared".'
         )
     unknown_home = study.groups[["x", "y"]].isna().any(axis=1).to_numpy()
     names = card.parameters + (("over_marking",) if model.over_marking else ())
@@ -59,17 +60,20 @@ def _check_card(study: Study, card: Card) -> None:
         raise StudyError(f"{where}: range cards need groups; add a [groups] table, or a group column to the fixes.")
     if "resources" in card.terms and not model.layers:
         raise StudyError(
-            f'{where}, [model] layers: the card {card.name} responds to layers; list at least one, such as layers = ["forage"].'
+            f"{where}, [model] layers: the card {card.name} responds to layers; list at least one, such as "
+            'layers = ["forage"].'
         )
     if model.layers and "resources" not in card.terms:
         raise StudyError(
-            f"{where}, [model] layers: the card {card.name} has no resource term; take the list out or choose another card."
+            f"{where}, [model] layers: the card {card.name} has no resource term; take the list out or choose another "
+            "card."
         )
     if model.over_marking and not card.scent:
         raise StudyError(f"{where}, [model] over_marking: the card {card.name} has no term that uses scent.")
     if card.scent and len(study.groups) < 2:
         raise StudyError(
-            f"{where}, [model] card: {card.name} is about neighbours, and the study has one group; use localising or resources."
+            f"{where}, [model] card: {card.name} is about neighbours, and the study has one group; use localising or "
+            "resources."
         )
 
 
@@ -89,7 +93,8 @@ def code_covariates(study: Study) -> list[tuple[str, np.ndarray]]:
         column = study.groups[name]
         if column.isna().any():
             raise StudyError(
-                f"{where}: column {name!r} of the groups table is empty for group {study.groups['group'][column.isna().idxmax()]!r}."
+                f"{where}: column {name!r} of the groups table is empty for group "
+                f"{study.groups['group'][column.isna().idxmax()]!r}."
             )
         if column.nunique() < 2:
             raise StudyError(f"{where}: column {name!r} of the groups table has the same value for every group.")
@@ -178,6 +183,7 @@ def _spread(card: Card, name: str) -> float:
     prior = card.between_groups.get(name, Prior("half-normal", (0.5,)))
     if prior.family != "half-normal":
         raise StudyError(
-            f"{card.file.name}, [between_groups.{name}]: the spread between groups takes a half-normal, got {prior.family}."
+            f"{card.file.name}, [between_groups.{name}]: the spread between groups takes a half-normal, got "
+            f"{prior.family}."
         )
     return prior.numbers[0]

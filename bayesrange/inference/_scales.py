@@ -71,7 +71,8 @@ def make_scales(study: Study, layers: list[str]) -> Scales:
         sd = float(np.sqrt(np.average((values - mean) ** 2, weights=weight)))
         if not sd > 1e-12 * max(abs(mean), 1e-300):
             raise StudyError(
-                f"{layer.file}: layer {name!r} has the same value everywhere in the area, so no response to it can be told; "
+                f"{layer.file}: layer {name!r} has the same value everywhere in the area, so no response to it can be "
+                "told; "
                 "leave it out of [model] layers."
             )
         scales[name] = LayerScale(mean, sd, layer.unit)

@@ -167,12 +167,13 @@ def _derive(
         else []
     )
     two_states = sum(bool(program.other_state(jnp.asarray(z), data)) for z in checked)
-    save_arrays(
-        own / "derived.npz",
-        failed_solves=np.array(failed), two_states=np.array(two_states), states_checked=np.array(len(checked)), seconds=np.array(sum(part["seconds"] for part in parts)), **{f"sum_{name}": value for name, value in sums.items()},
-        **{name: np.stack(column) for name, column in rows.items()}, **{f"stat_{name}": value for name, value in stats.items()},
-        **{f"site_{name}": value for name, value in parameters.items()}, position=positions,
-    )  # fmt: skip
+    arrays = {f"sum_{name}": value for name, value in sums.items()}
+    arrays |= {name: np.stack(column) for name, column in rows.items()}
+    arrays |= {f"stat_{name}": value for name, value in stats.items()}
+    arrays |= {f"site_{name}": value for name, value in parameters.items()}
+    counts = {"failed_solves": failed, "two_states": two_states, "states_checked": len(checked)}
+    counts["seconds"] = sum(part["seconds"] for part in parts)
+    save_arrays(own / "derived.npz", **arrays, **{name: np.array(value) for name, value in counts.items()})
     _say(stage="finished", chain=chain, peak_gib=_peak_gib())
 
 

@@ -25,6 +25,7 @@ from bayesrange.spaceuse._terms import Parameters, Setting, home_distance, solit
 
 __all__ = [
     "Domain", "NOT_CONVERGED", "NOT_FINITE", "NO_STEADY_SCENT", "Parameters", "Reading", "SENTENCES", "SOLVED",
-    "SOLVERS", "Setting", "Solution", "SolveError", "arrival_scent", "gibbs", "home_distance", "log_fix_density", "make_domain",
+    "SOLVERS", "Setting", "Solution", "SolveError", "arrival_scent", "gibbs", "home_distance",
+    "log_fix_density", "make_domain",
     "solitary_potential", "steady_state",
 ]  # fmt: skip

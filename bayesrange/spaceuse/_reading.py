@@ -30,7 +30,7 @@ class Reading(NamedTuple):
 
 
 def log_fix_density(log_density: Float[Array, "groups ny nx"], reading: Reading) -> Float[Array, " fixes"]:
-    """log ∫ u(z) N(y; z, Σ) dz for each fix y [log 1/km²].
+    """Log of ∫ u(z) N(y; z, Σ) dz for each fix y [log 1/km²].
 
     Args:
         log_density: log u at cell centres, −inf outside.

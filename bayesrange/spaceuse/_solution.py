@@ -12,8 +12,8 @@ NOT_FINITE = 3
 
 SENTENCES = {
     SOLVED: "The steady state was found.",
-    NOT_CONVERGED: "The steady state did not converge within the allowed steps: the coupling between groups is too strong "
-    "for these parameters, or two groups share one home.",
+    NOT_CONVERGED: "The steady state did not converge within the allowed steps: the coupling between groups is too "
+    "strong for these parameters, or two groups share one home.",
     NO_STEADY_SCENT: "Over-marking is so strong that marks grow without bound in at least one cell (m Q ≥ 1).",
     NOT_FINITE: "The steady state is not a number: a parameter is infinite or not a number.",
 }

@@ -29,8 +29,8 @@ def arrival_scent(parameters: Parameters, setting: Setting, order: Sequence[int]
     scent = [laid] * len(order)
     for i in order:
         alone = Parameters(
-            parameters.localising[i][None], jnp.zeros(1), jnp.ones(1), parameters.resource[:, i][:, None], jnp.zeros(()),
-            parameters.home[i][None],
+            parameters.localising[i][None], jnp.zeros(1), jnp.ones(1), parameters.resource[:, i][:, None],
+            jnp.zeros(()), parameters.home[i][None],
         )  # fmt: skip
         among = setting._replace(
             marking=setting.marking[i][None],
