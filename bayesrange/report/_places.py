@@ -1,0 +1,63 @@
+"""Rows of the areas and overlaps tables of the page."""
+
+from typing import Any
+
+import pandas as pd
+
+from bayesrange.report._format import bar, interval, number
+from bayesrange.report._maps import density_files
+from bayesrange.report._read import Run
+
+PAIRS_SHOWN = 15
+LEAST_OVERLAP_WIDTH = 0.01  # three decimals are enough for a coefficient between 0 and 1
+
+
+def area_rows(run: Run, ranges: pd.DataFrame, hues: list[str]) -> dict[str, Any]:
+    """One row a group: its area at each isopleth, an interval bar of the widest, and its GeoTIFF."""
+    files = density_files(run)
+    widest = ranges[ranges["isopleth"] == run.isopleths[-1]]
+    axis = (0.0, float(widest["area_km2_upper"].max()))
+    rows = []
+    for at, group in enumerate(run.groups):
+        mine = ranges[ranges["group"] == group].set_index("isopleth")
+        cells = [_area(mine.loc[isopleth]) for isopleth in run.isopleths]
+        last = mine.loc[run.isopleths[-1]]
+        drawn = bar(last["area_km2_lower"], last["area_km2_median"], last["area_km2_upper"], None, axis)
+        animals = int(run.constant["animals"].values[at]) if "animals" in run.constant else None
+        fixes = int((run.constant["group_of_fix"].values.astype(str) == group).sum())
+        rows.append(
+            {
+                "number": at + 1,
+                "group": group,
+                "hue": hues[at],
+                "animals": animals,
+                "fixes": f"{fixes:,}",
+                "cells": cells,
+                "bar": drawn,
+                "file": files[group],
+            }
+        )
+    return {"isopleths": run.isopleths, "rows": rows, "axis": number(axis[1], axis[1] / 10)}
+
+
+def _area(row: pd.Series) -> dict[str, str]:
+    lower, upper = float(row["area_km2_lower"]), float(row["area_km2_upper"])
+    return {"median": number(float(row["area_km2_median"]), upper - lower), "interval": interval(lower, upper)}
+
+
+def overlap_rows(overlaps: pd.DataFrame) -> dict[str, Any]:
+    """The pairs that overlap most, at most fifteen, and what is left out."""
+    order = overlaps.sort_values("median", ascending=False, kind="stable")
+    shown, rest = order.head(PAIRS_SHOWN), order.iloc[PAIRS_SHOWN:]
+    rows = [
+        {
+            "group": row.group,
+            "neighbour": row.neighbour,
+            "median": number(row.median, max(row.upper - row.lower, LEAST_OVERLAP_WIDTH)),
+            "interval": interval(row.lower, row.upper, max(row.upper - row.lower, LEAST_OVERLAP_WIDTH)),
+            "bar": bar(row.lower, row.median, row.upper, None, (0.0, 1.0)),
+        }
+        for row in shown.itertuples()
+    ]
+    left_out = {"count": len(rest), "most": number(float(rest["median"].max()), 0.01)} if len(rest) else None
+    return {"rows": rows, "left_out": left_out}
