@@ -35,6 +35,7 @@ class Grid:
         habitable: share of the cell inside the area and not no-go, from 8 × 8 sub-cells.
         basis_share: integral of the cell's renormalised bilinear basis over the habitable sub-cells [cell areas];
             exactly 1 away from edges.
+        sub_cells: which of the 8 × 8 sub-cells are habitable, row 0 in the south.
     """
 
     west_m: float
@@ -43,6 +44,7 @@ class Grid:
     crs: pyproj.CRS
     habitable: Float[NDArray, "ny nx"]
     basis_share: Float[NDArray, "ny nx"]
+    sub_cells: Bool[NDArray, "rows columns"]
 
     @property
     def shape(self) -> tuple[int, int]:
@@ -84,6 +86,14 @@ class Grid:
         row = np.floor((y - self.south_m) / self.cell_m)
         outside = ~((column >= 0) & (column < nx) & (row >= 0) & (row < ny))
         return np.where(outside, -1, row).astype(np.int64), np.where(outside, -1, column).astype(np.int64)
+
+    def habitable_at(self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]) -> Bool[NDArray, " n"]:
+        """Whether each place [m] lies in a habitable sub-cell."""
+        column = np.floor((x - self.west_m) / self.cell_m * SUB)
+        row = np.floor((y - self.south_m) / self.cell_m * SUB)
+        rows, columns = self.sub_cells.shape
+        within = (column >= 0) & (column < columns) & (row >= 0) & (row < rows)
+        return within & self.sub_cells[np.where(within, row, 0).astype(int), np.where(within, column, 0).astype(int)]
 
     def bilinear(
         self, x: Float[NDArray, " n"], y: Float[NDArray, " n"]
@@ -136,9 +146,9 @@ def frame_of(area: shapely.Polygon | shapely.MultiPolygon, cell_m: float) -> Fra
 
 def area_sub_cells(area: shapely.Polygon | shapely.MultiPolygon, frame: Frame) -> Bool[NDArray, "rows columns"]:
     """Sub-cells whose centre is in the area; row 0 south."""
-    return rasterio.features.geometry_mask([area], (frame.ny * SUB, frame.nx * SUB), frame.transform(SUB), invert=True)[
-        ::-1
-    ]
+    shape = (frame.ny * SUB, frame.nx * SUB)
+    north_up = rasterio.features.geometry_mask([area], shape, frame.transform(SUB), invert=True)
+    return north_up[::-1]
 
 
 def build_grid(frame: Frame, crs: pyproj.CRS, habitable_sub_cells: Bool[NDArray, "rows columns"]) -> Grid:
@@ -152,7 +162,15 @@ def build_grid(frame: Frame, crs: pyproj.CRS, habitable_sub_cells: Bool[NDArray,
     if not habitable.any():
         raise StudyError("[study] area: no ground is left once the no-go layers are taken out; check them.")
     refuse_pieces(habitable, frame)
-    return Grid(frame.west_m, frame.south_m, frame.cell_m, crs, habitable, _basis_share(blocks, habitable > 0))
+    return Grid(
+        frame.west_m,
+        frame.south_m,
+        frame.cell_m,
+        crs,
+        habitable,
+        _basis_share(blocks, habitable > 0),
+        habitable_sub_cells,
+    )
 
 
 def refuse_pieces(habitable: Float[NDArray, "ny nx"], frame: Frame) -> None:

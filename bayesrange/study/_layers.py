@@ -21,7 +21,7 @@ from bayesrange._errors import StudyError
 from bayesrange.study._grid import SUB, Frame, Grid
 
 _MARGIN_CELLS = 2
-_SAME = 1e-6  # share of a pixel by which two grids may differ and still be the same
+_SAME = 1e-6  # share by which a pixel may be smaller than a cell and still be of its size
 
 
 @dataclass(frozen=True)
@@ -54,8 +54,8 @@ class _Raster:
 def read_layer(path: Path, file: str, name: str, unit: str, grid: Grid, wanted: bool) -> tuple[Layer, list[str]]:
     """One layer on the grid, and what has to be said.
 
-    Pixels smaller than a cell are averaged over the cell, larger ones are read bilinearly; a raster on exactly the
-    grid's cells passes unchanged.
+    Pixels smaller than a cell are averaged over the cell, others are read bilinearly at its centre: a raster on
+    exactly the grid's cells passes unchanged.
 
     Args:
         path: where the GeoTIFF is.
@@ -151,19 +151,8 @@ def _window(source: rasterio.DatasetReader, frame: Frame, crs: pyproj.CRS) -> Wi
 
 
 def _onto_cells(raster: _Raster, frame: Frame, crs: pyproj.CRS) -> Float[NDArray, "ny nx"]:
-    if _same_cells(raster, frame, crs):
-        return _warp(raster, frame, crs, 1, Resampling.nearest)
     finer = _pixel_m(raster, frame, crs) < frame.cell_m * (1 - _SAME)
     return _warp(raster, frame, crs, 1, Resampling.average if finer else Resampling.bilinear)
-
-
-def _same_cells(raster: _Raster, frame: Frame, crs: pyproj.CRS) -> bool:
-    """Whether the raster's pixels are the grid's cells."""
-    t, cells = raster.transform, frame.transform()
-    column, row = _applied(~cells, t.c, t.f)
-    aligned = max(abs(column - round(column)), abs(row - round(row))) < _SAME
-    alike = max(abs(t.a / cells.a - 1), abs(t.e / cells.e - 1)) < _SAME / max(raster.values.shape)
-    return raster.crs == crs and t.b == t.d == 0 and aligned and alike
 
 
 def _pixel_m(raster: _Raster, frame: Frame, crs: pyproj.CRS) -> float:

@@ -18,7 +18,7 @@ from jaxtyping import Float
 from numpy.typing import NDArray
 from scipy.linalg import lapack
 from scipy.optimize import brentq, minimize_scalar
-from scipy.stats import chi2
+from scipy.special import ndtri
 
 _PROB = 0.95
 _SCAN = 24  # crossing times tried before the search is refined
@@ -94,7 +94,7 @@ class OrnsteinUhlenbeck:
             options={"xatol": 1e-3},
         )
         peak, top = (best.x, -best.fun) if -best.fun > values[k] else (scan[k], values[k])
-        drop = top - chi2.ppf(_PROB, 1) / 2
+        drop = top - ndtri((1 + _PROB) / 2) ** 2 / 2  # chi-square with one degree of freedom
         lower, upper = self._limit(peak, low, drop), self._limit(peak, high, drop)
         hours = np.exp([peak, lower, upper])
         return CrossingTime(float(hours[0]), float(hours[1]), float(hours[2]), open_ended=bool(upper >= high))

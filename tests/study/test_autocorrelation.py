@@ -69,6 +69,29 @@ def test_restricted_likelihood_is_the_dense_gaussian_one(error_m):
     np.testing.assert_allclose(np.diff(ours), np.diff(theirs), rtol=1e-8)  # constants drop out
 
 
+@pytest.mark.parametrize("error_m", [0.0, 20.0])
+def test_the_profile_is_the_likelihood_at_its_best_variance(error_m):
+    rng = np.random.default_rng(5)
+    interval = rng.exponential(2, 59)
+    place = track(rng, interval, 7.0, error_m)[["x", "y"]].to_numpy()
+    fit = OrnsteinUhlenbeck(interval, place, np.full(60, error_m))
+    best = [max(fit.log_likelihood(tau, v) for v in np.geomspace(1e4, 1e6, 4001)) for tau in (2.0, 7.0, 30.0)]
+    # the grid of variances is 0.1 % fine and the maximum flat: 60 × 2e-7 off at most
+    np.testing.assert_allclose(np.diff([fit.profile(t) for t in (2.0, 7.0, 30.0)]), np.diff(best), atol=1e-4)
+
+
+def test_a_crossing_time_without_an_upper_limit_is_taken_at_the_cautious_end():
+    rng = np.random.default_rng(16)
+    own = {f"A{k}": track(rng, np.full(59, 4.0), 40.0, animal=f"A{k}") for k in range(20)}
+    fits = {a: OrnsteinUhlenbeck(np.full(59, 4.0), t[["x", "y"]].to_numpy(), np.zeros(60)) for a, t in own.items()}
+    times = {a: fit.crossing_time() for a, fit in fits.items()}
+    table = autocorrelation_weights(pd.concat(own.values())).table.set_index("animal")["crossing_time_h"]
+    open_ended = [a for a, t in times.items() if t.open_ended and t.hours < 200]
+    assert 0 < len(open_ended) < 20
+    for animal, time in times.items():
+        assert table[animal] == pytest.approx(236.0 if animal in open_ended or time.hours > 200 else time.hours)
+
+
 @pytest.mark.parametrize(("interval_h", "error_m"), [(4.0, 0.0), (4.0, 20.0), (1 / 12, 20.0)])
 def test_crossing_time_is_recovered(interval_h, error_m):
     rng = np.random.default_rng(6)
@@ -83,10 +106,10 @@ def test_crossing_time_is_recovered(interval_h, error_m):
 
 def test_limits_hold_the_crossing_time_as_often_as_they_say():
     rng = np.random.default_rng(8)
-    own = [track(rng, rng.exponential(4, 150), 12.0, 15.0, f"A{k:03}") for k in range(80)]
+    own = [track(rng, rng.exponential(4, 150), 12.0, 15.0, f"A{k:03}") for k in range(40)]
     table = autocorrelation_weights(pd.concat(own)).table
     held = ((table["crossing_time_lower_h"] < 12) & (table["crossing_time_upper_h"] > 12)).sum()
-    low, high = stats.binom.interval(0.999, 80, 0.95)
+    low, high = stats.binom.interval(0.999, 40, 0.95)
     assert low <= held <= high
 
 

@@ -15,6 +15,16 @@ def test_a_raster_on_the_studys_own_cells_passes_unchanged(folder):
     np.testing.assert_array_equal(worms(folder), values[2:42, 3:43][::-1])
 
 
+@pytest.mark.parametrize("cell", [100.0, 62.7, 1000 / 12])
+def test_cells_of_any_size_pass_unchanged(folder, cell):
+    first, last = np.floor(folder.west / cell) * cell, np.ceil((folder.south + 4000) / cell) * cell
+    values = RNG.normal(size=(70, 70))
+    folder.raster("worms.tif", values, cell, west=first, north=last)
+    folder.toml["study"]["cell_m"] = cell
+    read = worms(folder)
+    assert set(read[~np.isnan(read)]) <= set(values.ravel())  # to the last bit
+
+
 def test_finer_pixels_are_averaged_over_the_cell(folder):
     values = RNG.normal(size=(160, 160))
     folder.raster("worms.tif", values, 25.0)
