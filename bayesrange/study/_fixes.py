@@ -12,6 +12,7 @@ import numpy as np
 import pandas as pd
 
 from bayesrange._errors import StudyError
+from bayesrange.study._darwin_core import SD_PER_RADIUS, UNCERTAINTY, with_darwin_core
 from bayesrange.study._settings import FixesSection
 from bayesrange.study._tables import column_or_error, counted, first_few, numbers, one_name_each, read_table
 from bayesrange.study._times import read_times
@@ -27,6 +28,7 @@ class RawFixes:
     counts: dict[str, int]
     warnings: list[str]
     files: dict[str, Path]
+    crs: str | None  # reference system of x and y, where one is given
 
 
 def read_fixes(folder: Path, section: FixesSection) -> RawFixes:
@@ -36,10 +38,12 @@ def read_fixes(folder: Path, section: FixesSection) -> RawFixes:
         StudyError: names file, line and column of what is wrong.
     """
     files = _files(folder, [section.file] if isinstance(section.file, str) else section.file)
-    parts, counts, warnings = [], {"rows": 0, "failed": 0}, []
+    parts, counts, warnings, systems = [], {"rows": 0, "failed": 0}, [], set()
     for name, path in files.items():
         table = read_table(path, name)
-        part, said = _fixes_of(table, section, name)
+        own = with_darwin_core(section, table, name)
+        part, said = _fixes_of(table, own, name)
+        systems.add(own.crs)
         counts["rows"] += len(table)
         counts["failed"] += len(table) - len(part)
         warnings += said
@@ -47,12 +51,14 @@ def read_fixes(folder: Path, section: FixesSection) -> RawFixes:
     fixes = pd.concat(parts, ignore_index=True)
     if fixes.empty:
         raise StudyError(f"{first_few(files)}: there is no fix with coordinates ({counts['rows']} rows).")
+    if len(systems) > 1:
+        raise StudyError("[fixes] file: the files are in more than one reference system; read them as one study each.")
     one_name_each(fixes["animal"], "animals", first_few(files))
     _refuse_repeats(fixes)
     earlier = fixes.groupby("animal")["time"].diff() < pd.Timedelta(0)
     counts["unsorted"] = int(earlier.sum())
     fixes = fixes.sort_values(["animal", "time"], kind="stable", ignore_index=True)
-    return RawFixes(fixes, counts, warnings, files)
+    return RawFixes(fixes, counts, warnings, files, systems.pop())
 
 
 def _files(folder: Path, given: list[str]) -> dict[str, Path]:
@@ -72,18 +78,18 @@ def _files(folder: Path, given: list[str]) -> dict[str, Path]:
 
 
 def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd.DataFrame, list[str]]:
-    x = column_or_error(table, section.x, name, "[fixes] x")
-    y = column_or_error(table, section.y, name, "[fixes] y")
+    x = column_or_error(table, section.x, name, "[fixes] x names")
+    y = column_or_error(table, section.y, name, "[fixes] y names")
     half = ((x == "") != (y == "")).to_numpy()
     if half.any():
         raise StudyError(
             f"{name}, line {table.index[half][0]}: one coordinate is blank; give both, or blank both for a failed fix."
         )
     table = table[(x != "").to_numpy()]
-    animal = column_or_error(table, section.animal, name, "[fixes] animal")
+    animal = column_or_error(table, section.animal, name, "[fixes] animal names")
     if (animal == "").any():
         raise StudyError(f"{name}, line {table.index[animal == ''][0]}: the animal is blank; name it.")
-    times, said = read_times(column_or_error(table, str(section.time), name, "[fixes] time"), section.zone, name)
+    times, said = read_times(column_or_error(table, str(section.time), name, "[fixes] time names"), section.zone, name)
     error, said_of_error = _errors(table, section, name)
     part = pd.DataFrame(
         {
@@ -104,7 +110,7 @@ def _groups(table: pd.DataFrame, section: FixesSection, name: str) -> np.ndarray
     """The group column; the default one may be absent, one that the user named may not."""
     if section.group not in table.columns and "group" not in section.model_fields_set:
         return np.full(len(table), "")
-    return column_or_error(table, section.group, name, "[fixes] group").to_numpy()
+    return column_or_error(table, section.group, name, "[fixes] group names").to_numpy()
 
 
 def _errors(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[np.ndarray, list[str]]:
@@ -113,14 +119,17 @@ def _errors(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[np.n
         return np.full(len(table), float(section.error)), []
     if section.error not in table.columns and "error" not in section.model_fields_set:
         return np.zeros(len(table)), []
-    texts = column_or_error(table, section.error, name, "[fixes] error")
+    texts = column_or_error(table, section.error, name, "[fixes] error names")
     error = numbers(texts, name, blank=0.0)
     if (error < 0).any():
         line = table.index[error < 0][0]
         raise StudyError(f'{name}, line {line}: the error is "{texts[line]}"; expected at least 0 m (sd per axis).')
-    blank = int((texts == "").sum())
+    blank, remarks = int((texts == "").sum()), []
+    if section.error == UNCERTAINTY:
+        error = error * SD_PER_RADIUS
+        remarks.append(f"{name}: {UNCERTAINTY} was read as the radius of a 95 % circle, sd per axis = radius / 2.4477.")
     said = f"{name}: {counted(blank, 'fix has', 'fixes have')} no error given, taken as exact."
-    return error, [said] if blank else []
+    return error, [*remarks, said] if blank else remarks
 
 
 def _refuse_repeats(fixes: pd.DataFrame) -> None:

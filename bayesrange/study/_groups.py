@@ -24,7 +24,7 @@ def read_groups(path: Path, name: str, covariates: list[str]) -> tuple[pd.DataFr
     table = read_table(path, name)
     if table.empty:
         raise StudyError(f"{name}: there is no group; expected one line a group.")
-    group = column_or_error(table, "group", name, "the heading")
+    group = column_or_error(table, "group", name, "a groups table needs")
     if (group == "").any():
         raise StudyError(f"{name}, line {table.index[group == ''][0]}: the group's name is blank; give it one.")
     again = group.duplicated()
@@ -34,7 +34,7 @@ def read_groups(path: Path, name: str, covariates: list[str]) -> tuple[pd.DataFr
     for column in ("from", "until"):
         if column in table.columns and (table[column] != "").any():
             raise StudyError(f'{name}, column "{column}": groups that come or go are not built yet; leave it blank.')
-    x, y = (numbers(column_or_error(table, c, name, "the heading"), name, blank=np.nan) for c in ("x", "y"))
+    x, y = (numbers(column_or_error(table, c, name, "a groups table needs"), name, blank=np.nan) for c in ("x", "y"))
     half = np.isnan(x) != np.isnan(y)
     if half.any():
         raise StudyError(
@@ -47,7 +47,7 @@ def read_groups(path: Path, name: str, covariates: list[str]) -> tuple[pd.DataFr
         groups[column] = _covariate(table[column], name, wanted=column in covariates)
     for column in covariates:
         if column not in groups.columns or column in _OWN:
-            column_or_error(table.drop(columns=[*_OWN], errors="ignore"), column, name, "[model] covariates")
+            column_or_error(table.drop(columns=[*_OWN], errors="ignore"), column, name, "[model] covariates names")
     return groups, said
 
 
@@ -67,7 +67,8 @@ def match_groups(fixes: pd.DataFrame, groups: pd.DataFrame, name: str) -> list[s
     Raises:
         StudyError: a fix in no known group, a group with neither fixes nor a home centre.
     """
-    known, places = set(groups["group"]), (fixes["file"] + " line " + fixes["row"].astype(str))
+    fixes = fixes.sort_values(["file", "row"])
+    known, places = set(groups["group"]), fixes["file"] + " line " + fixes["row"].astype(str)
     blank = (fixes["group"] == "") & bool(known)
     if blank.any():
         number = counted(int(blank.sum()), "fix has", "fixes have")

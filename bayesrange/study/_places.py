@@ -99,9 +99,10 @@ def _where(fixes: pd.DataFrame, far: NDArray, ground: Ground, x: NDArray, y: NDA
             lines = fixes.iloc[far[which]].sort_values(["file", "row"])
             rows = first_few(f"{f} line {r}" for f, r in zip(lines["file"], lines["row"], strict=True))
             told.append(f"{counted(int(which.sum()), 'fix', 'fixes')} {what} ({rows})")
+    if fixes["error_m"].iloc[far].any():
+        told[-1] += f", by more than {_SDS:.0f} standard deviations of their error"
     return (
-        f"{'; '.join(told)}, by more than {_SDS:.0f} standard deviations of their error; mend or take out these rows, "
-        "widen the area, or give the location error by [fixes] error."
+        f"{'; '.join(told)}; mend or take out these rows, widen the area, or give the location error by [fixes] error."
     )
 
 

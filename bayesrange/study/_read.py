@@ -94,7 +94,7 @@ def _reference_systems(settings: StudySettings, raw: RawFixes) -> tuple[pyproj.C
     x, y = raw.table["x"].to_numpy(dtype=float), raw.table["y"].to_numpy(dtype=float)
     degrees = look_like_degrees(x, y)
     given = settings.study.crs and metric_crs(settings.study.crs, "[study] crs")
-    if settings.fixes.crs is None:
+    if raw.crs is None:
         if degrees:
             raise StudyError(
                 '[fixes] crs: the coordinates look like longitude and latitude; say so by crs = "EPSG:4326" in [fixes].'
@@ -102,12 +102,12 @@ def _reference_systems(settings: StudySettings, raw: RawFixes) -> tuple[pyproj.C
         if not given:
             raise StudyError('[study] crs: this is missing; expected a metric system such as "EPSG:32631".')
         return given, given, []
-    of_fixes = parse_crs(settings.fixes.crs, "[fixes] crs")
+    of_fixes = parse_crs(raw.crs, "[fixes] crs")
     if of_fixes.is_geographic and not degrees:
         row = raw.table[~((np.abs(x) <= 180) & (np.abs(y) <= 90))].iloc[0]
         raise StudyError(
-            f"{row['file']}, line {row['row']}: x = {row['x']:g}, y = {row['y']:g} is no longitude and latitude, "
-            f"but [fixes] crs is {settings.fixes.crs}; mend crs, or exchange x and y."
+            f"{row['file']}, line {row['row']}: x = {row['x']:.10g}, y = {row['y']:.10g} is no longitude and latitude, "
+            f"but [fixes] crs is {raw.crs}; mend crs, or exchange x and y."
         )
     if given:
         return given, of_fixes, []
@@ -124,7 +124,7 @@ def _placed(table: pd.DataFrame, source: pyproj.CRS, target: pyproj.CRS) -> pd.D
     if lost.any():
         row = table[lost].iloc[0]
         raise StudyError(
-            f"{row['file']}, line {row['row']}: x = {row['x']:g}, y = {row['y']:g} lies where [study] crs does not "
+            f"{row['file']}, line {row['row']}: x = {row['x']:.10g}, y = {row['y']:.10g} lies where [study] crs does not "
             "reach; check [fixes] crs and the order of x and y."
         )
     return table.assign(x=x, y=y)

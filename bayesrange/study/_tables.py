@@ -47,20 +47,20 @@ def read_table(path: Path, name: str) -> pd.DataFrame:
     return pd.DataFrame(rows, columns=header, index=pd.Index(numbers, name="line"), dtype=str)
 
 
-def column_or_error(table: pd.DataFrame, column: str, name: str, key: str) -> pd.Series:
+def column_or_error(table: pd.DataFrame, column: str, name: str, why: str) -> pd.Series:
     """A column of the table, or a sentence that says which are there.
 
     Args:
         table: from `read_table`.
         column: its name.
         name: what the user calls the file.
-        key: the study file's key that names the column, such as "[fixes] animal".
+        why: who wants it, such as "[fixes] animal names".
     """
     if column in table.columns:
         return table[column]
     close = nearest(column, list(table.columns))
-    hint = f'did you mean "{close}"?' if close else f"its columns are {', '.join(table.columns)};"
-    raise StudyError(f'{name}: there is no column "{column}"; {hint} Name it by {key} in the study file.')
+    hint = f'did you mean "{close}"?' if close else f"the columns are {', '.join(table.columns)}."
+    raise StudyError(f'{name}: there is no column "{column}", which {why}; {hint}')
 
 
 def numbers(texts: pd.Series, name: str, blank: float | None = None) -> np.ndarray:

@@ -44,14 +44,19 @@ SETTINGS = {
         "fixes",
         "animal",
         "anmal",
-        'there is no column "anmal"; did you mean "animal"? Name it by [fixes] animal',
+        'there is no column "anmal", which [fixes] animal names; did you mean "animal"?',
     ),
-    "group column": ("fixes", "group", "clan", 'there is no column "clan"; its columns are animal, time, group, x, y'),
+    "group column": (
+        "fixes",
+        "group",
+        "clan",
+        'there is no column "clan", which [fixes] group names; the columns are animal',
+    ),
     "covariate": (
         "model",
         "covariates",
         ["desnity"],
-        'groups.csv: there is no column "desnity"; did you mean "density"?',
+        'there is no column "desnity", which [model] covariates names; did you mean "density"?',
     ),
     "cells too large": (
         "study",

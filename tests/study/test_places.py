@@ -7,6 +7,8 @@ import pyproj
 import pytest
 import shapely
 
+from bayesrange.study import StudyError
+
 # (system of the fixes, longitude, latitude, study system, easting, northing, tolerance m)
 WORKED = {
     # IOGP Guidance Note 7-2, method 9807; printed with a scale factor of 7 digits, hence 1 cm
@@ -55,6 +57,23 @@ def test_the_utm_zone_is_chosen_from_longitude_and_latitude_and_said(folder):
     np.testing.assert_allclose(study.groups[["x", "y"]], plain.groups[["x", "y"]], atol=1e-4, rtol=0)
 
 
+def test_darwin_core_names_are_understood_and_the_radius_is_read_as_95_percent(folder):
+    plain = folder.read()
+    to_degrees = pyproj.Transformer.from_crs(folder.crs, "EPSG:4326", always_xy=True)
+    folder.fixes["x"], folder.fixes["y"] = to_degrees.transform(*folder.fixes[["x", "y"]].to_numpy(dtype=float).T)
+    # names: TDWG Darwin Core term list
+    names = {"animal": "organismID", "time": "eventDate", "x": "decimalLongitude", "y": "decimalLatitude"}
+    folder.fixes = folder.fixes.rename(columns=names).assign(coordinateUncertaintyInMeters=30, geodeticDatum="WGS84")
+    study = folder.read()
+    np.testing.assert_allclose(study.fixes[["x", "y"]], plain.fixes[["x", "y"]], atol=1e-4, rtol=0)
+    # radius that holds 95 % of a circular normal error: 2.447747 sd (chi-square, two degrees of freedom)
+    np.testing.assert_allclose(study.fixes["error_m"], 30 / 2.447747, rtol=3e-5)
+    assert any("radius of a 95 % circle" in w for w in study.warnings)
+    folder.fixes.loc[3, "geodeticDatum"] = "EPSG:4258"
+    with pytest.raises(StudyError, match=r"geodeticDatum is not the same in all rows \(EPSG:4258, WGS84\)"):
+        folder.read()
+
+
 def test_homes_in_degrees_beside_a_metric_system_are_read_and_said(folder):
     plain = folder.read()
     to_degrees = pyproj.Transformer.from_crs(folder.crs, "EPSG:4326", always_xy=True)
@@ -92,7 +111,7 @@ def test_a_system_that_stretches_distances_is_refused(folder):
     folder.fixes["x"], folder.fixes["y"] = to_mercator.transform(*folder.fixes[["x", "y"]].to_numpy(dtype=float).T)
     folder.toml["study"]["crs"] = "EPSG:3857"
     # Mercator's scale is 1/cos(latitude): at 50.55° N 1.57
-    with pytest.raises(ValueError, match=r"EPSG:3857 stretches distances by 5[67] % at this area; choose one made"):
+    with pytest.raises(StudyError, match=r"EPSG:3857 stretches distances by 5[67] % at this area; choose one made"):
         folder.read()
 
 
