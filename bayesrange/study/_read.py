@@ -106,8 +106,8 @@ def _reference_systems(settings: StudySettings, raw: RawFixes) -> tuple[pyproj.C
     if of_fixes.is_geographic and not degrees:
         row = raw.table[~((np.abs(x) <= 180) & (np.abs(y) <= 90))].iloc[0]
         raise StudyError(
-            f"{row['file']}, line {row['row']}: x = {row['x']:.10g}, y = {row['y']:.10g} is no longitude and latitude, "
-            f"but [fixes] crs is {raw.crs}; mend crs, or exchange x and y."
+            f"{row['file']}, line {row['row']}: x = {row['x']:.10g}, y = {row['y']:.10g} is no longitude and "
+            f"latitude, but [fixes] crs is {raw.crs}; mend crs, or exchange x and y."
         )
     if given:
         return given, of_fixes, []
