@@ -124,8 +124,8 @@ def _placed(table: pd.DataFrame, source: pyproj.CRS, target: pyproj.CRS) -> pd.D
     if lost.any():
         row = table[lost].iloc[0]
         raise StudyError(
-            f"{row['file']}, line {row['row']}: x = {row['x']:.10g}, y = {row['y']:.10g} lies where [study] crs does not "
-            "reach; check [fixes] crs and the order of x and y."
+            f"{row['file']}, line {row['row']}: x = {row['x']:.10g}, y = {row['y']:.10g} lies where [study] crs "
+            "does not reach; check [fixes] crs and the order of x and y."
         )
     return table.assign(x=x, y=y)
 
