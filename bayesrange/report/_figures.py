@@ -107,7 +107,8 @@ def further_layers(run: Run, outlines: geopandas.GeoDataFrame) -> Picture | None
             _one_layer(figure, axes, run, name, outlines)
         for axes in panels[len(layers) :]:
             axes.set_visible(False)
-        return picture(figure, f"Maps of further layers with the isopleths of all groups: {', '.join(layers)}.", "Further layers of the study.")
+        alt = f"Maps of further layers with the isopleths of all groups: {', '.join(layers)}."
+        return picture(figure, alt, "Further layers of the study.")
 
 
 def each_group(run: Run, outlines: geopandas.GeoDataFrame) -> Picture:

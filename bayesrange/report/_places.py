@@ -17,10 +17,11 @@ def area_rows(run: Run, ranges: pd.DataFrame, hues: list[str]) -> dict[str, Any]
     files = density_files(run)
     widest = ranges[ranges["isopleth"] == run.isopleths[-1]]
     axis = (0.0, float(widest["area_km2_upper"].max()))
+    width = (ranges["area_km2_upper"] - ranges["area_km2_lower"]).groupby(ranges["isopleth"]).median()
     rows = []
     for at, group in enumerate(run.groups):
         mine = ranges[ranges["group"] == group].set_index("isopleth")
-        cells = [_area(mine.loc[isopleth]) for isopleth in run.isopleths]
+        cells = [_area(mine.loc[isopleth], float(width[isopleth])) for isopleth in run.isopleths]
         last = mine.loc[run.isopleths[-1]]
         drawn = bar(last["area_km2_lower"], last["area_km2_median"], last["area_km2_upper"], None, axis)
         animals = int(run.constant["animals"].values[at]) if "animals" in run.constant else None
@@ -40,9 +41,10 @@ def area_rows(run: Run, ranges: pd.DataFrame, hues: list[str]) -> dict[str, Any]
     return {"isopleths": run.isopleths, "rows": rows, "axis": number(axis[1], axis[1] / 10)}
 
 
-def _area(row: pd.Series) -> dict[str, str]:
+def _area(row: pd.Series, width: float) -> dict[str, str]:
+    """An area and its interval, to the digits that suit the whole column."""
     lower, upper = float(row["area_km2_lower"]), float(row["area_km2_upper"])
-    return {"median": number(float(row["area_km2_median"]), upper - lower), "interval": interval(lower, upper)}
+    return {"median": number(float(row["area_km2_median"]), width), "interval": interval(lower, upper, width)}
 
 
 def overlap_rows(overlaps: pd.DataFrame) -> dict[str, Any]:
