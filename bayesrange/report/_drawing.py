@@ -137,14 +137,28 @@ def shape(axes: Axes, geometry: BaseGeometry, **how: object) -> None:
         axes.add_patch(PathPatch(Outline.make_compound_path(*rings), **how))
 
 
-def scale_bar(axes: Axes) -> None:
-    """A bar of a round length, about a fifth of the map's width, in the lower left corner."""
+def emptiest_corner(density: Float[NDArray, "ny nx"]) -> tuple[bool, bool]:
+    """Whether a map's emptiest corner is in the east, and whether in the north: there a scale bar hides least."""
+    rows, columns = density.shape[0] // 5 + 1, density.shape[1] // 3 + 1
+    known = np.nan_to_num(density)
+    tops = {
+        (False, False): known[:rows, :columns].max(),
+        (True, False): known[:rows, -columns:].max(),
+        (False, True): known[-rows:, :columns].max(),
+        (True, True): known[-rows:, -columns:].max(),
+    }
+    return min(tops, key=lambda corner: float(tops[corner]))
+
+
+def scale_bar(axes: Axes, corner: tuple[bool, bool] = (False, False)) -> None:
+    """A bar of a round length, about a fifth of the map's width, in a corner (in the east?, in the north?)."""
     west, east = axes.get_xlim()
     south, north = axes.get_ylim()
     wanted = (east - west) / 5
     power = 10.0 ** np.floor(np.log10(wanted))
     length = float(power * max(step for step in (1, 2, 5) if step * power <= wanted))
-    x, y = west + 0.04 * (east - west), south + 0.035 * (north - south)
+    x = east - 0.04 * (east - west) - length if corner[0] else west + 0.04 * (east - west)
+    y = north - 0.09 * (north - south) if corner[1] else south + 0.035 * (north - south)
     axes.plot([x, x + length], [y, y], color=INK, linewidth=2.2, solid_capstyle="butt", zorder=9)
     label = f"{length:g} km" if length >= 1 else f"{1e3 * length:g} m"
     axes.annotate(

@@ -14,6 +14,7 @@ from bayesrange.report._drawing import (
     LAYER,
     NOT_HABITABLE,
     Picture,
+    emptiest_corner,
     extent_km,
     image,
     map_axes,
@@ -162,7 +163,7 @@ def _all_groups(axes: Axes, run: Run, outlines: geopandas.GeoDataFrame) -> None:
     loose = ~np.isin(fix_group, run.groups)
     axes.plot(x_km[loose], y_km[loose], ".", color=INK, markersize=1.6, alpha=fix_alpha(run), zorder=4)
     axes.set_title("Ranges of all groups")
-    scale_bar(axes)
+    scale_bar(axes, emptiest_corner((mean / np.nanmax(mean, axis=(1, 2), keepdims=True)).max(axis=0)))
 
 
 def _one_layer(figure: Figure, axes: Axes, run: Run, name: str, outlines: geopandas.GeoDataFrame) -> None:

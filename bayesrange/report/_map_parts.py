@@ -102,7 +102,7 @@ def legend(run: Run, line: str, band: str) -> list[object]:
         for order, isopleth in enumerate(run.isopleths)
     ]
     shade = Patch(facecolor=band, alpha=BAND_ALPHA, label="possible to nearly sure")
-    return [*lines, shade, *_places(run), Patch(facecolor=NOT_HABITABLE, label="not habitable")]
+    return [*lines, shade, *_places(run), Patch(facecolor=NOT_HABITABLE, label="outside, or not habitable")]
 
 
 def _places(run: Run) -> list[object]:

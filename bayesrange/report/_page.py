@@ -15,7 +15,7 @@ from jinja2 import Environment, FileSystemLoader, StrictUndefined
 from bayesrange.report._chains import chains_figure
 from bayesrange.report._figures import each_group, further_layers, group_hues, overview
 from bayesrange.report._format import fixed, interval, number, percent, whole
-from bayesrange.report._parameters import Gate, parameter_blocks, raw_left_out
+from bayesrange.report._parameters import Gate, parameter_blocks, raw_left_out, split_name
 from bayesrange.report._places import area_rows, overlap_rows
 from bayesrange.report._read import Run
 from bayesrange.report._sentences import CAUTIONS, COUNTS, MEANINGS, POOLING
@@ -124,7 +124,7 @@ def _fitted(run: Run) -> dict[str, Any]:
         "not_when": str(card.get("not_when") or ""),
         "pooling": POOLING.get(card.get("pooling"), ""),
         "terms": [(str(term), MEANINGS.get(term, "")) for term in card["terms"]],
-        "priors": _priors(card),
+        "priors": _priors(run),
         "references": [str(text) for text in card.get("references") or []],
         "counts": [
             (COUNTS.get(key, _words(key)), whole(value)) for key, value in (run.facts.get("counts") or {}).items()
@@ -143,11 +143,15 @@ def _grid(run: Run) -> str:
     return f"{cells}, {habitable_km2:,.4g} km² habitable, {run.crs.name}"
 
 
-def _priors(card: dict[str, Any]) -> list[tuple[str, str, str]]:
-    """Name, prior in words, and why this one, or that the study file changed it."""
+def _priors(run: Run) -> list[tuple[str, str, str]]:
+    """Name, prior in words, and why this one, or that the study file changed it; parameters of this fit only."""
+    card = run.facts["card"]
+    fitted = {split_name(str(name))[0] for name in run.parameters["parameter"]}
     reasons, changed = card.get("prior_reasons") or {}, card.get("changed_priors") or []
     rows = []
     for name, words in (card.get("priors") or {}).items():
+        if name not in fitted:
+            continue
         why = str(reasons.get(name) or "")
         rows.append((str(name), str(words), f"Set in the study file. {why}".strip() if name in changed else why))
     return rows
@@ -185,7 +189,9 @@ def _scales(scales: dict[str, Any]) -> list[tuple[str, str]]:
     shown = [(name, f"{float(value):,.4g} {unit}") for name, value, unit in rows if value is not None]
     for name, layer in (scales.get("layers") or {}).items():
         unit = layer.get("unit") or ""
-        shown.append((f"layer {name}", f"mean {layer['mean']:,.4g}, sd {layer['sd']:,.4g} {unit}".strip()))
+        shown.append(
+            (f"layer {name}", f"mean {layer['mean']:,.4g}, sd {layer['sd']:,.4g} {unit}".strip().replace(" -", " −"))
+        )
     return shown
 
 
