@@ -127,10 +127,10 @@ def show_result(run: Run, page: Path, console: Console) -> None:
     """Parameters, convergence and where everything is."""
     table = Table(title="Parameters", title_justify="left")
     for name in ("parameter", "unit", "median", "90 % interval", "ESS", "R-hat"):
-        table.add_column(name, justify="left" if name in ("parameter", "unit") else "right")
+        table.add_column(name, justify="left" if name in ("parameter", "unit") else "right", overflow="fold")
     for row in run.parameters.itertuples():
         table.add_row(
-            escape(row.parameter), escape(str(row.unit)), f"{row.median:.4g}", f"{row.lower:.4g} to {row.upper:.4g}",
+            escape(row.parameter), escape(str(row.unit)), number(row.median), f"{number(row.lower)} to {number(row.upper)}",
             f"{min(row.ess_bulk, row.ess_tail):.0f}", f"{row.rhat:.3f}",
         )  # fmt: skip
     console.print(table)
@@ -142,6 +142,11 @@ def show_result(run: Run, page: Path, console: Console) -> None:
             console.print(f"  {escape(problem)}")
     console.print(f"Run folder: {escape(str(run.folder))}")
     console.print(f"Report: {escape(str(page))}")
+
+
+def number(value: float) -> str:
+    """Three significant digits; whole numbers from 1,000 up, as for coordinates in metres."""
+    return f"{value:.0f}" if abs(value) >= 1000 else f"{value:.3g}"
 
 
 def show_cards(name: str | None, study: Path | None) -> None:

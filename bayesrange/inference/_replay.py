@@ -49,7 +49,8 @@ def failed_solves(
     begin, transition = hmc(potential_fn_gen=watched, algo="NUTS")
     fresh = begin(
         {"w": jnp.asarray(record["before"][chosen[0]])}, program.warmup,
-        inverse_mass_matrix=jnp.ones(program.dimension), max_tree_depth=MAX_TREE_DEPTH, model_args=(data, whitening), rng_key=jnp.asarray(record["key"][0]),
+        inverse_mass_matrix=jnp.ones(program.dimension), max_tree_depth=MAX_TREE_DEPTH,
+        model_args=(data, whitening), rng_key=jnp.asarray(record["key"][0]),
     )  # fmt: skip
     rerun = jax.jit(lambda state: transition(state, model_args=(data, whitening)))
     failed = 0

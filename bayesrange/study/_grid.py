@@ -151,6 +151,36 @@ def area_sub_cells(area: shapely.Polygon | shapely.MultiPolygon, frame: Frame) -
     return north_up[::-1]
 
 
+def without_scraps(
+    habitable_sub_cells: Bool[NDArray, "rows columns"], frame: Frame
+) -> tuple[Bool[NDArray, "rows columns"], list[str]]:
+    """The ground without scraps: less than one cell of it that hangs on to the rest by a corner at the most.
+
+    Cutting a polygon into square cells makes such scraps at its edge; without this a sound area would count as two
+    pieces.
+
+    Returns:
+        The sub-cells that stay, and a sentence for the user where something was left out.
+    """
+    blocks = habitable_sub_cells.reshape(frame.ny, SUB, frame.nx, SUB)
+    share = blocks.mean(axis=(1, 3))
+    pieces, count = ndimage.label(share > 0)
+    if count <= 1:
+        return habitable_sub_cells, []
+    size = ndimage.sum_labels(share, pieces, np.arange(1, count + 1))
+    scraps = (size < 1) & (size < size.max())
+    if not scraps.any():
+        return habitable_sub_cells, []
+    gone = np.isin(pieces, np.flatnonzero(scraps) + 1)
+    lost = size[scraps].sum() * frame.cell_m**2
+    said = (
+        f"{int(scraps.sum())} scrap(s) of ground at the edge of the area, together {lost:.0f} m² and each less than a "
+        "cell, touch the "
+        "rest by a corner at the most and are left out."
+    )
+    return (blocks & ~gone[:, None, :, None]).reshape(habitable_sub_cells.shape), [said]
+
+
 def build_grid(frame: Frame, crs: pyproj.CRS, habitable_sub_cells: Bool[NDArray, "rows columns"]) -> Grid:
     """The grid with the habitable share and basis share of each cell.
 

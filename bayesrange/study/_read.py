@@ -18,7 +18,7 @@ from bayesrange._errors import StudyError
 from bayesrange.study._area import read_area
 from bayesrange.study._crs import carry, crs_text, look_like_degrees, metric_crs, parse_crs, scale_warnings, utm_for
 from bayesrange.study._fixes import RawFixes, read_fixes
-from bayesrange.study._grid import SUB, Frame, Grid, area_sub_cells, build_grid, frame_of
+from bayesrange.study._grid import SUB, Frame, Grid, area_sub_cells, build_grid, frame_of, without_scraps
 from bayesrange.study._groups import groups_of_fixes, match_groups, read_groups
 from bayesrange.study._layers import Layer, no_go_sub_cells, read_layer
 from bayesrange.study._places import Ground, check_fixes, check_homes, check_resolution, check_size
@@ -75,16 +75,18 @@ def read_study(path: str | Path) -> Study:
 
     frame = frame_of(area, settings.study.cell_m)
     check_size(frame, len(groups))
-    in_area, no_go = area_sub_cells(area, frame), _no_go(settings, folder, frame, crs)
-    grid = build_grid(frame, crs, in_area & ~no_go)
-    ground = Ground(area, grid, in_area & ~no_go, no_go, settings.model.reading)
+    no_go = _no_go(settings, folder, frame, crs)
+    habitable, said_of_scraps = without_scraps(area_sub_cells(area, frame) & ~no_go, frame)
+    grid = build_grid(frame, crs, habitable)
+    ground = Ground(area, grid, habitable, no_go, settings.model.reading)
     outside = check_fixes(fixes, ground, carry(*raw.table[["y", "x"]].to_numpy(dtype=float).T, fixes_crs, crs))
     check_homes(groups, ground, settings.groups.file if settings.groups else "groups")
     layers, said_of_layers = _layers(settings, folder, grid)
 
     counts = raw.counts | {"fixes": len(fixes), "animals": fixes["animal"].nunique(), "groups": len(groups)}
     counts["outside_within_error"] = outside
-    warnings = said_of_crs + raw.warnings + said_of_groups + check_resolution(fixes, grid) + said_of_layers
+    warnings = said_of_crs + raw.warnings + said_of_groups + said_of_scraps + check_resolution(fixes, grid)
+    warnings += said_of_layers
     hashes = _hashes(path, settings, raw.files)
     return Study(path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes)
 

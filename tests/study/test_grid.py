@@ -2,6 +2,8 @@ import numpy as np
 import pytest
 import shapely
 
+from bayesrange.study._grid import SUB, Frame, without_scraps
+
 CELLS = 40
 
 
@@ -96,3 +98,25 @@ def test_cells_of_places(folder):
     )
     assert rows.tolist() == [12, 12, 12, 12, -1, -1]
     assert columns.tolist() == [0, 0, 1, 39, -1, -1]
+
+
+def test_a_scrap_that_hangs_on_by_a_corner_is_left_out_and_said():
+    frame = Frame(0.0, 0.0, 100.0, 4, 4)
+    ground = np.zeros((4 * SUB, 4 * SUB), dtype=bool)
+    ground[: 2 * SUB, : 2 * SUB] = True  # four whole cells
+    ground[2 * SUB : 2 * SUB + 2, 2 * SUB : 2 * SUB + 3] = True  # six sub-cells that touch them by a corner
+    kept, said = without_scraps(ground, frame)
+    assert kept.sum() == 4 * SUB**2
+    assert said == [
+        "1 scrap(s) of ground at the edge of the area, together 938 m² and each less than a cell, touch the rest by a "
+        "corner at the most and are left out."
+    ]
+
+
+def test_a_piece_of_a_whole_cell_is_no_scrap():
+    frame = Frame(0.0, 0.0, 100.0, 4, 4)
+    ground = np.zeros((4 * SUB, 4 * SUB), dtype=bool)
+    ground[: 2 * SUB, : 2 * SUB] = True
+    ground[3 * SUB :, 3 * SUB :] = True
+    kept, said = without_scraps(ground, frame)
+    assert kept is ground and said == []
