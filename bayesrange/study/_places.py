@@ -141,7 +141,7 @@ def check_resolution(fixes: pd.DataFrame, grid: Grid) -> list[str]:
     Raises:
         StudyError: a group whose range is less than 10 cells across.
     """
-    said = []
+    said, coarse = [], []
     for group, own in fixes.groupby("group"):
         label = f'group "{group}"' if group else "study"
         if len(own) < _FEWEST_FIXES:
@@ -149,13 +149,27 @@ def check_resolution(fixes: pd.DataFrame, grid: Grid) -> list[str]:
             continue
         across_m = 2 * np.quantile(np.hypot(own["x"] - own["x"].median(), own["y"] - own["y"].median()), 0.95)
         cells = across_m / grid.cell_m
-        bias = np.exp(np.interp(np.log(max(cells, 1)), np.log(_BIAS_CELLS), np.log(_BIAS_PERCENT)))
-        told = f"95 % of the fixes of the {label} lie within {across_m:.0f} m, only {cells:.1f} cells across"
         if cells < _FEWEST_CELLS:
             raise StudyError(
-                f"[study] cell_m: {told}, which would bias localising by about {bias:.0f} % or more; "
+                f"[study] cell_m: 95 % of the fixes of the {label} lie within {across_m:.0f} m, only {cells:.1f} cells "
+                f"across, which would bias localising by about {_bias(cells):.0f} % or more; "
                 f"use cells of at most {across_m / _FEWEST_CELLS:.0f} m, better {across_m / _BETTER_CELLS:.0f} m."
             )
         if cells < _BETTER_CELLS:
-            said.append(f"{told}: expect localising to be biased by about {bias:.1f} %.")
+            coarse.append((cells, label))
+    if coarse:
+        cells, label = min(coarse)
+        others = (
+            f" ({counted(len(coarse), 'group', 'groups')} have fewer than {_BETTER_CELLS})" if len(coarse) > 1 else ""
+        )
+        better = cells * grid.cell_m / _BETTER_CELLS
+        said.append(
+            f"95 % of the fixes of the {label} lie within only {cells:.1f} cells{others}: expect localising to be "
+            f"biased by about {_bias(cells):.1f} %; cells of {better:.0f} m would make it {_BETTER_CELLS}."
+        )
     return said
+
+
+def _bias(cells: float) -> float:
+    """Bias of localising expected with so many cells across a range [%]."""
+    return float(np.exp(np.interp(np.log(max(cells, 1)), np.log(_BIAS_CELLS), np.log(_BIAS_PERCENT))))
