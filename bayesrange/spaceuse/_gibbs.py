@@ -53,16 +53,16 @@ def gibbs(
         load = jax.lax.stop_gradient(_perceived(foreign, theta)[1])
         residual, steps = found.residual, found.steps
     code = result_code(law, residual, load, TOLERANCE, domain.inside)
-    return Solution(law, jnp.where(domain.inside, foreign, 0.0), code, steps, residual, load)
+    return Solution(law, jnp.where(domain.inside[None], foreign, 0.0), code, steps, residual, load)
 
 
 def _law(foreign: Float[Array, "groups ny nx"], theta: tuple) -> Float[Array, "groups ny nx"]:
     """Log density of each group given the foreign scent, normalised over the habitable area."""
     potential, avoidance, _, setting = theta
     domain = setting.domain
-    exponent = jnp.where(domain.inside, potential - avoidance[:, None, None] * foreign, -jnp.inf)
+    exponent = jnp.where(domain.inside[None], potential - avoidance[:, None, None] * foreign, -jnp.inf)
     top = jax.lax.stop_gradient(exponent.max((1, 2), keepdims=True))
-    mass = (jnp.exp(exponent - top) * domain.area).sum((1, 2), keepdims=True)
+    mass = (jnp.exp(exponent - top) * domain.area[None]).sum((1, 2), keepdims=True)
     return exponent - top - jnp.log(mass)
 
 
@@ -71,4 +71,4 @@ def _perceived(foreign: Float[Array, "groups ny nx"], theta: tuple) -> tuple[Arr
     setting = theta[3]
     density = jnp.exp(_law(foreign, theta))
     scent, load = foreign_scent(density, setting.marking, theta[2], setting.domain)
-    return jnp.where(setting.domain.inside, scent, 0.0), load
+    return jnp.where(setting.domain.inside[None], scent, 0.0), load

@@ -36,9 +36,9 @@ def log_fix_density(log_density: Float[Array, "groups ny nx"], reading: Reading)
         log_density: log u at cell centres, −inf outside.
         reading: from the fixes and the grid.
     """
-    inside = reading.basis_area > 0
+    basis_area = jnp.asarray(reading.basis_area)[None]
     top = jax.lax.stop_gradient(log_density.max((1, 2), keepdims=True))
-    mass = jnp.where(inside, jnp.exp(log_density - top) * reading.basis_area, 0.0).sum((1, 2))
+    mass = jnp.where(basis_area > 0, jnp.exp(log_density - top) * basis_area, 0.0).sum((1, 2))
     log_mass = jnp.log(mass) + top[:, 0, 0]
     flat = log_density.reshape(log_density.shape[0], -1)
     terms = flat[reading.group[:, None], reading.cell] + reading.log_share

@@ -32,16 +32,16 @@ def marks(
     share = scent / (1 + over_marking * scent)
     load = over_marking * share.sum(0)
     total = share.sum(0) / jnp.maximum(1 - load, CLOSEST)
-    return share * (1 + over_marking * total), load.max()
+    return share * (1 + over_marking * total)[None], load.max()
 
 
 def perceive(field: Float[Array, "groups ny nx"], domain: Domain) -> Float[Array, "groups ny nx"]:
     """K∗field / K∗1 inside the area, K a Gaussian of the perception distance: as two small dense products."""
     groups, ny, nx = field.shape
-    along_x = (field * domain.area).reshape(groups * ny, nx) @ domain.kernel_x.T
+    along_x = (field * domain.area[None]).reshape(groups * ny, nx) @ domain.kernel_x.T
     turned = jnp.swapaxes(along_x.reshape(groups, ny, nx), 1, 2).reshape(groups * nx, ny)
     along_y = (turned @ domain.kernel_y.T).reshape(groups, nx, ny)
-    return jnp.swapaxes(along_y, 1, 2) / domain.perceived_area
+    return jnp.swapaxes(along_y, 1, 2) / domain.perceived_area[None]
 
 
 def foreign_scent(
@@ -53,4 +53,4 @@ def foreign_scent(
     """F̃_i, the perceived scent of all other groups [1], and the load m Q of `marks`."""
     laid, load = marks(marking[:, None, None] * density, over_marking)
     perceived = perceive(laid, domain)
-    return perceived.sum(0) - perceived, load
+    return perceived.sum(0, keepdims=True) - perceived, load
