@@ -42,7 +42,7 @@ def fix_entries(
     for level, (_, nodes) in enumerate(ORDERS):
         chosen = np.flatnonzero(order == level)
         pieces.append(_hermite(grid, chosen, x, y, error_m, nodes, reading))
-    pieces.extend(_cell_masses(grid, np.flatnonzero(order == len(ORDERS)), x, y, error_m))
+    pieces.extend(_cell_masses(grid, np.flatnonzero(order == len(ORDERS)), x, y, error_m, reading))
     fix = np.concatenate([piece[0] for piece in pieces])
     cell = np.concatenate([piece[1] for piece in pieces])
     share = np.concatenate([piece[2] for piece in pieces])
@@ -75,9 +75,10 @@ def _hermite(
 
 
 def _cell_masses(
-    grid: Grid, chosen: np.ndarray, x: np.ndarray, y: np.ndarray, error_m: np.ndarray
+    grid: Grid, chosen: np.ndarray, x: np.ndarray, y: np.ndarray, error_m: np.ndarray, reading: str
 ) -> Iterator[tuple[np.ndarray, np.ndarray, np.ndarray]]:
-    """Entries of wide errors: the Gaussian mass of each cell, times its habitable share."""
+    """Entries of wide errors: the Gaussian mass of each cell, times its share in the density's normaliser."""
+    share = grid.basis_share if reading == "bilinear" else grid.habitable
     half = grid.cell_m / 2
     for k in chosen:
         reach = REACH * error_m[k]
@@ -87,7 +88,7 @@ def _cell_masses(
             ndtr((centre + half - at) / error_m[k]) - ndtr((centre - half - at) / error_m[k])
             for centre, at in ((grid.x_m[columns], x[k]), (grid.y_m[rows], y[k]))
         )
-        mass = np.outer(along_y, along_x) * grid.habitable[np.ix_(rows, columns)]
+        mass = np.outer(along_y, along_x) * share[np.ix_(rows, columns)]
         flat = rows[:, None] * grid.shape[1] + columns[None, :]
         yield np.full(mass.size, k), flat.ravel(), mass.ravel()
 
