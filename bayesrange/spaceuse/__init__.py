@@ -8,7 +8,9 @@ import jax
 jax.config.update("jax_enable_x64", True)
 
 from bayesrange.spaceuse._domain import Domain, make_domain  # noqa: E402
+from bayesrange.spaceuse._flux import flux  # noqa: E402
 from bayesrange.spaceuse._gibbs import gibbs  # noqa: E402
+from bayesrange.spaceuse._pinned import null_density  # noqa: E402
 from bayesrange.spaceuse._reading import Reading, log_fix_density  # noqa: E402
 from bayesrange.spaceuse._solution import (  # noqa: E402
     NO_STEADY_SCENT,
@@ -16,6 +18,7 @@ from bayesrange.spaceuse._solution import (  # noqa: E402
     NOT_FINITE,
     SENTENCES,
     SOLVED,
+    TOO_STEEP,
     Solution,
     SolveError,
 )
@@ -25,7 +28,6 @@ from bayesrange.spaceuse._terms import Parameters, Setting, home_distance, solit
 
 __all__ = [
     "Domain", "NOT_CONVERGED", "NOT_FINITE", "NO_STEADY_SCENT", "Parameters", "Reading", "SENTENCES", "SOLVED",
-    "SOLVERS", "Setting", "Solution", "SolveError", "arrival_scent", "gibbs", "home_distance",
-    "log_fix_density", "make_domain",
-    "solitary_potential", "steady_state",
+    "SOLVERS", "Setting", "Solution", "SolveError", "TOO_STEEP", "arrival_scent", "flux", "gibbs", "home_distance",
+    "log_fix_density", "make_domain", "null_density", "solitary_potential", "steady_state",
 ]  # fmt: skip

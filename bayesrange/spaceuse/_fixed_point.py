@@ -30,17 +30,20 @@ class Iteration(NamedTuple):
 def anderson(
     step: Callable[[Float[Array, " n"]], Float[Array, " n"]],
     start: Float[Array, " n"],
-    tolerance: float = TOLERANCE,
-    max_steps: int = MAX_STEPS,
+    tolerance: float | Float[Array, ""] = TOLERANCE,
+    max_steps: int | Int[Array, ""] = MAX_STEPS,
+    size: float | Float[Array, ""] | None = None,
 ) -> Iteration:
     """Find x = step(x).
 
-    Not differentiable: see `implicit_fixed_point`. Needs MEMORY × 2 vectors of working memory; each step costs one call and
-    MEMORY inner products. A NaN stops the iteration and stays in `residual`.
+    The residual is relative to `size`, or where that is left out to the largest value of x. Not differentiable: see
+    `implicit_fixed_point`. Needs MEMORY × 2 vectors of working memory; each step costs one call and MEMORY inner
+    products. A NaN stops the iteration and stays in `residual`.
     """
 
     def relative(residual: Float[Array, " n"], x: Float[Array, " n"]) -> Float[Array, ""]:
-        return jnp.max(jnp.abs(residual)) / jnp.maximum(jnp.max(jnp.abs(x)), 1e-300)
+        largest = jnp.maximum(jnp.max(jnp.abs(x)), 1e-300) if size is None else size
+        return jnp.max(jnp.abs(residual)) / largest
 
     def unfinished(state: tuple) -> Array:
         count, error = state[0], state[-1]
@@ -69,11 +72,11 @@ def anderson(
 
 
 def implicit_fixed_point(step: Callable, theta, start: Float[Array, " n"]) -> tuple[Float[Array, " n"], Iteration]:
-    """x = step(x, theta) with derivatives by the implicit function theorem.
+    """Solve x = step(x, theta), with derivatives by the implicit function theorem.
 
     One adjoint fixed point serves every parameter: λ = x̄ + (∂step/∂x)ᵀ λ, θ̄ = (∂step/∂θ)ᵀ λ. The start has no
-    derivative: at the solution nothing depends on it. Where the adjoint misses its tolerance the gradient is NaN, so that a
-    sampler rejects the point instead of following a wrong slope.
+    derivative: at the solution nothing depends on it. Where the adjoint misses its tolerance the gradient is NaN, so
+    that a sampler rejects the point instead of following a wrong slope.
 
     Args:
         step: pure function of x and θ; everything it needs is an argument of it.

@@ -9,6 +9,7 @@ SOLVED = 0
 NOT_CONVERGED = 1
 NO_STEADY_SCENT = 2
 NOT_FINITE = 3
+TOO_STEEP = 4
 
 SENTENCES = {
     SOLVED: "The steady state was found.",
@@ -16,6 +17,8 @@ SENTENCES = {
     "strong for these parameters, or two groups share one home.",
     NO_STEADY_SCENT: "Over-marking is so strong that marks grow without bound in at least one cell (m Q ≥ 1).",
     NOT_FINITE: "The steady state is not a number: a parameter is infinite or not a number.",
+    TOO_STEEP: "The drift between two neighbouring cells is beyond what double precision holds (|w| > 600): a term is "
+    "far too strong for cells of this size.",
 }
 
 
@@ -56,7 +59,7 @@ def result_code(
     inside: Array,
 ) -> Int[Array, ""]:
     """Code of a finished solve, the worst first."""
-    bad_number = jnp.any(jnp.isnan(log_density) & inside) | jnp.any(log_density == jnp.inf) | jnp.isnan(residual)
+    bad_number = jnp.any(jnp.isnan(log_density) & inside[None]) | jnp.any(log_density == jnp.inf) | jnp.isnan(residual)
     code = jnp.where(residual <= tolerance, SOLVED, NOT_CONVERGED)
     code = jnp.where(load >= 1, NO_STEADY_SCENT, code)
     return jnp.where(bad_number, NOT_FINITE, code)

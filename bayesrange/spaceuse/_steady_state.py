@@ -4,15 +4,21 @@ from collections.abc import Callable
 
 import numpy as np
 
+from bayesrange.spaceuse._flux import flux
 from bayesrange.spaceuse._gibbs import gibbs
 from bayesrange.spaceuse._solution import SENTENCES, SOLVED, Solution, SolveError
 from bayesrange.spaceuse._terms import Parameters, Setting
 
-SOLVERS: dict[str, Callable[..., Solution]] = {"gibbs": gibbs}
+SOLVERS: dict[str, Callable[..., Solution]] = {"gibbs": gibbs, "flux": flux}
 
 
 def steady_state(
-    parameters: Parameters, setting: Setting, solver: str = "gibbs", coupled: bool = True, throw: bool = False
+    parameters: Parameters,
+    setting: Setting,
+    solver: str = "gibbs",
+    coupled: bool = True,
+    throw: bool = False,
+    **options: object,
 ) -> Solution:
     """Solve 0 = ∇·(∇u_i − u_i s_i), ∫u_i = 1, no flux through the edge, for all groups at once.
 
@@ -22,6 +28,7 @@ def steady_state(
         solver: "gibbs" (gradient drifts) or "flux" (any drift).
         coupled: False where no term of the model uses foreign scent.
         throw: raise where the solve fails, for people; in a likelihood leave it off and read `result`.
+        options: further arguments of the solver, see `gibbs` and `flux`.
 
     Raises:
         ValueError: unknown solver, or `retreat` with "gibbs".
@@ -29,7 +36,7 @@ def steady_state(
     """
     if solver not in SOLVERS:
         raise ValueError(f"`solver` must be one of {', '.join(SOLVERS)}, got {solver!r}.")
-    solution = SOLVERS[solver](parameters, setting, coupled=coupled)
+    solution = SOLVERS[solver](parameters, setting, coupled=coupled, **options)
     if throw:
         if solver == "gibbs" and np.any(np.asarray(parameters.retreat) != 0):
             raise ValueError("`retreat` is not a gradient of a potential: use solver='flux'.")
