@@ -130,8 +130,8 @@ def show_result(run: Run, page: Path, console: Console) -> None:
         table.add_column(name, justify="left" if name in ("parameter", "unit") else "right", overflow="fold")
     for row in run.parameters.itertuples():
         table.add_row(
-            escape(row.parameter), escape(str(row.unit)), number(row.median), f"{number(row.lower)} to {number(row.upper)}",
-            f"{min(row.ess_bulk, row.ess_tail):.0f}", f"{row.rhat:.3f}",
+            escape(row.parameter), escape(str(row.unit)), number(row.median),
+            f"{number(row.lower)} to {number(row.upper)}", f"{min(row.ess_bulk, row.ess_tail):.0f}", f"{row.rhat:.3f}",
         )  # fmt: skip
     console.print(table)
     if run.converged:

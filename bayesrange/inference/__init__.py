@@ -4,6 +4,7 @@ Names load when they are asked for, so that listing cards needs no JAX and a wor
 """
 
 import importlib
+from typing import Any
 
 _WHERE = {
     "Card": "_cards", "cards": "_cards", "find_card": "_cards", "read_card": "_cards",
@@ -19,7 +20,7 @@ _WHERE = {
 __all__ = sorted(_WHERE)
 
 
-def __getattr__(name: str) -> object:
+def __getattr__(name: str) -> Any:
     if name in _WHERE:
         return getattr(importlib.import_module(f"bayesrange.inference.{_WHERE[name]}"), name)
     raise AttributeError(f"module {__name__!r} has no attribute {name!r}")

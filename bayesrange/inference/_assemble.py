@@ -88,7 +88,7 @@ def parameter_dataset(spec: RangeSpec, sites: Sites) -> xr.Dataset:
     """
     variables: dict[str, tuple[tuple[str, ...], np.ndarray, dict[str, str]]] = {}
     for name, value in sites.items():
-        if name == "group_noise":
+        if name.startswith("group_place_"):
             continue
         base, _, part = (
             name.partition("_") if name.split("_")[0] in SIGNED + ("localising", "avoidance") else (name, "", "")

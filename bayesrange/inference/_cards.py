@@ -24,6 +24,9 @@ SIGNED = ("resource",)
 VARYING = ("localising", "avoidance", "resource")
 """Parameters that may differ between groups under `pooling = "hierarchical"`."""
 
+PER_LENGTH = ("localising", "retreat")
+"""Parameters in 1/km: only their priors may be `scaled_by` the home length."""
+
 _KEYS = {"name", "kind", "title", "terms", "solver", "says", "use_when", "not_when", "priors", "between_groups"} | {
     "covariate_effect", "references"
 }  # fmt: skip
@@ -78,13 +81,16 @@ class Card:
 
 
 def find_card(name: str, folder: Path | None = None) -> Path:
-    """File of a card: in the study's folder first, then among those that come with the package."""
+    """File of a card: in the study's folder first, then among those that come with the package.
+
+    A study file that has a card's name is not taken for one.
+    """
     if Path(name).name != name:
         raise StudyError(f"[model] card: expected the name of a card without a folder, got {name!r}.")
     places = [place for place in (folder, models_folder()) if place is not None]
     for place in places:
         file = place / f"{name}.toml"
-        if file.is_file():
+        if file.is_file() and not _has_key(file, "study"):
             return file
     known = sorted(file.stem for file in models_folder().glob("*.toml"))
     near = get_close_matches(name, known, 1)
@@ -110,6 +116,29 @@ def read_card(file: Path) -> Card:
         near = get_close_matches(unknown[0], _KEYS, 1)
         hint = f" Did you mean {near[0]}?" if near else ""
         raise StudyError(f"{file.name}, {unknown[0]}: a model card has no such key.{hint}")
+    terms, solver = _terms_and_solver(table, file)
+    wanted = [TERMS[term] for term in terms] + (["over_marking"] if set(terms) & set(SCENT_TERMS) else [])
+    priors = _read_priors(table.get("priors", {}), file, "priors")
+    _only(priors, wanted, file, "priors")
+    missing = [name for name in wanted if name not in priors]
+    if missing:
+        raise StudyError(
+            f"{file.name}: no prior for {', '.join(missing)}; write [priors.{missing[0]}] with family and numbers."
+        )
+    words = {key: " ".join(str(table.get(key, "")).split()) for key in ("title", "says", "use_when", "not_when")}
+    references = table.get("references", [])
+    if not isinstance(references, list) or any(not isinstance(entry, dict) for entry in references):
+        raise StudyError(f"{file.name}, references: expected tables [[references]] with a text each.")
+    return Card(
+        name=file.stem, terms=terms, solver=solver, priors=priors,
+        between_groups=_read_between(table.get("between_groups", {}), file, [n for n in wanted if n in VARYING]),
+        covariate_effect=_read_effect(table, file),
+        references=tuple(str(entry.get("text", "")) for entry in references),
+        file=file, kind=str(table.get("kind", "range")), **words,
+    )  # fmt: skip
+
+
+def _terms_and_solver(table: dict[str, Any], file: Path) -> tuple[tuple[str, ...], str]:
     terms = table.get("terms")
     if not isinstance(terms, list) or not terms or any(term not in TERMS for term in terms):
         raise StudyError(f"{file.name}, terms: expected a list with some of {', '.join(TERMS)}, got {terms!r}.")
@@ -120,28 +149,7 @@ def read_card(file: Path) -> Card:
         raise StudyError(
             f'{file.name}, solver: expected "flux"{"" if "retreat" in terms else ' or "gibbs"'}, got {solver!r}.'
         )
-    priors = _read_priors(table.get("priors", {}), file, "priors")
-    wanted = [TERMS[term] for term in terms] + (["over_marking"] if set(terms) & set(SCENT_TERMS) else [])
-    missing = [name for name in wanted if name not in priors]
-    if missing:
-        raise StudyError(
-            f"{file.name}: no prior for {', '.join(missing)}; write [priors.{missing[0]}] with family and numbers."
-        )
-    superfluous = [name for name in priors if name not in wanted]
-    if superfluous:
-        raise StudyError(f"{file.name}, [priors.{superfluous[0]}]: no term of this card has such a parameter.")
-    effect = read_prior(
-        table.get("covariate_effect", {"family": "normal", "mean": 0.0, "sd": 0.5}),
-        f"{file.name}, [covariate_effect]",
-        False,
-    )
-    words = {key: " ".join(str(table.get(key, "")).split()) for key in ("title", "says", "use_when", "not_when")}
-    references = tuple(str(entry.get("text", "")) for entry in table.get("references", []))
-    return Card(
-        name=file.stem, terms=tuple(terms), solver=solver, priors=priors,
-        between_groups=_read_priors(table.get("between_groups", {}), file, "between_groups", positive=True),
-        covariate_effect=effect, references=references, file=file, kind=str(table.get("kind", "range")), **words,
-    )  # fmt: skip
+    return tuple(terms), solver
 
 
 def cards(folder: Path | None = None) -> list[Card]:
@@ -150,16 +158,15 @@ def cards(folder: Path | None = None) -> list[Card]:
     Args:
         folder: a study's folder; None for the package's own cards only.
     """
-    found = [read_card(file) for file in sorted(models_folder().glob("*.toml"))]
+    found = [read_card(file) for file in sorted(models_folder().glob("*.toml"), key=lambda file: file.stem)]
     if folder is not None:
-        own = [file for file in sorted(folder.glob("*.toml")) if _is_card(file)]
-        found += [read_card(file) for file in own]
+        found += [read_card(file) for file in sorted(folder.glob("*.toml")) if _has_key(file, "terms")]
     return found
 
 
-def _is_card(file: Path) -> bool:
+def _has_key(file: Path, key: str) -> bool:
     try:
-        return "terms" in tomllib.loads(file.read_text(encoding="utf-8"))
+        return key in tomllib.loads(file.read_text(encoding="utf-8"))
     except (tomllib.TOMLDecodeError, UnicodeDecodeError):
         return False
 
@@ -167,7 +174,44 @@ def _is_card(file: Path) -> bool:
 def _read_priors(table: Any, file: Path, section: str, positive: bool = False) -> dict[str, Prior]:
     if not isinstance(table, dict) or any(not isinstance(value, dict) for value in table.values()):
         raise StudyError(f"{file.name}, [{section}]: expected one table a parameter, such as [{section}.localising].")
-    return {
-        name: read_prior(value, f"{file.name}, [{section}.{name}]", positive or name not in SIGNED)
-        for name, value in table.items()
-    }
+    priors = {}
+    for name, value in table.items():
+        where = f"{file.name}, [{section}.{name}]"
+        priors[name] = read_prior(value, where, positive or name not in SIGNED)
+        if priors[name].scaled_by and (name not in PER_LENGTH or section != "priors"):
+            raise StudyError(f"{where}: `scaled_by` is for priors of {' and '.join(PER_LENGTH)}; take it out here.")
+    return priors
+
+
+def _only(priors: dict[str, Prior], wanted: list[str], file: Path, section: str) -> None:
+    for name in priors:
+        if name not in wanted:
+            raise StudyError(
+                f"{file.name}, [{section}.{name}]: no term of this card has such a parameter; expected "
+                f"{', '.join(wanted) or 'none'}."
+            )
+
+
+def _read_between(table: Any, file: Path, wanted: list[str]) -> dict[str, Prior]:
+    """Priors of the spread between groups: half-normal, on the unconstrained scale."""
+    between = _read_priors(table, file, "between_groups", positive=True)
+    _only(between, wanted, file, "between_groups")
+    for name, prior in between.items():
+        if prior.family != "half-normal":
+            raise StudyError(
+                f"{file.name}, [between_groups.{name}]: the spread between groups takes a half-normal, got "
+                f"{prior.family}."
+            )
+    return between
+
+
+def _read_effect(table: dict[str, Any], file: Path) -> Prior:
+    """Prior of a covariate's coefficient: normal around 0."""
+    where = f"{file.name}, [covariate_effect]"
+    given = table.get("covariate_effect", {"family": "normal", "mean": 0.0, "sd": 0.5})
+    if not isinstance(given, dict):
+        raise StudyError(f"{where}: expected a table with family, mean and sd, got {given!r}.")
+    effect = read_prior(given, where, False)
+    if effect.family != "normal" or effect.numbers[0] != 0 or effect.scaled_by:
+        raise StudyError(f"{where}: expected a normal with mean 0, not scaled, got {effect.in_words()}.")
+    return effect

@@ -24,7 +24,7 @@ from bayesrange.inference._scales import Scales, make_scales
 from bayesrange.inference._task import Task, chain_folder, save_task
 from bayesrange.study import Study, Weights, autocorrelation_weights, read_study
 
-LEAPFROGS = 7
+LEAPFROGS, LEAPFROGS_HIERARCHICAL = 7, 35
 """Gradients a transition that the cost estimate reckons with: seen with the metric from the mode."""
 
 PRIOR_DRAWS = 4000
@@ -152,7 +152,7 @@ def _refuse_changes(checkpoints: Path, prepared: Prepared) -> None:
 def _cost(task: Task, seconds: float, gib: float, at_once: int) -> dict[str, float]:
     """What sampling will take: minutes on this machine and GiB of memory."""
     rounds = -(-task.chains // at_once)
-    gradients = (task.warmup + task.draws) * LEAPFROGS
+    gradients = (task.warmup + task.draws) * (LEAPFROGS_HIERARCHICAL if task.spec.varying else LEAPFROGS)
     return {
         "minutes": rounds * (gradients * seconds + task.draws * seconds + 15) / 60,
         "gib": at_once * gib,
@@ -185,8 +185,8 @@ def _write(folder: Path, prepared: Prepared, seconds: float, gib: float) -> None
     partial = folder / "checkpoints" / "posterior.nc"
     tree.to_netcdf(partial, engine="h5netcdf")
     partial.replace(folder / "posterior.nc")
-    costs = {"sampling_s": round(sum(derived.seconds), 1), "gradient_s": round(seconds, 5), "worker_gib": round(gib, 2)}
-    write_json(folder / "run.json", _describe(prepared, diagnostics, costs))
+    times = {"sampling_s": round(sum(derived.seconds), 1), "gradient_s": round(seconds, 5)}
+    write_json(folder / "run.json", _describe(prepared, diagnostics, times, round(gib, 2)))
 
 
 def _prior_draws(task: Task) -> dict[str, np.ndarray]:
@@ -200,7 +200,7 @@ def _prior_draws(task: Task) -> dict[str, np.ndarray]:
     return {name: np.asarray(value) for name, value in program.prior_draws(keys, data).items()}
 
 
-def _describe(prepared: Prepared, diagnostics: Any, costs: dict[str, Any]) -> dict[str, Any]:
+def _describe(prepared: Prepared, diagnostics: Any, times: dict[str, float], worker_gib: float) -> dict[str, Any]:
     """run.json."""
     study, card, task = prepared.study, prepared.card, prepared.task
     settings, weights, home_length = study.settings, prepared.weights, prepared.scales.home_length_km
@@ -226,7 +226,7 @@ def _describe(prepared: Prepared, diagnostics: Any, costs: dict[str, Any]) -> di
             "target_accept": task.target_accept,
         },
         "versions": {"bayesrange": bayesrange.__version__, **{name: version(name) for name in LIBRARIES}},
-        "finished": datetime.now(UTC).isoformat(timespec="seconds"), "times": {name: costs[name] for name in ("sampling_s", "gradient_s")}, "worker_gib": costs["worker_gib"],
+        "finished": datetime.now(UTC).isoformat(timespec="seconds"), "times": times, "worker_gib": worker_gib,
         "counts": study.counts,
         "effective": {
             "fixes": count, "effective": float(task.data.weight.sum()), "sentence": sentence, "animals": animals,

@@ -18,10 +18,20 @@ from jaxtyping import Array, Float, Int
 from numpyro.infer.hmc import hmc
 from numpyro.infer.util import constrain_fn, potential_energy, unconstrain_fn
 
+from bayesrange.inference._centring import typical
 from bayesrange.inference._derived import ISOPLETHS, isopleth_levels, overlaps, rank_mass
 from bayesrange.inference._priors import POSITIVE
 from bayesrange.inference._range_data import RangeData, RangeSpec
-from bayesrange.inference._range_model import log_likelihood, range_model, sample_parameters
+from bayesrange.inference._range_model import (
+    Hierarchy,
+    coefficient_rows,
+    log_likelihood,
+    place_groups,
+    range_model,
+    sample_hierarchy,
+    sample_parameters,
+    walk_coefficients,
+)
 from bayesrange.spaceuse import SOLVED, Parameters, arrival_scent, gibbs
 
 MAX_TREE_DEPTH = 10
@@ -67,7 +77,9 @@ class Program:
         self.spec, self.warmup, self.target_accept, self.chunk = spec, warmup, target_accept, chunk
         self.model = partial(range_model, spec)
         self.prior = partial(sample_parameters, spec)
-        flat, self._unravel = ravel_pytree(self.first_guess(data))
+        guess = self.first_guess(data)
+        flat, self._unravel = ravel_pytree(guess)
+        self._layout = {name: value.shape for name, value in guess.items()}
         self.dimension = flat.size
         self._init_kernel, self._sample_kernel = hmc(potential_fn_gen=self.potential_in_w, algo="NUTS")
 
@@ -111,6 +123,43 @@ class Program:
         plain = Whitening(jnp.zeros(self.dimension), jnp.eye(self.dimension))
         state = self.begin(z, jax.random.key_data(jax.random.key(0)), data, plain)
         return state.potential_energy, state.z_grad["w"]
+
+    def apart(self) -> np.ndarray:
+        """Which coordinates are spreads and correlations of a hierarchy."""
+        marks = {name: name.endswith("_spread") or name == "group_correlation" for name in self._layout}
+        filled = {name: jnp.full(shape, marks[name], float) for name, shape in self._layout.items()}
+        return np.asarray(ravel_pytree(filled)[0]) > 0
+
+    def centred(self, z: np.ndarray, curvature: np.ndarray, data: RangeData) -> tuple[np.ndarray, RangeData]:
+        """A typical point near the mode, in the coordinates that suit how much each group's fixes say.
+
+        Args:
+            z: mode with `centring` 0.
+            curvature: curvature there. For a group's coefficient it is 1 (prior) + s² × information of the fixes.
+            data: with `centring` 0.
+
+        Returns:
+            The point in the new coordinates, and the data with its `centring` (see `walk_coefficients`).
+        """
+        values = constrain_fn(self.prior, (data,), {}, self._unravel(z))
+        hierarchy = numpyro.handlers.substitute(partial(sample_hierarchy, self.spec), values)(data)
+        count = hierarchy.spread.size
+        sites = [f"group_place_{k}" for k in range(count)]
+        eta = walk_coefficients(hierarchy, jnp.asarray(data.centring), lambda k, centre, width: values[sites[k]])
+        diagonal = self._unravel(jnp.diag(jnp.asarray(curvature)))
+        found = []
+        for k, scale in enumerate(np.asarray(data.spread_scale)):
+            sd = float(hierarchy.spread[k] * hierarchy.factor[k, k])
+            information = (np.asarray(diagonal[sites[k]]) - 1.0) / sd**2
+            found.append(typical(*(np.asarray(v)[:, k] for v in (eta, hierarchy.expected)), sd, information, scale))
+        new = data._replace(centring=jnp.stack([jnp.asarray(one.centring) for one in found], axis=1))
+        spread = jnp.array([one.spread for one in found])
+        at = Hierarchy(hierarchy.expected, spread, jnp.eye(count))
+        values |= place_groups(jnp.stack([jnp.asarray(one.values) for one in found], axis=1), at, new.centring)
+        values |= {f"{name}_spread": spread[own] for name, own in coefficient_rows(self.spec).items()}
+        if count > 1:
+            values["group_correlation"] = jnp.eye(count)
+        return np.asarray(ravel_pytree(unconstrain_fn(self.prior, (new,), {}, values))[0]), new
 
     # --- sampler -----------------------------------------------------------------------------------------------
 

@@ -5,7 +5,6 @@ import numpy as np
 from bayesrange._errors import StudyError
 from bayesrange.inference._cards import VARYING, Card
 from bayesrange.inference._fix_entries import fix_entries
-from bayesrange.inference._priors import Prior
 from bayesrange.inference._range_data import RangeData, RangeSpec
 from bayesrange.inference._scales import Scales
 from bayesrange.spaceuse import Reading, Setting, make_domain
@@ -23,7 +22,7 @@ def make_spec(study: Study, card: Card) -> RangeSpec:
     """
     model, where = study.settings.model, study.path.name
     _check_card(study, card)
-    needs_home = "localising" in card.terms
+    needs_home = not {"localising", "retreat"}.isdisjoint(card.terms)
     hierarchical = model.pooling == "hierarchical"
     if model.covariates and not hierarchical:
         raise StudyError(f'{where}, [model] covariates: covariates of groups need pooling = "hierarchical".')
@@ -100,6 +99,8 @@ def code_covariates(study: Study) -> list[tuple[str, np.ndarray]]:
             raise StudyError(f"{where}: column {name!r} of the groups table has the same value for every group.")
         if column.dtype.kind in "iuf":
             values = column.to_numpy(float)
+            if not np.isfinite(values).all():
+                raise StudyError(f"{where}: column {name!r} of the groups table holds a number that is not finite.")
             coded.append((name, (values - values.mean()) / values.std()))
             continue
         for level in sorted(column.astype(str).unique())[1:]:
@@ -151,6 +152,7 @@ def make_data(study: Study, card: Card, spec: RangeSpec, scales: Scales, weight:
         grid.x_m[columns.max()] + half,
         grid.y_m[rows.max()] + half,
     ]
+    spread_scale = np.array([_spread(card, name) for name in spec.varying for _ in range(_copies(name, spec))])
     coded = [values for _, values in code_covariates(study)]
     return RangeData(
         setting=make_setting(study, scales, spec),
@@ -159,9 +161,10 @@ def make_data(study: Study, card: Card, spec: RangeSpec, scales: Scales, weight:
         home=first_homes(study) / 1000,
         box=np.array(box) / 1000,
         priors={name: np.array(card.priors[name].scaled(scales.home_length_km).numbers) for name, _ in spec.families},
-        spread_scale=np.array([_spread(card, name) for name in spec.varying for _ in range(_copies(name, spec))]),
+        spread_scale=spread_scale,
         covariates=np.stack(coded, axis=1) if coded else np.zeros((len(groups), 0)),
         effect_sd=np.asarray(card.covariate_effect.numbers[1]),
+        centring=np.zeros((len(groups), spread_scale.size)),
     )
 
 
@@ -180,10 +183,9 @@ def _copies(name: str, spec: RangeSpec) -> int:
 
 
 def _spread(card: Card, name: str) -> float:
-    prior = card.between_groups.get(name, Prior("half-normal", (0.5,)))
-    if prior.family != "half-normal":
+    if name not in card.between_groups:
         raise StudyError(
-            f"{card.file.name}, [between_groups.{name}]: the spread between groups takes a half-normal, got "
-            f"{prior.family}."
+            f'{card.file.name}: pooling = "hierarchical" needs a prior of the spread between groups; write '
+            f'[between_groups.{name}] with family = "half-normal" and a scale.'
         )
-    return prior.numbers[0]
+    return card.between_groups[name].numbers[0]

@@ -58,6 +58,7 @@ class RangeData(NamedTuple):
         spread_scale: half-normal scale of the spread between groups of each varying coefficient.
         covariates: coded covariates of each group, mean 0.
         effect_sd: prior sd of a covariate's coefficient.
+        centring: share of centring of each group's coefficients (see `walk_coefficients`); 0 until the mode is known.
     """
 
     setting: Setting
@@ -69,3 +70,4 @@ class RangeData(NamedTuple):
     spread_scale: Float[Array, " varying"]
     covariates: Float[Array, "groups covariates"]
     effect_sd: Float[Array, ""]
+    centring: Float[Array, "groups varying"]

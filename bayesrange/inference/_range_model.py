@@ -1,11 +1,16 @@
 """NumPyro model of the range cards: priors, then one tested likelihood.
 
 Site names are the parameter names of the cards; units are those of the numerics (km). With hierarchical pooling the
-unconstrained values of group a are η_a = μ + C z_a + L ξ_a, ξ_a ~ N(0, 1) (non-centred); positive parameters are
-exp(η). `X_population` is then the value of the median group at covariates of mean 0, `X_spread` the sd on the
-unconstrained scale, `X_effect` the coefficients of the covariates, `X` the groups' own values.
+unconstrained values of group a are η_a = μ + C z_a + s L ξ_a, ξ_a ~ N(0, 1), sampled in the coordinates of
+`walk_coefficients`; positive parameters are exp(η). `X_population` is then the value of the median group at covariates
+of mean 0, `X_spread` the sd on the unconstrained scale, `X_effect` the coefficients of the covariates, `X` the groups'
+own values.
 """
 
+from collections.abc import Callable
+from typing import NamedTuple
+
+import jax
 import jax.numpy as jnp
 import numpyro
 import numpyro.distributions as dist
@@ -84,24 +89,100 @@ def _homes(spec: RangeSpec, data: RangeData) -> Float[Array, "groups 2"]:
     return jnp.asarray(data.home).at[index].set(jnp.stack([x, y], axis=1))
 
 
+class Hierarchy(NamedTuple):
+    """Where groups' coefficients are expected and how far they spread, on the unconstrained scale.
+
+    Attributes:
+        expected: μ_g of each coefficient and group: the population value and the covariates' share.
+        spread: sd between groups of each coefficient.
+        factor: Cholesky factor of the correlation between a group's coefficients.
+    """
+
+    expected: Float[Array, "groups coefficients"]
+    spread: Float[Array, " coefficients"]
+    factor: Float[Array, "coefficients coefficients"]
+
+
+def sample_hierarchy(spec: RangeSpec, data: RangeData) -> Hierarchy:
+    """Draw what groups have in common from its prior."""
+    expected, spreads = [], []
+    for name, own in coefficient_rows(spec).items():
+        count = own.stop - own.start
+        centre = _population(spec, data, name, f"{name}_population")
+        centre = jnp.broadcast_to(centre if name in SIGNED else jnp.log(centre), (count,))
+        scale = jnp.asarray(data.spread_scale)[own]
+        spreads.append(numpyro.sample(f"{name}_spread", dist.HalfNormal(scale).to_event(1)))
+        mean = jnp.broadcast_to(centre, (len(spec.groups), count))
+        if spec.covariates:
+            prior = dist.Normal(0.0, data.effect_sd).expand([count, len(spec.covariates)]).to_event(2)
+            mean = mean + jnp.asarray(data.covariates) @ numpyro.sample(f"{name}_effect", prior).T
+        expected.append(mean)
+    mean, spread = jnp.concatenate(expected, axis=1), jnp.concatenate(spreads)
+    if spread.size == 1:
+        return Hierarchy(mean, spread, jnp.ones((1, 1)))
+    return Hierarchy(mean, spread, numpyro.sample("group_correlation", dist.LKJCholesky(spread.size, CORRELATION)))
+
+
+def coefficient_rows(spec: RangeSpec) -> dict[str, slice]:
+    """Which coefficients of the hierarchy belong to each varying parameter: one, or one a layer for `resource`."""
+    rows, first = {}, 0
+    for name in spec.varying:
+        count = len(spec.layers) if name == "resource" else 1
+        rows[name] = slice(first, first + count)
+        first += count
+    return rows
+
+
+def walk_coefficients(
+    hierarchy: Hierarchy,
+    centring: Float[Array, "groups coefficients"],
+    place: Callable[[int, Float[Array, " groups"], Float[Array, " groups"]], Float[Array, " groups"]],
+) -> Float[Array, "groups coefficients"]:
+    """Groups' coefficients η, one after another, each given those before it.
+
+    Coefficient k has mean m = μ_k + s_k Σ_{j<k} L_kj ξ_j and sd σ = s_k L_kk given the earlier ones, ξ_j their
+    innovations. It is sampled as ζ ~ N(c m, σ^c), η = m + σ^(1−c) (ζ − c m). c = 0 is the non-centred form, c = 1 the
+    centred one. Where the fixes of a group say more about its coefficient than the population does, the centred form
+    has the simpler geometry, and the other way round (Papaspiliopoulos, Roberts & Sköld 2007, Statistical Science
+    22:59). The posterior is the same for every c.
+
+    Args:
+        hierarchy: what groups have in common.
+        centring: c.
+        place: (k, c m, σ^c) → ζ of coefficient k.
+    """
+    etas: list[Array] = []
+    noise: list[Array] = []
+    for k in range(hierarchy.spread.size):
+        earlier = sum((hierarchy.factor[k, j] * noise[j] for j in range(k)), jnp.zeros(centring.shape[0]))
+        mean = hierarchy.expected[:, k] + hierarchy.spread[k] * earlier
+        sd = hierarchy.spread[k] * hierarchy.factor[k, k]
+        c = centring[:, k]
+        etas.append(mean + sd ** (1 - c) * (place(k, c * mean, sd**c) - c * mean))
+        noise.append((etas[-1] - mean) / sd)
+    return jnp.stack(etas, axis=1)
+
+
+def place_groups(
+    eta: Float[Array, "groups coefficients"], hierarchy: Hierarchy, centring: Float[Array, "groups coefficients"]
+) -> dict[str, Array]:
+    """Sites ζ that `walk_coefficients` turns into given coefficients η."""
+    scaled = (eta - hierarchy.expected) / hierarchy.spread
+    noise = jax.scipy.linalg.solve_triangular(hierarchy.factor, scaled.T, lower=True).T
+    sd = hierarchy.spread * jnp.diag(hierarchy.factor)
+    mean = eta - sd * noise
+    place = centring * mean + sd**centring * noise
+    return {f"group_place_{k}": place[:, k] for k in range(sd.size)}
+
+
 def _by_group(spec: RangeSpec, data: RangeData) -> dict[str, Array]:
     """Values of each group for the varying parameters: (groups,), or (layers, groups) for `resource`."""
-    groups, size = len(spec.groups), {name: len(spec.layers) if name == "resource" else 1 for name in spec.varying}
-    rows = sum(size.values())
-    noise = numpyro.sample("group_noise", dist.Normal(0.0, 1.0).expand([rows, groups]).to_event(2))
-    if rows > 1:
-        noise = numpyro.sample("group_correlation", dist.LKJCholesky(rows, CORRELATION)) @ noise
+
+    def place(k: int, centre: Array, width: Array) -> Array:
+        return numpyro.sample(f"group_place_{k}", dist.Normal(centre, width).to_event(1))
+
+    eta = walk_coefficients(sample_hierarchy(spec, data), jnp.asarray(data.centring), place)
     values: dict[str, Array] = {}
-    first = 0
-    for name in spec.varying:
-        own = slice(first, first + size[name])
-        first += size[name]
-        centre = _population(spec, data, name, f"{name}_population")
-        spread_prior = dist.HalfNormal(jnp.asarray(data.spread_scale)[own]).to_event(1)
-        spread = numpyro.sample(f"{name}_spread", spread_prior)
-        eta = (centre if name in SIGNED else jnp.log(centre)[None])[:, None] + spread[:, None] * noise[own]
-        if spec.covariates:
-            prior = dist.Normal(0.0, data.effect_sd).expand([size[name], len(spec.covariates)]).to_event(2)
-            eta = eta + numpyro.sample(f"{name}_effect", prior) @ jnp.asarray(data.covariates).T
-        values[name] = numpyro.deterministic(name, eta if name in SIGNED else jnp.exp(eta[0]))
+    for name, own in coefficient_rows(spec).items():
+        values[name] = numpyro.deterministic(name, eta[:, own].T if name in SIGNED else jnp.exp(eta[:, own.start]))
     return values

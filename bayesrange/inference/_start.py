@@ -8,28 +8,54 @@ from scipy.optimize import minimize
 
 STEP = 1e-3
 """Step of the central differences of the gradient, on the unconstrained space."""
+APART = (0.3, 1.0)
+"""Least and largest scale of a log spread or a correlation's coordinate: 1 is about what its prior leaves open."""
 FLATTEST = 0.05
 """Least curvature taken seriously: an sd of 4.5 on the unconstrained space, beyond any prior here."""
 
 
 class Start(NamedTuple):
-    """Mode on the unconstrained space, and a factor of the inverse curvature there.
+    """Mode on the unconstrained space, and the curvature there.
 
     Attributes:
         mode: position of the largest density that was found.
-        scale: lower-triangular L with L Lᵀ = inverse curvature.
+        curvature: second derivatives of the potential at the mode, by central differences of the gradient.
         potential: negative log density at the mode.
         evaluations: calls of value and gradient.
     """
 
     mode: np.ndarray
-    scale: np.ndarray
+    curvature: np.ndarray
     potential: float
     evaluations: int
 
 
-def find_start(value_and_gradient: Callable[[np.ndarray], tuple[float, np.ndarray]], guess: np.ndarray) -> Start:
-    """Mode by L-BFGS from a guess, curvature by central differences of the gradient.
+def whitening_scale(curvature: np.ndarray, apart: np.ndarray) -> np.ndarray:
+    """Factor L of the sampler's coordinates z = mode + L w, from the curvature.
+
+    L Lᵀ is the inverse curvature; directions flatter than `FLATTEST` count as that flat. Spreads and correlations of a
+    hierarchy stand apart: the curvature at one spread says little about another, so that they get a scale of their
+    own and no correlation with the rest.
+
+    Args:
+        curvature: second derivatives of the potential.
+        apart: True for the coordinates that stand apart.
+    """
+    scale = np.zeros_like(curvature)
+    rest = np.flatnonzero(~apart)
+    values, vectors = np.linalg.eigh(curvature[np.ix_(rest, rest)])
+    covariance = (vectors / np.maximum(np.abs(values), FLATTEST)) @ vectors.T
+    scale[np.ix_(rest, rest)] = np.linalg.cholesky(covariance)
+    own = np.flatnonzero(apart)
+    scale[own, own] = np.clip(1 / np.sqrt(np.maximum(curvature[own, own], 1e-12)), *APART)
+    return scale
+
+
+ValueAndGradient = Callable[[np.ndarray], tuple[float, np.ndarray]]
+
+
+def find_start(value_and_gradient: ValueAndGradient, guess: np.ndarray) -> Start:
+    """Mode by L-BFGS from a guess, and the curvature at it.
 
     Args:
         value_and_gradient: potential and gradient at a position; may be infinite.
@@ -52,15 +78,18 @@ def find_start(value_and_gradient: Callable[[np.ndarray], tuple[float, np.ndarra
     first, _ = guarded(guess)
     if first >= 1e30:
         raise FloatingPointError("The log-density is not finite where the search for its mode begins.")
-    found = minimize(
-        guarded, guess, jac=True, method="L-BFGS-B", options={"maxiter": 500, "maxcor": 20, "ftol": 1e-13, "gtol": 1e-5}
-    )
+    options = {"maxiter": 500, "maxcor": 20, "ftol": 1e-13, "gtol": 1e-5}
+    found = minimize(guarded, guess, jac=True, method="L-BFGS-B", options=options)
     mode = found.x if found.fun <= first else guess
-    curvature = np.empty((mode.size, mode.size))
-    for i in range(mode.size):
-        step = np.zeros(mode.size)
+    return Start(mode, curvature_at(guarded, mode), float(min(found.fun, first)), count)
+
+
+def curvature_at(value_and_gradient: ValueAndGradient, z: np.ndarray) -> np.ndarray:
+    """Second derivatives of the potential at z, by central differences of its gradient."""
+    curvature = np.empty((z.size, z.size))
+    for i in range(z.size):
+        step = np.zeros(z.size)
         step[i] = STEP
-        curvature[i] = (guarded(mode + step)[1] - guarded(mode - step)[1]) / (2 * STEP)
-    values, vectors = np.linalg.eigh((curvature + curvature.T) / 2)
-    covariance = (vectors / np.maximum(np.abs(values), FLATTEST)) @ vectors.T
-    return Start(mode, np.linalg.cholesky(covariance), float(min(found.fun, first)), count)
+        ahead, behind = (np.asarray(value_and_gradient(z + side * step)[1], float) for side in (1, -1))
+        curvature[i] = (ahead - behind) / (2 * STEP)
+    return (curvature + curvature.T) / 2

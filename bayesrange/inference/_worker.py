@@ -38,7 +38,7 @@ def _start(folder: Path) -> None:
     from jax.flatten_util import ravel_pytree
 
     from bayesrange.inference._program import Program, Whitening, as_arrays
-    from bayesrange.inference._start import find_start
+    from bayesrange.inference._start import curvature_at, find_start, whitening_scale
     from bayesrange.inference._task import CHUNK, load_task, save_arrays
 
     task = load_task(folder)
@@ -48,21 +48,28 @@ def _start(folder: Path) -> None:
     guess = np.asarray(ravel_pytree(program.first_guess(data))[0])
     program.value_and_gradient(jnp.asarray(guess), data)
     _say(stage="mode")
-    start = find_start(lambda z: program.value_and_gradient(jnp.asarray(z), data), guess)
+
+    def density(z: np.ndarray) -> Any:
+        return program.value_and_gradient(jnp.asarray(z), data)
+
+    start = find_start(density, guess)
+    if task.spec.varying:
+        mode, data = program.centred(start.mode, start.curvature, data)
+        start = start._replace(mode=mode, curvature=curvature_at(density, mode))
+    scale = whitening_scale(start.curvature, program.apart())
     times = []
     for _ in range(5):
         begun = time.perf_counter()
         jax.block_until_ready(program.value_and_gradient(jnp.asarray(start.mode), data))
         times.append(time.perf_counter() - begun)
-    whitening = Whitening(jnp.asarray(start.mode), jnp.asarray(start.scale))
+    whitening = Whitening(jnp.asarray(start.mode), jnp.asarray(scale))
     state = program.begin(jnp.zeros(program.dimension), _key(task.seed, 0), data, whitening)
     program.advance.lower(state, 1, data, whitening).compile()
     program.derive.lower(whitening.mode, data).compile()
     program.constrain.lower(jnp.zeros((task.draws, program.dimension)), data).compile()
-    save_arrays(
-        folder / "start.npz", mode=start.mode, scale=start.scale, potential=np.array(start.potential),
-        seconds_per_gradient=np.array(np.median(times)), peak_gib=np.array(_peak_gib()),
-    )  # fmt: skip
+    arrays = {"mode": start.mode, "scale": scale, "centring": np.asarray(data.centring), "potential": start.potential}
+    arrays |= {"seconds_per_gradient": np.median(times), "peak_gib": _peak_gib()}
+    save_arrays(folder / "start.npz", **{name: np.asarray(value) for name, value in arrays.items()})
     _say(
         stage="started", seconds_per_gradient=float(np.median(times)), peak_gib=_peak_gib(), dimension=program.dimension
     )
@@ -83,6 +90,7 @@ def _chain(folder: Path, chain: int) -> int:
     program = Program(task.spec, data, task.warmup, task.target_accept, CHUNK)
     with np.load(folder / "start.npz") as start:
         whitening = Whitening(jnp.asarray(start["mode"]), jnp.asarray(start["scale"]))
+        data = data._replace(centring=jnp.asarray(start["centring"]))
     parts = load_parts(own)
     done = sum(part["count"] for part in parts)
     program.ready(data, whitening)
