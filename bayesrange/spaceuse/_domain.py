@@ -51,7 +51,9 @@ def make_domain(x: np.ndarray, y: np.ndarray, area: np.ndarray, perception: floa
     """
     x, y, area = np.asarray(x, float), np.asarray(y, float), np.asarray(area, float)
     if area.shape != (y.size, x.size):
-        raise ValueError(f"`area` must have one row per `y` and one column per `x`, {(y.size, x.size)}, got {area.shape}.")
+        raise ValueError(
+            f"`area` must have one row per `y` and one column per `x`, {(y.size, x.size)}, got {area.shape}."
+        )
     if perception < 0:
         raise ValueError(f"`perception` is a distance in km and cannot be negative, got {perception}.")
     kernel_x, kernel_y = _gaussian(x, perception), _gaussian(y, perception)
