@@ -39,8 +39,8 @@ class Diagnostics:
         return not self.problems
 
     def as_json(self) -> dict[str, Any]:
-        """Plain numbers for run.json."""
-        return asdict(self)
+        """Plain numbers for run.json; null where a figure cannot be computed (JSON knows no NaN)."""
+        return {k: v if not isinstance(v, float) or np.isfinite(v) else None for k, v in asdict(self).items()}
 
 
 def diagnose(
@@ -60,9 +60,10 @@ def diagnose(
     lp = -stats["potential"]
     axes = {"chain_axis": 0, "draw_axis": 1}
     rhat_lp = float(array_stats.rhat(lp, **axes))
-    rhat = max(float(table["rhat"][~individual].max()), rhat_lp)
-    bulk = min(float(table["ess_bulk"].min()), float(array_stats.ess(lp, **axes)))
-    tail = float(table["ess_tail"].min())
+    # A figure that cannot be computed (NaN) must not be passed over: np.max and np.min keep it.
+    rhat = float(np.max([*table["rhat"][~individual], rhat_lp]))
+    bulk = float(np.min([*table["ess_bulk"], float(array_stats.ess(lp, **axes))]))
+    tail = float(np.min(table["ess_tail"]))
     bfmi = float(np.min(array_stats.bfmi(stats["energy"], **axes)))
     divergences = int(stats["diverging"].sum())
     deepest = int((stats["gradients"] >= 2**MAX_TREE_DEPTH - 1).sum())
@@ -80,16 +81,18 @@ def _problems(
     bfmi: float, deepest: int, failed: int, two_states: int,
 ) -> list[str]:  # fmt: skip
     said = []
-    if not rhat < RHAT:
+    if np.isnan(rhat):
+        said.append(_no_rhat(table, individual, chains))
+    elif not rhat < RHAT:
         worst = table.loc[table["rhat"].where(~individual).idxmax(), "parameter"]
         said.append(
             f"R-hat reaches {rhat:.3f} (wanted below {RHAT}; worst parameter {worst}): the chains disagree; raise "
             "warmup and draws."
         )
-    if individual.any() and not table["rhat"][individual].max() < RHAT_INDIVIDUAL:
+    of_groups = float(np.max([0.0, *table["rhat"][individual]]))
+    if not of_groups < RHAT_INDIVIDUAL and chains > 1:
         said.append(
-            f"R-hat of a single group reaches {table['rhat'][individual].max():.3f} (wanted below {RHAT_INDIVIDUAL}); "
-            "raise draws."
+            f"R-hat of a single group reaches {of_groups:.3f} (wanted below {RHAT_INDIVIDUAL}); raise draws."
         )
     wanted = ESS_PER_CHAIN * chains
     if not min(bulk, tail) >= wanted:
@@ -120,3 +123,10 @@ def _problems(
     if deepest:
         said.append(f"{deepest} transition(s) reached the deepest tree; raise warmup so that the step size can adapt.")
     return said
+
+
+def _no_rhat(table: pd.DataFrame, individual: np.ndarray, chains: int) -> str:
+    if chains == 1:
+        return "R-hat cannot be computed from one chain; set chains to at least 2, better 4."
+    unknown = [*table["parameter"][table["rhat"].isna() & ~individual], "the log-density"][0]
+    return f"R-hat of {unknown} cannot be computed: its draws never change, or they are fewer than 4; raise draws."

@@ -110,13 +110,13 @@ class Program:
 
     # --- log-density -------------------------------------------------------------------------------------------
 
-    def _potential(self, z: Float[Array, " d"], data: RangeData) -> Float[Array, ""]:
+    def potential(self, z: Float[Array, " d"], data: RangeData) -> Float[Array, ""]:
         """Negative log posterior density on the unconstrained space."""
         return potential_energy(self.model, (data,), {}, self._unravel(z))
 
     def potential_in_w(self, data: RangeData, whitening: Whitening) -> Callable[[dict[str, Array]], Array]:
         """Log-density in the sampler's coordinates, as NumPyro's kernel wants it."""
-        return lambda w: self._potential(whitening.mode + whitening.scale @ w["w"], data)
+        return lambda w: self.potential(whitening.mode + whitening.scale @ w["w"], data)
 
     def value_and_gradient(self, z: Float[Array, " d"], data: RangeData) -> tuple[Array, Array]:
         """Potential and its gradient; the same compiled program as `begin`, to spare a compilation."""

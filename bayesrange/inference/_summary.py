@@ -108,8 +108,9 @@ def _values(array: xr.DataArray) -> np.ndarray:
 
 
 def parameter_table(found: list[Row]) -> pd.DataFrame:
-    """The table parameters.csv."""
-    return pd.DataFrame([_describe(row) for row in found])
+    """The table parameters.csv; empty where a figure cannot be computed, such as R-hat of one chain."""
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return pd.DataFrame([_describe(row) for row in found])
 
 
 def _describe(row: Row) -> dict[str, object]:
