@@ -96,8 +96,9 @@ def parameter_dataset(spec: RangeSpec, sites: Sites) -> xr.Dataset:
         unit = UNITS.get(base, "1") if part in ("", "population") else "1"
         if name in ("home_x", "home_y"):
             variables[name] = (("home_group",), value * 1000, {"units": "m"})
-        elif name == "group_correlation":
-            variables[name] = (("coefficient", "coefficient_2"), value, {"units": "1"})
+        elif name == "group_correlation":  # sampled as its Cholesky factor
+            correlation = value @ np.swapaxes(value, -1, -2)
+            variables[name] = (("coefficient", "coefficient_2"), correlation, {"units": "1"})
         else:
             dims, shaped = _shape(base, part, value, spec)
             variables[name] = (dims, shaped, {"units": unit})

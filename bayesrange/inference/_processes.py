@@ -90,7 +90,8 @@ def run_workers(folder: Path, jobs: list[list[str]], at_once: int, tell: Callabl
 
 
 def _launch(folder: Path, arguments: list[str], errors: Any) -> subprocess.Popen[str]:
-    command = [sys.executable, "-m", "bayesrange.inference._worker", str(folder), *arguments]
+    # -P: a file of the user's called resource.py or numpy.py, where they work, must not be taken for the module
+    command = [sys.executable, "-P", "-m", "bayesrange.inference._worker", str(folder), *arguments]
     return subprocess.Popen(
         command, env=worker_environment(), stdin=subprocess.DEVNULL, stdout=subprocess.PIPE, stderr=errors, text=True
     )
@@ -104,11 +105,12 @@ def _listen(number: int, process: subprocess.Popen[str], heard: "queue.Queue[tup
 
 def _messages(process: subprocess.Popen[str]) -> Iterator[Message]:
     assert process.stdout is not None
-    for line in process.stdout:
-        try:
-            yield json.loads(line)
-        except json.JSONDecodeError:
-            continue  # a library printed something of its own
+    with process.stdout as lines:
+        for line in lines:
+            try:
+                yield json.loads(line)
+            except json.JSONDecodeError:
+                continue  # a library printed something of its own
 
 
 def _last_words(log: Path) -> str:

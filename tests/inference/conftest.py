@@ -1,0 +1,61 @@
+"""Studies and compiled programs that several test files share: compiling one takes seconds."""
+
+from collections import namedtuple
+
+import numpy as np
+import pytest
+from inference._tiny_study import HOMES, NORTH, SOUTH, WEST, fixes_table, groups_table, write_study
+
+from bayesrange.inference import Program, as_arrays, find_card, make_data, make_scales, make_spec, read_card
+from bayesrange.study import autocorrelation_weights, read_study
+
+Model = namedtuple("Model", "study card spec scales weight data program")
+
+
+def build(file, warmup=60, chunk=50):
+    """Everything that a fit makes of a study before it samples."""
+    study = read_study(file)
+    model = study.settings.model
+    card = read_card(find_card(model.card, study.path.parent)).with_priors(model.priors, study.path.name)
+    spec = make_spec(study, card)
+    scales = make_scales(study, list(spec.layers))
+    ignored = model.autocorrelation == "ignored"
+    weight = np.ones(len(study.fixes)) if ignored else autocorrelation_weights(study.fixes).weight
+    data = as_arrays(make_data(study, card, spec, scales, weight))
+    program = Program(spec, data, warmup, 0.9, chunk)
+    return Model(study, card, spec, scales, weight, data, program)
+
+
+@pytest.fixture(scope="session")
+def study_folder(tmp_path_factory):
+    """The tiny study as it is; nothing may write here."""
+    return write_study(tmp_path_factory.mktemp("plain") / "tern marsh").parent
+
+
+@pytest.fixture(scope="session")
+def study(study_folder):
+    return read_study(study_folder)
+
+
+@pytest.fixture(scope="session")
+def coupled(tmp_path_factory):
+    """Avoidance, resources and over-marking; the home of one group estimated; every tenth inner fix with an error."""
+    groups = groups_table()
+    groups.loc[groups["group"] == NORTH, ["x", "y"]] = np.nan
+    fixes = fixes_table()
+    inner = fixes["x"].between(WEST + 250, WEST + 1500) & fixes["y"].between(SOUTH + 250, SOUTH + 2150)
+    fixes.loc[inner & (fixes.index % 10 == 0), "error_m"] = 30.0
+    model = {"over_marking": True, "priors": {"over_marking": {"family": "half-normal", "scale": 0.1}}}
+    return build(write_study(tmp_path_factory.mktemp("coupled"), fixes, groups, model=model))
+
+
+@pytest.fixture(scope="session")
+def hierarchical(tmp_path_factory):
+    """Localising, avoidance and one layer vary between groups; one covariate."""
+    model = {"pooling": "hierarchical", "covariates": ["size"]}
+    return build(write_study(tmp_path_factory.mktemp("hierarchical"), model=model))
+
+
+@pytest.fixture(scope="session")
+def homes_km():
+    return np.array([(WEST + x, SOUTH + y) for x, y in HOMES.values()]) / 1000
