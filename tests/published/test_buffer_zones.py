@@ -1,8 +1,8 @@
 """Buffer zones between packs and where marks are laid, as signs.
 
 Source: the abstracts of Nature 366:738 (1993) and J. Math. Biol. 35:749 (1997): zones with few animals form between
-neighbouring packs, and scent marking rises near them. The papers give signs, no numbers: margins here only keep rounding
-from passing for an effect.
+neighbouring packs, and scent marking rises near them. The papers give signs, no numbers: margins here only keep
+rounding from passing for an effect.
 """
 
 import numpy as np

@@ -1,9 +1,9 @@
 """From every order in which groups may arrive, and from four other starts, the solver ends in one steady state.
 
-There is no proof that only one exists, and in the far corner of the priors of avoidance-resources (hardly any pull home,
-strong avoidance and strong resource response: about 1 draw in 500) there are several, perception or not: groups share out
-rich patches first come, first served. Such a parameter set counts as a failed solve in a fit. The last test but one
-shows that these starts find them.
+There is no proof that only one exists, and in the far corner of the priors of avoidance-resources (hardly any pull
+home, strong avoidance and a strong response to resources: a few draws in a thousand) there are several, perception or
+not: groups share out the rich patches first come, first served. A fit counts such a parameter set as a failed solve.
+The last test but one shows that these starts find them.
 """
 
 from itertools import permutations

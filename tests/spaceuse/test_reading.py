@@ -117,7 +117,7 @@ def test_cell_reading_is_the_cells_own_density(grid):
 
 
 def convolved(grid, law, x, y, error_m, parts=12):
-    """∫ u(z) N(y; z, σ²) dz by 4-point Gauss–Legendre in each of parts² pieces of every cell, u bilinear on the land."""
+    """∫ u(z) N(y; z, σ²) dz by 4-point Gauss–Legendre in parts² pieces of every cell, u bilinear on the land."""
     at, weight = np.polynomial.legendre.leggauss(4)
     width = grid.cell_m / parts
     axes = []
@@ -138,8 +138,8 @@ def convolved(grid, law, x, y, error_m, parts=12):
 
 @pytest.mark.parametrize(
     ("error_m", "apart"),
-    # In nats. One node leaves out σ²/2 times the curvature, kinks at the nodes of the cells included; 3 nodes per axis
-    # cross such kinks (rms 0.008 at one cell over random inner places), 5 nodes the edge too; cells are a box of half an sd.
+    # In nats. One node leaves out σ²/2 times the curvature, kinks between cells included; 3 nodes per axis cross such
+    # kinks (rms 0.008 at one cell over random inner places), 5 nodes the edge too; cells are a box of half an sd.
     [(5.0, 3e-3), (40.0, 0.02), (95.0, 0.03), (150.0, 0.05), (250.0, 0.02)],
 )
 def test_location_error_is_a_convolution(grid, error_m, apart):
