@@ -85,15 +85,16 @@ def milliseconds(call: Callable[[], object], repeats: int = 9) -> float:
 def machine() -> dict[str, object]:
     """What the figures were measured on."""
     try:
-        commit = subprocess.run(["git", "rev-parse", "--short", "HEAD"], capture_output=True, text=True, check=True).stdout.strip()
+        command = ["git", "rev-parse", "--short", "HEAD"]
+        commit = subprocess.run(command, capture_output=True, text=True, check=True).stdout.strip()
     except (OSError, subprocess.CalledProcessError):
         commit = "unknown"
     return {
-        "commit": commit, "date": time.strftime("%Y-%m-%d"), "python": platform.python_version(), "jax": jax.__version__,
-        "cpus": os.cpu_count(), "device": jax.devices()[0].platform,
+        "commit": commit, "date": time.strftime("%Y-%m-%d"), "python": platform.python_version(),
+        "jax": jax.__version__, "cpus": os.cpu_count(), "device": jax.devices()[0].platform,
     }  # fmt: skip
 
 
 def say(**row: object) -> None:
     """One result a line, as JSON."""
-    print(json.dumps({k: round(v, 6) if isinstance(v, float) else v for k, v in row.items()}), flush=True)
+    print(json.dumps({k: float(f"{v:.4g}") if isinstance(v, float) else v for k, v in row.items()}), flush=True)

@@ -1,6 +1,6 @@
 """Does the process grow while gradients are taken? 5,000 of each solver, on a small grid.
 
-    python benchmarks/gradient_memory.py
+python benchmarks/gradient_memory.py
 """
 
 import resource

@@ -1,11 +1,12 @@
-"""Effective draws per second on one posterior: NUTS with our gradient, NUTS with finite differences, an ensemble sampler.
+"""How many effective draws a second on one posterior: NUTS, NUTS with finite differences, an ensemble sampler?
 
     python benchmarks/samplers.py [--quick]
 
 Five groups on the bundled heath with estimated home centres: 13 parameters. Everything runs in this process on one
-core. NUTS with finite differences is not run: SciPy's `approx_fprime` is timed on the same log-density and NUTS's count of
-gradients is charged at that price. The ensemble sampler is emcee (Foreman-Mackey et al. 2013) on the same log-density,
-started from draws of NUTS, so that it needs no burn-in. ESS is arviz's bulk ESS, the least over the parameters.
+core. NUTS with finite differences is not run: SciPy's `approx_fprime` is timed on the same log-density and NUTS's
+count of gradients is charged at that price. The ensemble sampler is emcee (Foreman-Mackey et al. 2013) on the same
+log-density, started from draws of NUTS, so that it needs no burn-in. ESS is arviz's bulk ESS, the least over the
+parameters.
 """
 
 import sys

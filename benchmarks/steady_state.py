@@ -1,7 +1,7 @@
 """How does one value and gradient compare with one numeric KLU factorisation a group, timed in the same run?
 
-    python benchmarks/steady_state.py            all sizes, groups and couplings
-    python benchmarks/steady_state.py --quick    64 × 64 cells and 6 groups only
+python benchmarks/steady_state.py            all sizes, groups and couplings
+python benchmarks/steady_state.py --quick    64 × 64 cells and 6 groups only
 """
 
 import sys
@@ -73,7 +73,7 @@ def measure(cells: int, groups: int, avoidance: float, retreat: float, solver: s
     say(
         solver=solver, cells=cells, groups=groups, avoidance=avoidance, retreat=retreat, ms=round(time, 2),
         klu_ms=round(klu, 2), ratio=round(time / klu, 2), steps=int(solution.steps),
-        solved=bool(solution.result == SOLVED), gradient_error=float(f"{gradient_error(function, gradient, arguments):.1e}"),
+        solved=bool(solution.result == SOLVED), gradient_error=gradient_error(function, gradient, arguments),
     )  # fmt: skip
     return time
 
