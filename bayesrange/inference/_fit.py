@@ -15,7 +15,7 @@ import numpy as np
 import bayesrange
 from bayesrange._errors import StudyError
 from bayesrange.inference._cards import Card, find_card, read_card
-from bayesrange.inference._folder import FORMAT, choose_folder, write_atomically, write_json
+from bayesrange.inference._folder import FORMAT, choose_folder, make_folder, write_atomically, write_json
 from bayesrange.inference._processes import Message, cores, run_workers
 from bayesrange.inference._range_build import make_data, make_spec
 from bayesrange.inference._range_data import RangeSpec
@@ -73,15 +73,18 @@ def fit(
         WorkerError: a sampling process failed.
     """
     tell = tell or (lambda message: None)
+    if processes is not None and processes < 1:
+        raise ValueError(f"`processes` is a number of chains and must be at least 1, got {processes}.")
     study = study if isinstance(study, Study) else read_study(Path(study))
     prepared = prepare(study)
-    folder = choose_folder(study.path.parent, prepared.card.name, Path(out) if out else None, again)
+    out, fingerprint = Path(out) if out else None, prepared.task.fingerprint
+    folder = choose_folder(study.path.parent, prepared.card.name, out, again, fingerprint)
     checkpoints = folder / "checkpoints"
     _refuse_changes(checkpoints, prepared)
-    checkpoints.mkdir(parents=True, exist_ok=True)
+    make_folder(checkpoints)
     if not (checkpoints / "inputs.json").exists():
         save_task(checkpoints, prepared.task)
-        write_json(checkpoints / "inputs.json", {"fingerprint": prepared.task.fingerprint, "inputs": prepared.inputs})
+        write_json(checkpoints / "inputs.json", {"fingerprint": fingerprint, "inputs": _decisive(prepared.inputs)})
     tell({"stage": "read", "folder": str(folder), "prepared": prepared})
     log = checkpoints / "workers.log"
     at_once = min(processes or cores(), prepared.task.chains)
@@ -114,8 +117,10 @@ def prepare(study: Study) -> Prepared:
     weight = np.ones(len(study.fixes)) if weights is None else weights.weight
     data = make_data(study, card, spec, scales, weight)
     inputs = dict(study.hashes)
-    inputs[card.file.name] = hashlib.sha256(card.file.read_bytes()).hexdigest()
-    fingerprint = hashlib.sha256(json.dumps(inputs, sort_keys=True).encode()).hexdigest()
+    own_card = card.file.parent == study.path.parent
+    card_name = card.file.name if own_card else f"models/{card.file.name}"  # a study file may be called like a card
+    inputs[card_name] = hashlib.sha256(card.file.read_bytes()).hexdigest()
+    fingerprint = hashlib.sha256(json.dumps(_decisive(inputs), sort_keys=True).encode()).hexdigest()
     task = Task(
         spec, data, sampling.chains, sampling.warmup, sampling.draws, sampling.seed, sampling.target_accept, fingerprint
     )
@@ -126,6 +131,12 @@ def prepare(study: Study) -> Prepared:
             "another quickly."
         )
     return Prepared(study, card, spec, scales, weights, task, inputs, warnings)
+
+
+def _decisive(inputs: dict[str, str]) -> dict[str, str]:
+    """Everything that a run is only gone on with unchanged: input files and the versions that make the draws."""
+    versions = {"bayesrange": bayesrange.__version__, **{name: version(name) for name in ("jax", "numpyro")}}
+    return inputs | {f"the version of {name}": number for name, number in versions.items()}
 
 
 def _refuse_changes(checkpoints: Path, prepared: Prepared) -> None:
@@ -140,12 +151,11 @@ def _refuse_changes(checkpoints: Path, prepared: Prepared) -> None:
     before = json.loads(file.read_text(encoding="utf-8"))
     if before["fingerprint"] == prepared.task.fingerprint:
         return
-    old, new = before["inputs"], prepared.inputs
+    old, new = before["inputs"], _decisive(prepared.inputs)
     changed = sorted(name for name in old.keys() | new.keys() if old.get(name) != new.get(name))
     raise StudyError(
         f"{checkpoints.parent}: an unfinished run is here, and since it began {', '.join(changed)} changed; undo the "
-        "change to go on "
-        "with it, delete the folder, or use --again for a new one."
+        "change to go on with it, delete the folder, or use --again for a new one."
     )
 
 
@@ -205,6 +215,11 @@ def _describe(prepared: Prepared, diagnostics: Any, times: dict[str, float], wor
     study, card, task = prepared.study, prepared.card, prepared.task
     settings, weights, home_length = study.settings, prepared.weights, prepared.scales.home_length_km
     animals = [] if weights is None else json.loads(weights.table.to_json(orient="records"))
+    priors = dict(card.priors)
+    if prepared.spec.varying:
+        priors |= {f"{name} spread": card.between_groups[name] for name in prepared.spec.varying}
+    if prepared.spec.covariates:
+        priors["covariate"] = card.covariate_effect
     count = len(study.fixes)
     sentence = (
         weights.sentence if weights else f"{count:,} fixes are taken as independent, because autocorrelation is ignored"
@@ -216,8 +231,8 @@ def _describe(prepared: Prepared, diagnostics: Any, times: dict[str, float], wor
         "card": {
             "name": card.name, "title": card.title, "terms": list(card.terms), "solver": card.solver, "says": card.says,
             "use_when": card.use_when, "not_when": card.not_when, "pooling": settings.model.pooling,
-            "priors": {name: prior.scaled(home_length).in_words() for name, prior in card.priors.items()},
-            "prior_reasons": {name: prior.reason for name, prior in card.priors.items()},
+            "priors": {name: prior.scaled(home_length).in_words() for name, prior in priors.items()},
+            "prior_reasons": {name: prior.reason for name, prior in priors.items()},
             "changed_priors": list(card.changed), "references": list(card.references),
         },
         "scales": prepared.scales.as_json(), "reading": settings.model.reading,

@@ -9,14 +9,14 @@ from scipy.stats import rankdata
 
 from bayesrange.report._drawing import HUES, INK, Picture, our_style, picture, short
 from bayesrange.report._format import listed
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 
 AT_MOST = 10
 _NOT_MAIN = {"group", "home_group", "coefficient"}  # one group's, and correlations between coefficients
 _BINS = 20
 
 
-def main_draws(run: Run) -> dict[str, Float[NDArray, "chain draw"]]:
+def main_draws(run: Contents) -> dict[str, Float[NDArray, "chain draw"]]:
     """Draws of every parameter that is not one group's, under the name it has in the tables."""
     found = {}
     for variable, values in run.posterior.data_vars.items():
@@ -27,7 +27,7 @@ def main_draws(run: Run) -> dict[str, Float[NDArray, "chain draw"]]:
     return found
 
 
-def chains_figure(run: Run) -> Picture | None:
+def chains_figure(run: Contents) -> Picture | None:
     """Trace and rank histogram, a row a parameter, at most ten; None if there is no parameter of that kind."""
     draws = main_draws(run)
     shown = dict(list(draws.items())[:AT_MOST])

@@ -37,7 +37,7 @@ from bayesrange.report._map_parts import (
     middle_km,
     tint,
 )
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 
 _WIDTH_IN = 11.0
 _BAND = "#E69F00"
@@ -45,7 +45,7 @@ _LINE_ON_BLUE = "#8f3d00"
 NAMES_UP_TO = 9  # more groups are numbered on the overview
 
 
-def group_hues(run: Run) -> list[str]:
+def group_hues(run: Contents) -> list[str]:
     """A colour for each group, so that groups that overlap differ as long as the colours last."""
     overlap = run.space_use["overlap"].mean(("chain", "draw")).transpose("group", "neighbour").values
     hues: list[int] = []
@@ -58,7 +58,7 @@ def group_hues(run: Run) -> list[str]:
     return [HUES[hue] for hue in hues]
 
 
-def overview(run: Run, outlines: geopandas.GeoDataFrame) -> Picture:
+def overview(run: Contents, outlines: geopandas.GeoDataFrame) -> Picture:
     """Every group's UD, isopleths, fixes and home on one map, and the first layer beside it."""
     layers = run.layers
     with our_style():
@@ -91,7 +91,7 @@ def overview(run: Run, outlines: geopandas.GeoDataFrame) -> Picture:
         return picture(figure, alt, caption)
 
 
-def further_layers(run: Run, outlines: geopandas.GeoDataFrame) -> Picture | None:
+def further_layers(run: Contents, outlines: geopandas.GeoDataFrame) -> Picture | None:
     """The second and later layers, three in a row; None if there is one at most."""
     layers = run.layers[1:]
     if not layers:
@@ -112,7 +112,7 @@ def further_layers(run: Run, outlines: geopandas.GeoDataFrame) -> Picture | None
         return picture(figure, alt, "Further layers of the study.")
 
 
-def each_group(run: Run, outlines: geopandas.GeoDataFrame) -> Picture:
+def each_group(run: Contents, outlines: geopandas.GeoDataFrame) -> Picture:
     """One panel a group: UD in 1/km², isopleths with bands, its fixes; all to one scale and one colour bar."""
     with our_style():
         columns = min(4 if len(run.groups) > 6 else 3, len(run.groups))
@@ -147,7 +147,7 @@ def each_group(run: Run, outlines: geopandas.GeoDataFrame) -> Picture:
         return picture(figure, alt, caption)
 
 
-def _all_groups(axes: Axes, run: Run, outlines: geopandas.GeoDataFrame) -> None:
+def _all_groups(axes: Axes, run: Contents, outlines: geopandas.GeoDataFrame) -> None:
     map_axes(axes, run)
     hues, centres = group_hues(run), homes(run)
     fix_group = run.constant["group_of_fix"].values.astype(str)
@@ -166,7 +166,7 @@ def _all_groups(axes: Axes, run: Run, outlines: geopandas.GeoDataFrame) -> None:
     scale_bar(axes, emptiest_corner((mean / np.nanmax(mean, axis=(1, 2), keepdims=True)).max(axis=0)))
 
 
-def _one_layer(figure: Figure, axes: Axes, run: Run, name: str, outlines: geopandas.GeoDataFrame) -> None:
+def _one_layer(figure: Figure, axes: Axes, run: Contents, name: str, outlines: geopandas.GeoDataFrame) -> None:
     map_axes(axes, run, northing=False)
     values = np.where(run.inside, run.constant["layer_value"].sel(layer=name).transpose("y", "x").values, np.nan)
     drawn = image(axes, run, values, cmap=LAYER, interpolation="nearest")
@@ -181,7 +181,7 @@ def _one_layer(figure: Figure, axes: Axes, run: Run, name: str, outlines: geopan
 
 def _one_group(
     axes: Axes,
-    run: Run,
+    run: Contents,
     at: int,
     mine: geopandas.GeoDataFrame,
     norm: Normalize,

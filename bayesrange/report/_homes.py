@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 
 
 @dataclass(frozen=True)
@@ -18,7 +18,7 @@ class Home:
     y_interval_km: tuple[float, float]
 
 
-def homes(run: Run) -> dict[str, Home | None]:
+def homes(run: Contents) -> dict[str, Home | None]:
     """The home of every group: as given, else the posterior median; None for a card without homes."""
     estimated = _estimated(run)
     if "home_x" not in run.constant:
@@ -33,7 +33,7 @@ def homes(run: Run) -> dict[str, Home | None]:
     return found
 
 
-def _estimated(run: Run) -> dict[str, Home]:
+def _estimated(run: Contents) -> dict[str, Home]:
     if "home_x" not in run.posterior:
         return {}
     tail = (1 - run.prob) / 2

@@ -15,14 +15,14 @@ from numpy.typing import NDArray
 from scipy.ndimage import distance_transform_edt
 from shapely.geometry.base import BaseGeometry
 
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 
 # P(the place lies inside the isopleth) at the outline, and how it is said.
 NEARLY_SURE, AS_LIKELY_AS_NOT, POSSIBLE = 0.95, 0.5, 0.05
 LEVELS: dict[float, str] = {NEARLY_SURE: "nearly sure", AS_LIKELY_AS_NOT: "as likely as not", POSSIBLE: "possible"}
 
 
-def isopleth_outlines(run: Run) -> geopandas.GeoDataFrame:
+def isopleth_outlines(run: Contents) -> geopandas.GeoDataFrame:
     """Outlines of every group, isopleth and probability.
 
     Returns:
@@ -48,7 +48,7 @@ def isopleth_outlines(run: Run) -> geopandas.GeoDataFrame:
     return geopandas.GeoDataFrame(records, geometry="geometry", crs=run.crs)
 
 
-def _cells(run: Run) -> tuple[NDArray, Float[NDArray, " cells"]]:
+def _cells(run: Contents) -> tuple[NDArray, Float[NDArray, " cells"]]:
     """The habitable cells as boxes with exactly shared corners, and the habitable share of each."""
     east, north = _edges(run.x_m, run.cell_m), _edges(run.y_m, run.cell_m)
     row, column = np.nonzero(run.inside)
@@ -61,7 +61,7 @@ def _edges(centres: Float[NDArray, " n"], cell_m: float) -> Float[NDArray, " edg
 
 
 def _padded(
-    run: Run, surface: Float[NDArray, "ny nx"]
+    run: Contents, surface: Float[NDArray, "ny nx"]
 ) -> tuple[Float[NDArray, " columns"], Float[NDArray, " rows"], Float[NDArray, "rows columns"]]:
     """The surface carried beyond the habitable cells by the nearest one, with a border of one cell."""
     known: Bool[NDArray, "ny nx"] = run.inside & np.isfinite(surface)

@@ -13,7 +13,7 @@ from shapely.geometry.base import BaseGeometry
 from bayesrange.report._drawing import INK, NOT_HABITABLE, shape
 from bayesrange.report._homes import Home, homes
 from bayesrange.report._isopleths import AS_LIKELY_AS_NOT, NEARLY_SURE, POSSIBLE
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 
 BAND_ALPHA = 0.38
 _LINES = ("solid", (0, (4, 2)), (0, (1, 1.5)))
@@ -56,12 +56,12 @@ def tint(density: Float[NDArray, "ny nx"], hue: str) -> Float[NDArray, "ny nx 4"
     return wash
 
 
-def fix_alpha(run: Run) -> float:
+def fix_alpha(run: Contents) -> float:
     """Opacity of a fix: fainter where there are many."""
     return 0.55 if run.observed["x"].size < 3000 else 0.3
 
 
-def label_points(run: Run) -> list[tuple[float, float]]:
+def label_points(run: Contents) -> list[tuple[float, float]]:
     """Where a group's label belongs: its home, or the peak of its density [km]."""
     points = []
     for name, home in homes(run).items():
@@ -70,12 +70,12 @@ def label_points(run: Run) -> list[tuple[float, float]]:
     return points
 
 
-def _peak_km(run: Run, density: Float[NDArray, "ny nx"]) -> tuple[float, float]:
+def _peak_km(run: Contents, density: Float[NDArray, "ny nx"]) -> tuple[float, float]:
     row, column = np.unravel_index(int(np.nanargmax(np.where(run.inside, density, -np.inf))), density.shape)
     return float(run.x_m[column]) / 1e3, float(run.y_m[row]) / 1e3
 
 
-def middle_km(run: Run, mine: geopandas.GeoDataFrame, mean: Float[NDArray, "ny nx"]) -> tuple[float, float]:
+def middle_km(run: Contents, mine: geopandas.GeoDataFrame, mean: Float[NDArray, "ny nx"]) -> tuple[float, float]:
     """The middle of all that is drawn of a group [km]."""
     widest = mine.geometry.union_all()
     if widest.is_empty:
@@ -84,7 +84,7 @@ def middle_km(run: Run, mine: geopandas.GeoDataFrame, mean: Float[NDArray, "ny n
     return (west + east) / 2e3, (south + north) / 2e3
 
 
-def common_side_km(run: Run, outlines: geopandas.GeoDataFrame) -> float:
+def common_side_km(run: Contents, outlines: geopandas.GeoDataFrame) -> float:
     """Side of the square window that holds the widest group with a margin [km]."""
     sides = [4 * run.cell_m]
     for name in run.groups:
@@ -95,7 +95,7 @@ def common_side_km(run: Run, outlines: geopandas.GeoDataFrame) -> float:
     return 1.25 * max(sides) / 1e3
 
 
-def legend(run: Run, line: str, band: str) -> list[object]:
+def legend(run: Contents, line: str, band: str) -> list[object]:
     """Entries for the isopleths in the given colours and for what else the map shows."""
     lines = [
         Line2D([], [], color=line, linewidth=1.4, linestyle=_line(order), label=f"{isopleth} % isopleth")
@@ -105,7 +105,7 @@ def legend(run: Run, line: str, band: str) -> list[object]:
     return [*lines, shade, *_places(run), Patch(facecolor=NOT_HABITABLE, label="outside, or not habitable")]
 
 
-def _places(run: Run) -> list[object]:
+def _places(run: Contents) -> list[object]:
     """Legend entries of the points that are there."""
     shown = [Line2D([], [], color=INK, marker=".", linestyle="none", markersize=4, label="fix")]
     kinds = {home.known for home in homes(run).values() if home is not None}

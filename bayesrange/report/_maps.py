@@ -11,7 +11,7 @@ import rasterio
 from jaxtyping import Float
 from numpy.typing import NDArray
 
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 
 BANDS = ("utilisation distribution, posterior mean", "utilisation distribution, posterior sd")
 UNIT = "1/km²"
@@ -37,12 +37,12 @@ def safe_names(names: list[str]) -> list[str]:
     return stems
 
 
-def density_files(run: Run) -> dict[str, str]:
+def density_files(run: Contents) -> dict[str, str]:
     """The GeoTIFF of each group, relative to the run folder; the prefix keeps clear of names a system reserves."""
     return {name: f"maps/ud_{stem}.tif" for name, stem in zip(run.groups, safe_names(run.groups), strict=True)}
 
 
-def write_densities(run: Run) -> None:
+def write_densities(run: Contents) -> None:
     """Write each group's UD: band 1 the posterior mean, band 2 the posterior sd [1/km²], NaN where not habitable."""
     for group, name in density_files(run).items():
         use = run.space_use.sel(group=group).transpose(..., "y", "x")
@@ -50,7 +50,7 @@ def write_densities(run: Run) -> None:
         _write_raster(run, run.folder / name, group, np.stack(layers))
 
 
-def _write_raster(run: Run, file: Path, group: str, bands: Float[NDArray, "band ny nx"]) -> None:
+def _write_raster(run: Contents, file: Path, group: str, bands: Float[NDArray, "band ny nx"]) -> None:
     file.parent.mkdir(parents=True, exist_ok=True)
     part = file.with_name(file.name + ".part")
     count, height, width = bands.shape
@@ -75,7 +75,7 @@ def _write_raster(run: Run, file: Path, group: str, bands: Float[NDArray, "band 
     os.replace(part, file)
 
 
-def write_isopleths(run: Run, outlines: geopandas.GeoDataFrame) -> None:
+def write_isopleths(run: Contents, outlines: geopandas.GeoDataFrame) -> None:
     """Write maps/isopleths.gpkg, layer `isopleths`."""
     file = run.folder / "maps" / "isopleths.gpkg"
     file.parent.mkdir(parents=True, exist_ok=True)

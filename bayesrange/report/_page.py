@@ -17,7 +17,7 @@ from bayesrange.report._figures import each_group, further_layers, group_hues, o
 from bayesrange.report._format import fixed, interval, number, percent, whole
 from bayesrange.report._parameters import Gate, parameter_blocks, raw_left_out, split_name
 from bayesrange.report._places import area_rows, overlap_rows
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 from bayesrange.report._sentences import CAUTIONS, COUNTS, MEANINGS, POOLING
 
 # Betancourt 2016, arXiv:1604.00695.
@@ -30,7 +30,9 @@ _COUNTED = {
 }
 
 
-def page(run: Run, ranges: pd.DataFrame, overlaps: pd.DataFrame, outlines: geopandas.GeoDataFrame, today: date) -> str:
+def page(
+    run: Contents, ranges: pd.DataFrame, overlaps: pd.DataFrame, outlines: geopandas.GeoDataFrame, today: date
+) -> str:
     """The page as HTML that needs no other file, no network and no script."""
     template = Environment(
         loader=FileSystemLoader(Path(__file__).parent),
@@ -59,7 +61,7 @@ def page(run: Run, ranges: pd.DataFrame, overlaps: pd.DataFrame, outlines: geopa
     )
 
 
-def _head(run: Run, today: date) -> dict[str, str]:
+def _head(run: Contents, today: date) -> dict[str, str]:
     period = run.facts.get("period")
     fitted = str(run.facts.get("finished") or "")[:10]
     return {
@@ -73,7 +75,7 @@ def _head(run: Run, today: date) -> dict[str, str]:
     }
 
 
-def _tracked(run: Run) -> str:
+def _tracked(run: Contents) -> str:
     if "time" not in run.constant or not run.constant["time"].size:
         return ""
     times = pd.to_datetime(run.constant["time"].values)
@@ -84,7 +86,7 @@ def _day(when: date) -> str:
     return f"{when.day} {when:%B %Y}"
 
 
-def _verdict(run: Run) -> dict[str, Any]:
+def _verdict(run: Contents) -> dict[str, Any]:
     """Converged or not, in one sentence, with the problems that inference wrote down."""
     found = run.facts["diagnostics"]
     converged = bool(run.facts["converged"])
@@ -112,7 +114,7 @@ def _number(facts: dict[str, Any], key: str) -> float:
     return float("nan") if value is None else float(value)
 
 
-def _fitted(run: Run) -> dict[str, Any]:
+def _fitted(run: Contents) -> dict[str, Any]:
     """The card in words, the counts, and how much independent information the fixes hold."""
     card, effective = run.facts["card"], run.facts.get("effective") or {}
     animals = [
@@ -137,13 +139,13 @@ def _fitted(run: Run) -> dict[str, Any]:
     }
 
 
-def _grid(run: Run) -> str:
+def _grid(run: Contents) -> str:
     habitable_km2 = float(run.habitable.sum()) * run.cell_m**2 / 1e6
     cells = f"{run.x_m.size} × {run.y_m.size} cells of {run.cell_m:g} m"
     return f"{cells}, {habitable_km2:,.4g} km² habitable, {run.crs.name}"
 
 
-def _priors(run: Run) -> list[tuple[str, str, str]]:
+def _priors(run: Contents) -> list[tuple[str, str, str]]:
     """Name, prior in words, and why this one, or that the study file changed it; parameters of this fit only."""
     card = run.facts["card"]
     fitted = {split_name(str(name))[0] for name in run.parameters["parameter"]}
@@ -195,7 +197,7 @@ def _scales(scales: dict[str, Any]) -> list[tuple[str, str]]:
     return shown
 
 
-def _checks(run: Run, gate: Gate) -> list[dict[str, Any]]:
+def _checks(run: Contents, gate: Gate) -> list[dict[str, Any]]:
     """What was checked: name, value, what it should be, whether it is."""
     found = run.facts["diagnostics"]
     rhat = _number(found, "max_rhat")
@@ -216,7 +218,7 @@ def _checks(run: Run, gate: Gate) -> list[dict[str, Any]]:
     return [dict(zip(("name", "value", "wanted", "good"), row, strict=True)) for row in rows]
 
 
-def _record(run: Run) -> list[dict[str, Any]]:
+def _record(run: Contents) -> list[dict[str, Any]]:
     """What is needed to make the run again, as tables of two columns."""
     facts = run.facts
     study = facts["study"]

@@ -5,7 +5,7 @@ from math import isfinite
 from typing import Any
 
 from bayesrange.report._format import Bar, bar, fixed, interval, known_to, number, whole
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 from bayesrange.report._sentences import MEANINGS, NOTES, prior_share, sparse_groups_note, sparse_note
 
 
@@ -47,7 +47,7 @@ class Row:
     notes: list[str] = field(default_factory=list)
 
 
-def parameter_blocks(run: Run, gate: Gate) -> list[dict[str, Any]]:
+def parameter_blocks(run: Contents, gate: Gate) -> list[dict[str, Any]]:
     """Blocks of rows: shared or population parameters, then a block for each parameter that groups have singly."""
     lead: list[Row] = []
     single: dict[str, list[dict[str, Any]]] = {}
@@ -71,7 +71,7 @@ def parameter_blocks(run: Run, gate: Gate) -> list[dict[str, Any]]:
     return blocks + [_group_block(of_what, records, gate) for of_what, records in single.items()]
 
 
-def raw_left_out(run: Run) -> bool:
+def raw_left_out(run: Contents) -> bool:
     """Whether raw rows of single groups stand in the table only."""
     names = run.parameters["parameter"].astype(str)
     return any(_is_raw(name) and _of_group(*split_name(name), run)[1] is not None for name in names)
@@ -89,7 +89,7 @@ def split_name(name: str) -> tuple[str, str]:
     return base, rest[: rest.rindex("]")]
 
 
-def _of_group(base: str, inner: str, run: Run) -> tuple[str, str | None]:
+def _of_group(base: str, inner: str, run: Contents) -> tuple[str, str | None]:
     """The parameter and the group: `localising[North]` is one group's, `resource[earthworms]` none's.
 
     A layer's name is looked up, not split at the comma, which may be part of a name.

@@ -6,13 +6,13 @@ import pandas as pd
 
 from bayesrange.report._format import bar, interval, number
 from bayesrange.report._maps import density_files
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 
 PAIRS_SHOWN = 15
 LEAST_OVERLAP_WIDTH = 0.01  # three decimals are enough for a coefficient between 0 and 1
 
 
-def area_rows(run: Run, ranges: pd.DataFrame, hues: list[str]) -> dict[str, Any]:
+def area_rows(run: Contents, ranges: pd.DataFrame, hues: list[str]) -> dict[str, Any]:
     """One row a group: its area at each isopleth, an interval bar of the widest, and its GeoTIFF."""
     files = density_files(run)
     widest = ranges[ranges["isopleth"] == run.isopleths[-1]]

@@ -26,7 +26,7 @@ _TEXT_COLUMNS = ("parameter", "unit")
 
 
 @dataclass(frozen=True)
-class Run:
+class Contents:
     """What a run folder holds, without the parts that no report needs (prior draws, log-likelihood)."""
 
     folder: Path
@@ -96,7 +96,7 @@ class Run:
         return float(given.iloc[0]) if len(given) else 0.9
 
 
-def read_run(folder: Path) -> Run:
+def read_contents(folder: Path) -> Contents:
     """Read a run folder.
 
     Args:
@@ -118,7 +118,7 @@ def read_run(folder: Path) -> Run:
             "version of bayesrange that made the fit, or fit again."
         )
     parts = _read_posterior(folder / "posterior.nc")
-    run = Run(folder, facts, _read_parameters(folder / "tables" / "parameters.csv"), *parts)
+    run = Contents(folder, facts, _read_parameters(folder / "tables" / "parameters.csv"), *parts)
     _check_grid(run)
     return run
 
@@ -139,7 +139,7 @@ def _read_parameters(file: Path) -> pd.DataFrame:
     return table
 
 
-def _check_grid(run: Run) -> None:
+def _check_grid(run: Contents) -> None:
     file = run.folder / "posterior.nc"
     for name, centres in (("x", run.x_m), ("y", run.y_m)):
         if centres.size > 1 and not np.allclose(np.diff(centres), run.cell_m, rtol=1e-6):

@@ -15,10 +15,10 @@ import xarray as xr
 from jaxtyping import Float
 from numpy.typing import NDArray
 
-from bayesrange.report._read import Run
+from bayesrange.report._read import Contents
 
 
-def ranges_table(run: Run) -> pd.DataFrame:
+def ranges_table(run: Contents) -> pd.DataFrame:
     """One row a group and isopleth.
 
     Columns: group, isopleth [%], area_km2_median, area_km2_lower, area_km2_upper, prob, mean, sd (of the area [km²]),
@@ -49,7 +49,7 @@ def ranges_table(run: Run) -> pd.DataFrame:
     return pd.DataFrame(rows)
 
 
-def overlaps_table(run: Run) -> pd.DataFrame:
+def overlaps_table(run: Contents) -> pd.DataFrame:
     """One row a pair of groups: group, neighbour, median, lower, upper, prob of their Bhattacharyya coefficient.
 
     The coefficient ∫ √(u_i u_j) is 0 for ranges apart and 1 for equal ones. Symmetric, so each pair stands once.

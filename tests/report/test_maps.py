@@ -8,7 +8,7 @@ import rasterio
 import shapely
 import xarray as xr
 
-from bayesrange.report import isopleth_outlines, read_run, write
+from bayesrange.report import isopleth_outlines, read_contents, write
 from bayesrange.report._maps import density_files, safe_names
 
 
@@ -30,7 +30,7 @@ def peaked(new_run):
 
 def test_peak_is_found_at_its_coordinates(peaked):
     folder, x, y, sd_x, sd_y = peaked
-    run = read_run(folder)
+    run = read_contents(folder)
     with rasterio.open(folder / density_files(run)[run.groups[0]]) as raster:
         # rasterio's own georeferencing reads the values back; a flipped or swapped axis puts the peak elsewhere.
         assert next(raster.sample([(x, y)]))[0] == 100.0
@@ -41,7 +41,7 @@ def test_peak_is_found_at_its_coordinates(peaked):
 
 
 def test_raster_says_what_it_holds(written):
-    run = read_run(written.folder)
+    run = read_contents(written.folder)
     for group, name in density_files(run).items():
         with rasterio.open(written.folder / name) as raster:
             assert raster.crs.to_epsg() == 32631
@@ -107,7 +107,7 @@ def test_outline_is_where_most_draws_put_the_closed_form(outlines, five):
     row = outlines[
         (outlines["group"] == "Quarry & Sons") & (outlines["isopleth"] == 95) & (outlines["probability"] == 0.5)
     ].iloc[0]
-    run = read_run(five.folder)
+    run = read_contents(five.folder)
     home = [float(run.constant[key].sel(group="Quarry & Sons")) for key in ("home_x", "home_y")]
     distance = np.hypot(*(shapely.get_coordinates(row.geometry) - home).T)
     assert np.all(np.abs(distance - radius) < 100.0)  # within one cell, everywhere
@@ -115,7 +115,7 @@ def test_outline_is_where_most_draws_put_the_closed_form(outlines, five):
 
 
 def test_outlines_keep_off_ground_that_is_not_habitable(outlines, five):
-    run = read_run(five.folder)
+    run = read_contents(five.folder)
     row, column = np.nonzero(~run.inside)
     half = run.cell_m / 2
     x, y = run.x_m[column], run.y_m[row]
@@ -126,7 +126,7 @@ def test_outlines_keep_off_ground_that_is_not_habitable(outlines, five):
 
 
 def test_area_at_the_edge_counts_the_habitable_share_only(new_run):
-    run = read_run(new_run())
+    run = read_contents(new_run())
     run.space_use["inside_probability"][:] = 1.0
     made = isopleth_outlines(run)
     habitable_km2 = run.habitable.sum() * 0.01
@@ -137,7 +137,7 @@ def test_area_at_the_edge_counts_the_habitable_share_only(new_run):
 
 def test_place_nowhere_sure_keeps_an_empty_row(new_run):
     folder = new_run()
-    run = read_run(folder)
+    run = read_contents(folder)
     run.space_use["inside_probability"][:] = np.where(run.inside, 0.2, np.nan)
     made = isopleth_outlines(run)
     sure = made[made["probability"] == 0.95]
@@ -146,7 +146,7 @@ def test_place_nowhere_sure_keeps_an_empty_row(new_run):
 
 
 def test_cells_inside_in_exactly_half_of_the_draws_are_as_likely_as_not(new_run):
-    run = read_run(new_run())
+    run = read_contents(new_run())
     run.space_use["inside_probability"][:] = 0.5
     made = isopleth_outlines(run)
     half = made[made["probability"] == 0.5]

@@ -10,7 +10,7 @@ import pytest
 import xarray as xr
 
 from bayesrange import StudyError
-from bayesrange.report import Run, read_run, write
+from bayesrange.report import Contents, read_contents, write
 from bayesrange.report._format import bar, interval, number
 from bayesrange.report._parameters import Gate, parameter_blocks, split_name
 from bayesrange.report._sentences import CAUTIONS, NOTES, sparse_note
@@ -124,7 +124,7 @@ def test_many_groups_get_numbers_that_the_page_explains(twelve, five):
 
 def test_record_holds_seed_versions_and_hashes(five):
     words = Page(five.html).words
-    facts = read_run(five.folder).facts
+    facts = read_contents(five.folder).facts
     assert facts["files"]["fixes.csv"] in words and "seed 20" in words and "0.1.0" in words
 
 
@@ -178,7 +178,7 @@ def test_parameter_named_like_a_missing_value_stays_a_name(new_run):
     table = pd.read_csv(file)
     table.loc[0, "parameter"] = "NA"
     table.to_csv(file, index=False)
-    assert read_run(folder).parameters.loc[0, "parameter"] == "NA"
+    assert read_contents(folder).parameters.loc[0, "parameter"] == "NA"
 
 
 @pytest.mark.parametrize(
@@ -219,7 +219,7 @@ def test_sparse_data_is_said_where_the_prior_makes_the_width(new_run):
     table = pd.read_csv(file).assign(rhat=1.0, contraction=0.99)
     table.loc[table["parameter"] == "avoidance", "contraction"] = 0.36
     table.to_csv(file, index=False)
-    blocks = parameter_blocks(read_run(folder), Gate(chains=4))
+    blocks = parameter_blocks(read_contents(folder), Gate(chains=4))
     notes = {row.name: row.notes for row in blocks[0]["rows"]}
     # √(1 − 0.36) = 0.8
     assert notes["avoidance"][-1] == sparse_note("avoidance", 0.8) and "80 %" in notes["avoidance"][-1]
@@ -240,7 +240,7 @@ def test_rows_that_miss_the_gate_are_marked():
 
 def read_rows(table):
     empty = xr.Dataset()
-    run = Run(Path("nowhere"), {}, table, empty, empty, empty, empty, empty)
+    run = Contents(Path("nowhere"), {}, table, empty, empty, empty, empty, empty)
     return parameter_blocks(run, Gate(chains=4))[0]["rows"]
 
 

@@ -5,7 +5,7 @@ import pandas as pd
 import pytest
 import xarray as xr
 
-from bayesrange.report import overlaps_table, ranges_table, read_run
+from bayesrange.report import overlaps_table, ranges_table, read_contents
 
 
 def space_use(folder) -> xr.Dataset:
@@ -32,7 +32,7 @@ def test_ranges_are_quantiles_of_the_draws(written):
 
 def test_median_area_is_near_the_closed_form(five):
     # Holgate–Okubo, β² × area of the 95 % isopleth = π (χ²₄(0.95)/2)² = 70.69919: scipy.stats.chi2, wide area.
-    table = ranges_table(read_run(five.folder))
+    table = ranges_table(read_contents(five.folder))
     parameters = pd.read_csv(five.folder / "tables" / "parameters.csv").set_index("parameter")
     wide = table[(table["isopleth"] == 95) & (table["group"] == "Quarry & Sons")].iloc[0]
     expected = 70.69919 / parameters.loc["localising", "median"] ** 2
@@ -43,7 +43,7 @@ def test_median_area_is_near_the_closed_form(five):
 def test_convergence_of_areas_is_what_arviz_gives(five):
     import arviz_stats
 
-    table = ranges_table(read_run(five.folder)).set_index(["group", "isopleth"])
+    table = ranges_table(read_contents(five.folder)).set_index(["group", "isopleth"])
     areas = space_use(five.folder)["area_km2"].sel(group="Fen, lower", isopleth=95)
     row = table.loc[("Fen, lower", 95)]
     assert row["ess_bulk"] == pytest.approx(float(arviz_stats.ess(areas)), rel=1e-12)
@@ -51,7 +51,7 @@ def test_convergence_of_areas_is_what_arviz_gives(five):
 
 
 def test_area_that_does_not_vary_has_no_rhat(new_run):
-    run = read_run(new_run())
+    run = read_contents(new_run())
     run.space_use["area_km2"][:] = 1.25
     table = ranges_table(run)
     assert table[["ess_bulk", "rhat"]].isna().all(axis=None)
@@ -78,7 +78,7 @@ def test_intervals_take_the_share_of_the_parameters_table(new_run):
     folder = new_run()
     file = folder / "tables" / "parameters.csv"
     pd.read_csv(file).assign(prob=0.5).to_csv(file, index=False)
-    run = read_run(folder)
+    run = read_contents(folder)
     draws = run.space_use["overlap"].values[..., 0, 1]
     row = overlaps_table(run).iloc[0]
     assert row["prob"] == 0.5
