@@ -9,7 +9,7 @@ from rich.markup import escape
 from rich.progress import BarColumn, Progress, TaskID, TextColumn
 from rich.table import Table
 
-from bayesrange.inference import Run, cards, fit, open_run
+from bayesrange.inference import Run
 
 
 def fit_and_report(study: Path, out: Path | None, again: bool, processes: int | None) -> Run:
@@ -18,6 +18,7 @@ def fit_and_report(study: Path, out: Path | None, again: bool, processes: int | 
     Raises:
         StudyError: the input is wrong.
     """
+    from bayesrange.inference import fit, open_run
     from bayesrange.report import write
 
     console = Console()
@@ -155,7 +156,7 @@ def show_cards(name: str | None, study: Path | None) -> None:
     Raises:
         StudyError: no such card.
     """
-    from bayesrange.inference import find_card, read_card
+    from bayesrange.inference import cards, find_card, read_card
 
     console = Console()
     folder = study.parent if study is not None and study.is_file() else study

@@ -103,10 +103,8 @@ def main(arguments: list[str] | None = None) -> int:
     except StudyError as error:
         print(f"bayesrange: {error}", file=sys.stderr)
         return WRONG_INPUT
-    except KeyboardInterrupt:
+    except (KeyboardInterrupt, typer.Abort):  # typer turns the first into the second
         print("bayesrange: stopped; the same command goes on from here.", file=sys.stderr)
-        return INTERRUPTED
-    except typer.Abort:
         return INTERRUPTED
     except Exception as error:
         return _unexpected(error)

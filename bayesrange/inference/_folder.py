@@ -11,14 +11,15 @@ FORMAT = 1
 """Number of the run folder's format; it changes when a table or a key changes its meaning."""
 
 
-def choose_folder(study_folder: Path, card: str, out: Path | None, again: bool) -> Path:
+def choose_folder(study_folder: Path, card: str, out: Path | None, again: bool, fingerprint: str = "") -> Path:
     """Folder of a run: `runs/<card>` beside the study, or `out`.
 
     Args:
         study_folder: where the study file is.
         card: name of the model card.
         out: folder that the user asked for.
-        again: make a new folder (`-2`, `-3`, …) where a finished run stands.
+        again: make a new folder (`-2`, `-3`, …) where a finished run, or an unfinished one of other input, stands.
+        fingerprint: of the input; an unfinished run with it is gone on with.
 
     Raises:
         StudyError: a finished run, or something that is no run, is there already.
@@ -26,7 +27,7 @@ def choose_folder(study_folder: Path, card: str, out: Path | None, again: bool) 
     folder = out or study_folder / "runs" / card
     if again:
         number, base = 1, folder
-        while folder.exists():
+        while folder.exists() and not _goes_on(folder, fingerprint):
             number += 1
             folder = base.with_name(f"{base.name}-{number}")
         return folder
@@ -42,6 +43,27 @@ def choose_folder(study_folder: Path, card: str, out: Path | None, again: bool) 
     if folder.exists() and any(folder.iterdir()) and not (folder / "checkpoints").is_dir():
         raise StudyError(f"{folder}: this folder holds other things than a run; choose another with --out.")
     return folder
+
+
+def _goes_on(folder: Path, fingerprint: str) -> bool:
+    inputs = folder / "checkpoints" / "inputs.json"
+    if (folder / "run.json").exists() or not inputs.is_file():
+        return False
+    return json.loads(inputs.read_text(encoding="utf-8"))["fingerprint"] == fingerprint
+
+
+def make_folder(folder: Path) -> None:
+    """Make a folder and those above it.
+
+    Raises:
+        StudyError: the system does not let us.
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise StudyError(
+            f"{folder}: this folder cannot be made ({error.strerror}); choose another with --out."
+        ) from error
 
 
 def write_atomically(path: Path, content: bytes) -> None:

@@ -6,7 +6,7 @@ import os
 import pytest
 
 from bayesrange import StudyError, open_run
-from bayesrange.inference._folder import choose_folder, write_atomically, write_json
+from bayesrange.inference._folder import choose_folder, make_folder, write_atomically, write_json
 
 
 def finished(folder):
@@ -15,8 +15,9 @@ def finished(folder):
     return folder
 
 
-def unfinished(folder):
+def unfinished(folder, fingerprint="abc"):
     (folder / "checkpoints").mkdir(parents=True)
+    (folder / "checkpoints" / "inputs.json").write_text(json.dumps({"fingerprint": fingerprint, "inputs": {}}))
     return folder
 
 
@@ -51,6 +52,20 @@ def test_again_takes_the_plain_name_where_nothing_stands(tmp_path):
 def test_unfinished_run_is_gone_on_with(tmp_path):
     run = unfinished(tmp_path / "runs" / "avoidance")
     assert choose_folder(tmp_path, "avoidance", None, False) == run
+
+
+def test_again_goes_on_with_its_own_unfinished_run_and_with_no_other(tmp_path):
+    finished(tmp_path / "runs" / "avoidance")
+    unfinished(tmp_path / "runs" / "avoidance-2", "other")
+    third = unfinished(tmp_path / "runs" / "avoidance-3", "ours")
+    assert choose_folder(tmp_path, "avoidance", None, True, "ours") == third
+    assert choose_folder(tmp_path, "avoidance", None, True, "new") == tmp_path / "runs" / "avoidance-4"
+
+
+def test_folder_that_cannot_be_made_is_an_error_of_the_input(tmp_path):
+    (tmp_path / "runs").write_text("a file where folders of runs should go")
+    with pytest.raises(StudyError, match="avoidance: this folder cannot be made .*choose another with --out"):
+        make_folder(choose_folder(tmp_path, "avoidance", None, False))
 
 
 def test_empty_folder_will_do(tmp_path):
