@@ -16,6 +16,7 @@ import jax
 import jax.numpy as jnp
 import klujax_cpp
 from jax.custom_batching import custom_vmap
+from jax.typing import DTypeLike
 from jaxtyping import Array, Float, UInt64
 
 from bayesrange.spaceuse._sparse import Linear, Pattern
@@ -26,7 +27,7 @@ for _name in _TARGETS:
     jax.ffi.register_ffi_target(f"bayesrange_klu_{_name}", getattr(klujax_cpp, _name)(), platform="cpu")
 
 
-def _call(name: str, shape: tuple[int, ...], dtype: type, *arguments: Array, effect: bool = True) -> Array:
+def _call(name: str, shape: tuple[int, ...], dtype: DTypeLike, *arguments: Array, effect: bool = True) -> Array:
     target = jax.ffi.ffi_call(f"bayesrange_klu_{name}", jax.ShapeDtypeStruct(shape, dtype), has_side_effect=effect)
     return target(*arguments)
 

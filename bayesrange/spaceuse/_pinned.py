@@ -9,8 +9,8 @@ import jax
 import jax.numpy as jnp
 from jaxtyping import Array, Float, Int
 
-from bayesrange.spaceuse._operator import Faces, rates
-from bayesrange.spaceuse._sparse import Linear, Pattern, choose, five_point, pinned_values
+from bayesrange.spaceuse._operator import Faces, Rates, rates
+from bayesrange.spaceuse._sparse import Linear, Pattern, choose, five_point, matrix_values, pinned_values
 
 
 class Pinned(NamedTuple):
@@ -42,39 +42,60 @@ class Pinned(NamedTuple):
 
 
 def null_density(
-    drift_x: Float[Array, "groups ny nx-1"],
-    drift_y: Float[Array, "groups ny-1 nx"],
+    drift_x: Float[Array, "groups ny faces_x"],
+    drift_y: Float[Array, "groups faces_y nx"],
     area: Float[Array, "ny nx"],
     linear: str | None = None,
 ) -> Float[Array, "groups ny nx"]:
     """Steady density of a given drift, for drifts that no card has.
 
     Args:
-        drift_x: drift per unit diffusion times the cell edge [1] on faces between columns, positive towards the east.
-        drift_y: the same between rows, positive towards the north.
+        drift_x: drift per unit diffusion times the cell edge [1] on the nx − 1 faces between columns, positive
+            towards the east.
+        drift_y: the same on the ny − 1 faces between rows, positive towards the north.
         area: habitable area of each cell [km²]; 0 outside. The cells inside must be connected.
         linear: see `flux`.
 
     Returns:
         u ≥ 0 [1/km²] with Σ u·area = 1; not differentiable.
+
+    Raises:
+        ValueError: drifts whose shape does not fit `area`.
     """
-    solver, inside, drift = choose(linear), area > 0, Faces(drift_x, drift_y)
-    pattern, shape = five_point(*area.shape), (drift_x.shape[0], *area.shape)
-    rate = rates(drift, inside)
-    density = jnp.zeros(shape)
-    guess = _path_potential(drift, shape)
-    for _ in range(2):  # the second time with the densest cell pinned
-        pin = jnp.argmax(jnp.where(inside[None], guess, -jnp.inf).reshape(shape[0], -1), axis=1)
-        analysis = solver.analyse(pattern)
-        pinned = Pinned(solver, pattern, analysis, pin)
-        factor = solver.factor(pattern, analysis, pinned_values(pattern, rate, pin, inside))
-        density = guess = pinned.null(factor, shape)
-        solver.release(analysis, factor, density)
+    ny, nx = area.shape
+    if drift_x.shape[1:] != (ny, nx - 1) or drift_y.shape[1:] != (ny - 1, nx):
+        raise ValueError(
+            f"`drift_x` and `drift_y` hold one value per face of {ny} × {nx} cells, (groups, {ny}, {nx - 1}) and "
+            f"(groups, {ny - 1}, {nx}), got {drift_x.shape} and {drift_y.shape}."
+        )
+    solver, inside, pattern = choose(linear), area > 0, five_point(*area.shape)
+    rate = rates(Faces(drift_x, drift_y), inside)
+    first = _resolvent(solver, pattern, rate, area)
+    groups = first.shape[0]
+    analysis = solver.analyse(pattern)
+    pinned = Pinned(solver, pattern, analysis, jnp.argmax(first.reshape(groups, -1), axis=1))
+    factor = solver.factor(pattern, analysis, pinned_values(pattern, rate, pinned.pin, inside))
+    null = pinned.null(factor, first.shape)
+    solver.release(analysis, factor, null)
+    # Wells too deep for each other in double precision overflow; what stays in them from everywhere does not.
+    density = jnp.where(jnp.isfinite(null).all((1, 2), keepdims=True), null, first)
     return density / (density * area[None]).sum((1, 2), keepdims=True)
 
 
-def _path_potential(drift: Faces, shape: tuple[int, ...]) -> Float[Array, "groups ny nx"]:
-    """Drift summed up along the south edge and from there northwards: the potential, if there is one."""
-    east = jnp.concatenate([jnp.zeros((shape[0], 1, 1)), jnp.cumsum(drift.x[:, :1], axis=2)], axis=2)
-    north = jnp.concatenate([jnp.zeros((shape[0], 1, shape[2])), jnp.cumsum(drift.y, axis=1)], axis=1)
-    return east + north
+def _resolvent(
+    solver: Linear, pattern: Pattern, rate: Rates, area: Float[Array, "ny nx"]
+) -> Float[Array, "groups ny nx"]:
+    """Density of animals that are now and then put down anywhere: (M + r A) u = r A/ΣA.
+
+    Positive and of mass 1 whatever the drift; close to the null vector where groups mix faster than r, which is 1e−10
+    of the fastest rate and so stands out from rounding.
+    """
+    values = matrix_values(pattern, rate, area > 0)
+    anew = 1e-10 * values.max(1, keepdims=True) * (area / area.max()).reshape(1, -1)
+    values = values + jnp.where(jnp.asarray(pattern.row == pattern.column)[None], anew[:, pattern.row], 0.0)
+    right = anew / area.sum()
+    analysis = solver.analyse(pattern)
+    factor = solver.factor(pattern, analysis, values)
+    flat = solver.solve(pattern, analysis, factor, right, False)
+    solver.release(analysis, factor, flat)
+    return flat.reshape(-1, *area.shape)

@@ -23,6 +23,10 @@ KLU_VERSIONS = ("0.5.",)
 """Releases of klujax whose foreign functions were tried: they check neither the number nor the kind of arguments."""
 
 
+LARGER = 1e-14
+"""Excess of the diagonal of a pinned matrix, some tens of rounding errors."""
+
+
 class Pattern(NamedTuple):
     """Compressed columns of the five-point pattern (NumPy, made at trace time).
 
@@ -72,18 +76,26 @@ def five_point(ny: int, nx: int) -> Pattern:
     return Pattern(row[order], column[order], start.astype(np.int32), order.astype(np.int32), cell.size)
 
 
+def matrix_values(
+    pattern: Pattern, rate: Rates, inside: Bool[Array, "ny nx"]
+) -> Float[Array, "groups entries"]:
+    """Entries of M, the identity outside."""
+    main = jnp.where(inside[None], diagonal(rate), 1.0)
+    parts = (main, -rate.onward.x, -rate.back.x, -rate.onward.y, -rate.back.y)
+    return jnp.concatenate([part.reshape(main.shape[0], -1) for part in parts], axis=1)[:, pattern.source]
+
+
 def pinned_values(
     pattern: Pattern, rate: Rates, pin: Int[Array, " groups"], inside: Bool[Array, "ny nx"]
 ) -> Float[Array, "groups entries"]:
-    """Entries of M with the row of cell `pin` replaced by that of the identity, and the identity outside.
+    """Entries of M with the row of cell `pin` replaced by that of the identity.
 
-    If anything is not finite all is the identity: sparse solvers stop the program at such input; the solve reports it.
+    The diagonal is a little larger: a pivot that cancels to 0, in a well that hardly anybody leaves, would stop the
+    program. If anything is not finite all is the identity, for the same reason. The solve sees to both.
     """
-    groups = pin.shape[0]
-    main = jnp.where(inside[None], diagonal(rate), 1.0)
-    parts = (main, -rate.onward.x, -rate.back.x, -rate.onward.y, -rate.back.y)
-    values = jnp.concatenate([part.reshape(groups, -1) for part in parts], axis=1)[:, pattern.source]
+    values = matrix_values(pattern, rate, inside)
     identity = jnp.asarray(pattern.row == pattern.column, values.dtype)[None, :]
+    values = values * (1 + LARGER * identity)
     pinned = jnp.asarray(pattern.row)[None, :] == pin[:, None]
     return jnp.where(pinned | ~jnp.isfinite(values).all(), identity, values)
 

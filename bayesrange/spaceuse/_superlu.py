@@ -63,7 +63,7 @@ def _refactor(pattern: Pattern, analysis: tuple[()], factor: Array, values: Floa
 def _solve(
     pattern: Pattern, analysis: tuple[()], factor: Array, right: Float[Array, "groups cells"], transposed: bool
 ) -> Array:
-    def on_host(values: np.ndarray, right: np.ndarray) -> np.ndarray:
+    def on_host(values: Array, right: Array) -> np.ndarray:
         copies = np.array(values), np.array(right)
         return _thread.submit(_solve_groups, pattern, *copies, transposed).result()
 
