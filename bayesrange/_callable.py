@@ -1,4 +1,4 @@
-"""A subpackage that is a command as well: `bayesrange.report(run)` beside `from bayesrange.report import read_contents`."""
+"""A subpackage that is a command too: `bayesrange.report(run)` beside `from bayesrange.report import write`."""
 
 import sys
 from collections.abc import Callable

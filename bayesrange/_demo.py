@@ -67,7 +67,7 @@ def compare_with_truth(run: Run) -> None:
     console = Console()
     screen = Table(title="What the simulated animals did, and what the fit found", title_justify="left")
     for name in ("parameter", "unit", "true", "median", "90 % interval", "z", "inside"):
-        screen.add_column(name, justify="left" if name in ("parameter", "unit") else "right")
+        screen.add_column(name, justify="left" if name in ("parameter", "unit") else "right", overflow="fold")
     for row in table.itertuples():
         interval = f"{row.lower:.3g} to {row.upper:.3g}"
         screen.add_row(
