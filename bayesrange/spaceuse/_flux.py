@@ -16,10 +16,10 @@ from jaxtyping import Array, Float, Int
 from bayesrange.spaceuse._coupling import Theta, balance, felt_scent, gradient_state
 from bayesrange.spaceuse._fixed_point import TOLERANCE, Iteration, anderson
 from bayesrange.spaceuse._flux_adjoint import FAINT, adjoint, quotient
-from bayesrange.spaceuse._operator import drift_terms, face_drift, rates, steepest
+from bayesrange.spaceuse._operator import Faces, drift_terms, face_drift, rates, steepest
 from bayesrange.spaceuse._pinned import Pinned
 from bayesrange.spaceuse._scent import foreign_scent
-from bayesrange.spaceuse._solution import SOLVED, TOO_STEEP, Solution, result_code
+from bayesrange.spaceuse._solution import NO_STEADY_SCENT, NOT_FINITE, TOO_STEEP, Solution, result_code
 from bayesrange.spaceuse._sparse import Linear, choose, five_point, pinned_values
 from bayesrange.spaceuse._special import STEEPEST
 from bayesrange.spaceuse._terms import Parameters, Setting
@@ -71,7 +71,8 @@ def flux(
     foreign = jnp.where(domain.inside[None], scent, 0.0) if coupled else jnp.zeros_like(scent)
     code = result_code(log_density, found.residual, load, TOLERANCE, domain.inside)
     steep = steepest(face_drift(found.foreign, drift_terms(parameters, setting)), domain.inside)
-    code = jnp.where((code == SOLVED) & (steep > STEEPEST), TOO_STEEP, code)
+    worse = (code == NO_STEADY_SCENT) | (code == NOT_FINITE)
+    code = jnp.where((steep > STEEPEST) & ~worse, TOO_STEEP, code)
     return Solution(log_density, foreign, code, found.steps, found.residual, load)
 
 
@@ -106,13 +107,15 @@ def _iterate(theta: Theta, linear: Linear, coupled: bool, start: str) -> tuple[F
     pattern = five_point(*inside.shape)
     analysis = linear.analyse(pattern)
     pinned = Pinned(linear, pattern, analysis, jnp.argmax(law.reshape(law.shape[0], -1), axis=1))
+    too_steep = steepest(face_drift(foreign, terms), inside) > STEEPEST  # then the start is all there is
     first_steps = 0 if coupled and start == "uncoupled" else STEPS  # there it only looks where groups would be
 
     def values(foreign: Array) -> Array:
-        return pinned_values(pattern, rates(face_drift(foreign, terms), inside), pinned.pin, inside)
+        drift = Faces(*(jnp.where(too_steep, 0.0, w) for w in face_drift(foreign, terms)))
+        return pinned_values(pattern, rates(drift, inside), pinned.pin, inside)
 
     def unfinished(state: tuple[Found, Any]) -> Array:
-        return (state[0].rounds < ROUNDS) & (state[0].residual > TOLERANCE)
+        return (state[0].rounds < ROUNDS) & (state[0].residual > TOLERANCE) & ~too_steep
 
     def advance(state: tuple[Found, Any]) -> tuple[Found, Any]:
         found, factor = state

@@ -16,7 +16,7 @@ import jax
 import jax.numpy as jnp
 import klujax_cpp
 from jax.custom_batching import custom_vmap
-from jax.typing import DTypeLike
+from jax.typing import ArrayLike, DTypeLike
 from jaxtyping import Array, Float, UInt64
 
 from bayesrange.spaceuse._sparse import Linear, Pattern
@@ -32,15 +32,16 @@ def _call(name: str, shape: tuple[int, ...], dtype: DTypeLike, *arguments: Array
     return target(*arguments)
 
 
-def _as_groups(size: int, batched: bool, array: Array) -> Array:
+def _as_groups(size: int, batched: bool, array: ArrayLike) -> Array:
     """A batch of arrays led by groups, as one array with more groups."""
+    array = jnp.asarray(array)
     array = array if batched else jnp.broadcast_to(array[None], (size, *array.shape))
     return array.reshape(size * array.shape[1], *array.shape[2:])
 
 
-def _same(batched: list, arguments: tuple[Array, ...]) -> list[Array]:
+def _same(batched: list, arguments: tuple[ArrayLike, ...]) -> list[Array]:
     """What belongs to the pattern is one for a whole batch: where a loop has made a batch of it, all entries agree."""
-    return [a[0] if b else a for b, a in zip(batched, arguments, strict=True)]
+    return [jnp.asarray(a)[0] if b else jnp.asarray(a) for b, a in zip(batched, arguments, strict=True)]
 
 
 def _analyse(pattern: Pattern) -> UInt64[Array, ""]:
@@ -75,7 +76,7 @@ def _numeric(name: str, *arguments: Array) -> UInt64[Array, " groups"]:
         return _call(name, values.shape[:1], jnp.uint64, row, column, values, analysis, *old)
 
     @run.def_vmap
-    def _(size: int, batched: list, *arguments: Array) -> tuple[Array, bool]:
+    def _(size: int, batched: list, *arguments: ArrayLike) -> tuple[Array, bool]:
         each = [_as_groups(size, b, a) for b, a in zip(batched[3:], arguments[3:], strict=True)]
         return run(*_same(batched[:3], arguments[:3]), *each).reshape(size, -1), True
 
@@ -97,7 +98,7 @@ def _solve(
         return _call(name, column.shape, column.dtype, analysis, factor, column, effect=False)[:, :, 0]
 
     @run.def_vmap
-    def _(size: int, batched: list, *arguments: Array) -> tuple[Array, bool]:
+    def _(size: int, batched: list, *arguments: ArrayLike) -> tuple[Array, bool]:
         each = [_as_groups(size, b, a) for b, a in zip(batched[1:], arguments[1:], strict=True)]
         solution = run(*_same(batched[:1], arguments[:1]), *each)
         return solution.reshape(size, -1, solution.shape[-1]), True

@@ -3,6 +3,7 @@
 The pinned cell should be the densest, so that all others are at most about 1 and can only underflow.
 """
 
+from functools import partial
 from typing import Any, NamedTuple
 
 import jax
@@ -41,6 +42,7 @@ class Pinned(NamedTuple):
         return jax.nn.one_hot(self.pin, self.pattern.size, dtype=jnp.float64)
 
 
+@partial(jax.jit, static_argnames="linear")
 def null_density(
     drift_x: Float[Array, "groups ny faces_x"],
     drift_y: Float[Array, "groups faces_y nx"],

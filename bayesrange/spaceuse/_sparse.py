@@ -76,9 +76,7 @@ def five_point(ny: int, nx: int) -> Pattern:
     return Pattern(row[order], column[order], start.astype(np.int32), order.astype(np.int32), cell.size)
 
 
-def matrix_values(
-    pattern: Pattern, rate: Rates, inside: Bool[Array, "ny nx"]
-) -> Float[Array, "groups entries"]:
+def matrix_values(pattern: Pattern, rate: Rates, inside: Bool[Array, "ny nx"]) -> Float[Array, "groups entries"]:
     """Entries of M, the identity outside."""
     main = jnp.where(inside[None], diagonal(rate), 1.0)
     parts = (main, -rate.onward.x, -rate.back.x, -rate.onward.y, -rate.back.y)
