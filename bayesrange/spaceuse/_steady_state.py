@@ -36,10 +36,9 @@ def steady_state(
     """
     if solver not in SOLVERS:
         raise ValueError(f"`solver` must be one of {', '.join(SOLVERS)}, got {solver!r}.")
+    if throw and solver == "gibbs" and np.any(np.asarray(parameters.retreat) != 0):
+        raise ValueError("`retreat` is not a gradient of a potential: use solver='flux'.")
     solution = SOLVERS[solver](parameters, setting, coupled=coupled, **options)
-    if throw:
-        if solver == "gibbs" and np.any(np.asarray(parameters.retreat) != 0):
-            raise ValueError("`retreat` is not a gradient of a potential: use solver='flux'.")
-        if int(solution.result) != SOLVED:
-            raise SolveError(SENTENCES[int(solution.result)])
+    if throw and int(solution.result) != SOLVED:
+        raise SolveError(SENTENCES[int(solution.result)])
     return solution

@@ -1,8 +1,8 @@
 """A real point pattern: trees and slope on Barro Colorado Island (data/SOURCE.md), by the card `resources`.
 
 With no home and no neighbours u = exp(γ h)/∫exp(γ h): n positions have the likelihood of a log-linear Poisson process
-given n. Published: Baddeley, Rubak & Turner 2015, Spatial Point Patterns, ch. 9 (authors' sample chapter, p. 306–335), by
-quadrature; exact: Newton's method on pixels, equal to statsmodels' GLM and base R's glm to 1e-9 (2026-12-01).
+given n. Published: Baddeley, Rubak & Turner 2015, Spatial Point Patterns, ch. 9 (authors' sample chapter, p. 306–335),
+by quadrature; exact: Newton's method on pixels, equal to statsmodels' GLM and base R's glm to 1e-9 (2026-12-01).
 """
 
 from pathlib import Path

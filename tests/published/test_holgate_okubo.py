@@ -43,7 +43,7 @@ def fitted_order(cells, errors):
 
 
 def assert_order_2(cells, errors):
-    """Halving the cell quarters the error, the better the smaller the cell: the next term is ε³ (1.90 and 1.95 seen)."""
+    """Halving the cell quarters the error, the better the smaller the cell: the next term is ε³ (1.90, 1.95 seen)."""
     first, second = np.diff(np.log(np.abs(errors))) / np.diff(np.log(cells))
     assert abs(second - 2) < 0.08 and abs(second - 2) < abs(first - 2), (errors, first, second)
 
@@ -131,8 +131,8 @@ def bias_of_a_fit(cells_across, how):
 
 
 def test_bias_of_beta_in_a_fit():
-    # Between the centres a straight line lies above the convex law, which biases β up again as much as ε does. Percent by
-    # a separate numpy script without the package (2026-12-01); other places of the home in its cell: ± 2 % of these.
+    # Between the centres a straight line lies above the convex law, which biases β up again as much as ε does. Percent
+    # by a separate numpy script without the package (2026-12-01); other places of the home in its cell: ± 2 % of these.
     across = np.array([24, 16, 8])
     bias = np.array([bias_of_a_fit(n, "bilinear") for n in across])
     # two grids of fixes, both fine against the cell

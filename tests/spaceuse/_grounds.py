@@ -28,14 +28,15 @@ def square(n: int = 24, cell: float = 0.1, perception: float = 0.2, ny: int | No
 def ragged_grid(ny: int = 18, nx: int = 22, cell_m: float = 100.0) -> Grid:
     """An ellipse with a pond and an inlet: whole, partial and missing cells; basis share summed by its definition."""
     at_y, at_x = ((np.arange(k * SUB) + 0.5) / SUB for k in (ny, nx))
-    x, y = np.meshgrid(at_x, at_y)
+    x, y = np.meshgrid(at_x * 22 / nx, at_y * 18 / ny)
     land = ((x - 11) / 10.6) ** 2 + ((y - 9) / 8.3) ** 2 < 1
     land &= (x - 15.2) ** 2 + (y - 11.1) ** 2 > 2.1**2
     land &= ~((abs(x - 6) < 0.9) & (y < 6.3))
     habitable = land.reshape(ny, SUB, nx, SUB).mean((1, 3))
     west, south, crs = 1000.0, -300.0, pyproj.CRS(32631)
     grid = Grid(west, south, cell_m, crs, habitable, np.zeros((ny, nx)), land)
-    rows, columns, weight = grid.bilinear(west + cell_m * x[land], south + cell_m * y[land])
+    x, y = np.meshgrid(west + cell_m * at_x, south + cell_m * at_y)
+    rows, columns, weight = grid.bilinear(x[land], y[land])
     share = np.bincount((rows * nx + columns).ravel(), weights=weight.ravel(), minlength=ny * nx) / SUB**2
     return Grid(west, south, cell_m, crs, habitable, share.reshape(ny, nx), land)
 

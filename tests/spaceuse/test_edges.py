@@ -1,5 +1,6 @@
 """The corners of the model: one group, no layers, extreme drifts, marks without bound, numbers that are none."""
 
+import jax
 import jax.numpy as jnp
 import numpy as np
 import numpyro
@@ -58,14 +59,17 @@ def test_extreme_drifts_keep_mass_and_sign_and_give_no_nan(avoidance):
         assert np.isfinite(np.asarray(solution.foreign)).all()
 
 
-def log_posterior(setting, over_marking):
-    """Log-density of a model with three fixes, one a group, at given parameters."""
+def log_posterior(setting):
+    """Log-density, by over-marking, of a model with three fixes, one a group."""
     reading = Reading(jnp.asarray([[130], [135], [270]]), jnp.zeros((3, 1)), jnp.arange(3), setting.domain.area)
-    values = {"localising": 4.0, "avoidance": 0.5, "over_marking": over_marking}
-    values = {name: jnp.asarray(value) for name, value in values.items()}
-    spec, data = make_model(setting, reading, {name: ("half-normal", (1.0,)) for name in values}, HOMES)
-    density, _ = numpyro.infer.util.log_density(range_model, (spec, data), {}, values)
-    return float(density)
+    names = ("localising", "avoidance", "over_marking")
+    spec, data = make_model(setting, reading, {name: ("half-normal", (1.0,)) for name in names}, HOMES)
+
+    def density(over_marking):
+        values = dict(zip(names, (jnp.asarray(4.0), jnp.asarray(0.5), over_marking), strict=True))
+        return numpyro.infer.util.log_density(range_model, (spec, data), {}, values)[0]
+
+    return jax.jit(density)
 
 
 def test_marks_beyond_their_bound_have_probability_0_and_no_nan():
@@ -77,8 +81,9 @@ def test_marks_beyond_their_bound_have_probability_0_and_no_nan():
     assert int(beyond.result) == NO_STEADY_SCENT and float(beyond.load) >= 1
     assert not np.isnan(np.asarray(beyond.log_density)).any()
     assert "over-marking" in SENTENCES[NO_STEADY_SCENT].lower()
-    assert np.isfinite(log_posterior(setting, 0.03))
-    assert log_posterior(setting, 50.0) == -np.inf
+    density = log_posterior(setting)
+    assert np.isfinite(density(jnp.asarray(0.03)))
+    assert density(jnp.asarray(50.0)) == -np.inf
 
 
 def test_load_of_a_solution_is_mq_of_its_densest_cell():
@@ -106,12 +111,12 @@ def test_numbers_that_are_none_are_told_apart(broken, coupled):
 def test_asked_for_directly_a_failure_is_an_error_that_says_why():
     setting = make_setting(square(20), animals=[1.0, 2.0, 3.0])
     with pytest.raises(SolveError, match="Over-marking is so strong"):
-        steady_state(make_parameters(HOMES, 4.0, 0.5, over_marking=50.0), setting, throw=True)
+        steady_state(make_parameters(HOMES, 4.0, 0.5, over_marking=50.0), setting, coupled=False, throw=True)
     with pytest.raises(ValueError, match="`retreat` is not a gradient"):
         steady_state(make_parameters(HOMES, 4.0, 0.5, retreat=1.0), setting, throw=True)
     with pytest.raises(ValueError, match=r"`solver` must be one of .*got 'fluks'"):
         steady_state(make_parameters(HOMES), setting, solver="fluks")
-    assert int(steady_state(make_parameters(HOMES, 4.0, 0.5), setting, throw=True).result) == SOLVED
+    assert int(steady_state(make_parameters(HOMES, 4.0), setting, coupled=False, throw=True).result) == SOLVED
 
 
 def test_two_groups_of_one_home_still_have_a_steady_state():

@@ -5,7 +5,7 @@ import jax.numpy as jnp
 import numpy as np
 import pytest
 from jax.flatten_util import ravel_pytree
-from spaceuse._grounds import make_parameters, make_setting, ragged, smooth_layer, square
+from spaceuse._grounds import make_parameters, make_setting, ragged, smooth_layer, solve, square
 
 from bayesrange.spaceuse import NOT_CONVERGED, SOLVED, Parameters, gibbs
 from bayesrange.spaceuse import _fixed_point as fixed_point
@@ -91,7 +91,7 @@ def test_uncoupled_gradient_is_the_score_of_a_gibbs_law():
 def test_gradient_at_no_avoidance_is_the_uncoupled_one_and_avoidances_own():
     # At α = 0: d log u_i/dα_i = E F̃_i − F̃_i(x), F̃ that of groups without neighbours.
     setting = steep_setting()
-    alone = gibbs(make_parameters(HOMES, 4.0, 0.0, [0.3, 0.1]), setting)
+    alone = solve(make_parameters(HOMES, 4.0, 0.0, [0.3, 0.1]), setting)
     foreign, density = np.asarray(alone.foreign), np.asarray(alone.density)
     mean = (density * np.asarray(setting.domain.area) * foreign).sum((1, 2))
 

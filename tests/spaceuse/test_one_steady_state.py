@@ -14,7 +14,7 @@ import numpy as np
 import pytest
 from scipy import stats
 from scipy.stats import qmc
-from spaceuse._grounds import make_parameters, make_setting, smooth_layer, square
+from spaceuse._grounds import make_parameters, make_setting, smooth_layer, solve, square
 
 from bayesrange.inference import find_card, read_card
 from bayesrange.spaceuse import SOLVED, Parameters, Setting, arrival_scent, gibbs
@@ -68,11 +68,11 @@ def solve_from_everywhere(parameters, setting, others):
     orders = jnp.asarray(list(permutations(range(setting.marking.size))))
     begin = jnp.concatenate([jax.lax.map(arrive, orders), others])
 
-    def solve(start):
+    def from_start(start):
         solution = gibbs(parameters, setting, start=start)
         return solution.result, solution.density
 
-    return gibbs(parameters, setting), *jax.lax.map(solve, begin)
+    return gibbs(parameters, setting), *jax.lax.map(from_start, begin)
 
 
 @pytest.mark.parametrize("over_marking", [False, True])
@@ -113,7 +113,7 @@ def test_the_first_to_arrive_meets_no_scent_and_the_last_that_of_all():
     setting = make_setting(domain, [], [2.0, 1.0, 3.0])
     parameters = make_parameters([[0.3, 0.3], [0.9, 0.4], [0.6, 0.9]], 4.0, 1.0)
     scent = np.asarray(arrival_scent(parameters, setting, [2, 0, 1]))
-    alone = gibbs(parameters._replace(avoidance=jnp.zeros(3)), setting)
+    alone = solve(parameters._replace(avoidance=jnp.zeros(3)), setting)
     # group 2 settles first, as if alone: what 0 and 1 perceive of it is in both their scents
     own = np.asarray(alone.foreign)
     of_2 = (own[0] + own[1] - own[2]) / 2

@@ -18,6 +18,12 @@ def grid():
     return ragged_grid()
 
 
+@pytest.fixture(scope="module")
+def coarse():
+    """The same land in cells of 200 m, for sums over every place."""
+    return ragged_grid(9, 11, 200.0)
+
+
 def holgate(grid, localising=4.0):
     """Log of a round range about a place in the south of the land; its scale is arbitrary."""
     rho = np.hypot(*np.meshgrid(grid.x_m / 1000 - HOME_KM[0], grid.y_m / 1000 - HOME_KM[1]))
@@ -50,21 +56,22 @@ def lattice(grid, margin_m, step_m):
 
 
 @pytest.mark.parametrize("how", ["bilinear", "cell"])
-@pytest.mark.parametrize("error_m", [0.0, 9.9])
-@pytest.mark.parametrize("law", [holgate, rough])
-def test_density_of_fixes_integrates_to_1_over_the_habitable_area(grid, how, error_m, law):
+@pytest.mark.parametrize(("error_m", "law"), [(0.0, holgate), (0.0, rough), (19.9, holgate)])
+def test_density_of_fixes_integrates_to_1_over_the_habitable_area(coarse, how, error_m, law):
+    grid = coarse
     step = grid.cell_m / SUB
     x, y = lattice(grid, 0.0, step)
     land = grid.habitable_at(x, y)
     assert 0.3 < land.mean() < 0.9
     total = read(grid, law(grid), x[land], y[land], error_m, how).sum() * step**2 * KM2
-    # 16,000 additions; the normaliser is the same sum in another order. Below 0.1 cell an error is no error.
+    # 4,000 additions; the normaliser is the same sum in another order. Below 0.1 cell an error is no error.
     assert total == pytest.approx(1.0, abs=100 * EPS)
 
 
 @pytest.mark.parametrize("how", ["bilinear", "cell"])
-@pytest.mark.parametrize("error_m", [12.5, 60.0, 99.0, 101.0, 180.0])
-def test_density_of_fixes_with_error_integrates_to_1_over_the_plane(grid, how, error_m):
+@pytest.mark.parametrize("error_m", [25.0, 120.0, 199.0, 201.0, 360.0])
+def test_density_of_fixes_with_error_integrates_to_1_over_the_plane(coarse, how, error_m):
+    grid = coarse
     # Each node moves the whole density by one shift; where it would leave habitable ground it counts for nothing.
     step = grid.cell_m / SUB
     x, y = lattice(grid, 3 * error_m, step)
@@ -75,13 +82,13 @@ def test_density_of_fixes_with_error_integrates_to_1_over_the_plane(grid, how, e
             reaches |= grid.habitable_at(x + error_m * along, y + error_m * up)
     total = read(grid, holgate(grid), x[reaches], y[reaches], error_m, how).sum() * step**2 * KM2
     # Nodes lie anywhere in their sub-cells, so that this sum is no exact one; for each there is an opposite node, which
-    # takes out the first order: 1e-7 seen, against 1e-3 where the fixes are shifted by a third of a sub-cell.
-    assert total == pytest.approx(1.0, abs=2e-6)
+    # takes out the first order: 3e-6 seen, against 1e-3 where the fixes are shifted by a third of a sub-cell.
+    assert total == pytest.approx(1.0, abs=2e-5)
 
 
 @pytest.mark.parametrize("how", ["bilinear", "cell"])
-def test_density_of_fixes_with_wide_error_integrates_to_1_over_the_plane(grid, how):
-    error_m, step = 250.0, 50.0
+def test_density_of_fixes_with_wide_error_integrates_to_1_over_the_plane(coarse, how):
+    grid, error_m, step = coarse, 450.0, 100.0
     x, y = lattice(grid, 4 * error_m, step)
     rows, columns = np.nonzero(grid.inside)
     reach = 5 * error_m
@@ -116,8 +123,9 @@ def test_cell_reading_is_the_cells_own_density(grid):
     np.testing.assert_allclose(found, expected, rtol=100 * EPS)
 
 
-def convolved(grid, law, x, y, error_m, parts=12):
+def convolved(grid, law, x, y, error_m):
     """∫ u(z) N(y; z, σ²) dz by 4-point Gauss–Legendre in parts² pieces of every cell, u bilinear on the land."""
+    parts = 4 if error_m > 30 else 20  # pieces of 25 or 5 m that end at the kinks of the bilinear surface
     at, weight = np.polynomial.legendre.leggauss(4)
     width = grid.cell_m / parts
     axes = []
