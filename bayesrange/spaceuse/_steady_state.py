@@ -2,6 +2,8 @@
 
 from collections.abc import Callable
 
+import jax
+import jax.numpy as jnp
 import numpy as np
 
 from bayesrange.spaceuse._flux import flux
@@ -38,6 +40,7 @@ def steady_state(
         raise ValueError(f"`solver` must be one of {', '.join(SOLVERS)}, got {solver!r}.")
     if throw and solver == "gibbs" and np.any(np.asarray(parameters.retreat) != 0):
         raise ValueError("`retreat` is not a gradient of a potential: use solver='flux'.")
+    parameters, setting = jax.tree.map(jnp.asarray, (parameters, setting))  # NumPy arrays will do
     solution = SOLVERS[solver](parameters, setting, coupled=coupled, **options)
     if throw and int(solution.result) != SOLVED:
         raise SolveError(SENTENCES[int(solution.result)])

@@ -5,6 +5,7 @@ A pull of constant strength β per unit diffusion gives u = β²/(2π) e^{−βr
 are in units of 1/β. ε is half a cell, as in a fit.
 """
 
+import jax
 import jax.numpy as jnp
 import numpy as np
 import pyproj
@@ -123,22 +124,28 @@ def bias_of_a_fit(cells_across, how):
     centres = (np.arange(n) + 0.5) * cell - half
     setting = make_setting(make_domain(centres, centres, cell**2 * whole, 0.0), softening=cell / 2)
 
+    @jax.jit
     def misfit(beta):
         law = solve(make_parameters(home, beta), setting, coupled=False).log_density
-        return -float(weight @ log_fix_density(law, reading))
+        return -(weight @ log_fix_density(law, reading))
 
-    return optimize.minimize_scalar(misfit, bounds=(0.8, 1.6), method="bounded", options={"xatol": 1e-6}).x - 1
+    return (
+        optimize.minimize_scalar(
+            lambda beta: float(misfit(beta)), bounds=(0.8, 1.6), method="bounded", options={"xatol": 1e-6}
+        ).x
+        - 1
+    )
 
 
 def test_bias_of_beta_in_a_fit():
     # Between the centres a straight line lies above the convex law, which biases β up again as much as ε does. Percent
     # by a separate numpy script without the package (2026-12-01); other places of the home in its cell: ± 2 % of these.
-    across = np.array([24, 16, 8])
+    across = np.array([24, 16])
     bias = np.array([bias_of_a_fit(n, "bilinear") for n in across])
     # two grids of fixes, both fine against the cell
-    np.testing.assert_allclose(100 * bias, [1.404, 2.969, 10.333], rtol=0.005)
+    np.testing.assert_allclose(100 * bias, [1.404, 2.969], rtol=0.005)  # and 10.333 at 8 cells
     # the next term is of order 3 or 4 and already felt at 24 cells
-    assert fitted_order(1 / across[:2], bias[:2]) == pytest.approx(2.0, abs=0.2), bias
+    assert fitted_order(1 / across, bias) == pytest.approx(2.0, abs=0.2), bias
     # Within a cell the law is level, which takes part of ε's bias back: 0.5 and 0.9 % seen.
     for n in (24, 16):
         assert 0 < bias_of_a_fit(n, "cell") < bias_by_softening(n)
