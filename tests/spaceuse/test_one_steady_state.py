@@ -1,8 +1,8 @@
 """From every order in which groups may arrive, and from four other starts, the solver ends in one steady state.
 
 There is no proof that only one exists, and in the far corner of the priors of avoidance-resources (hardly any pull
-home, strong avoidance and a strong response to resources: about one draw in a thousand) there are several, perception or
-not: groups share out the rich patches first come, first served. A fit counts such a parameter set as a failed solve.
+home, strong avoidance and a strong response to resources: about one draw in a thousand) there are several, perception
+or not: groups share out the rich patches first come, first served. A fit counts such a parameter set as a failed solve.
 The last test but one shows that these starts find them.
 """
 
