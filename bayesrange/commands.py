@@ -103,11 +103,12 @@ def main(arguments: list[str] | None = None) -> int:
     except StudyError as error:
         print(f"bayesrange: {error}", file=sys.stderr)
         return WRONG_INPUT
-    except (KeyboardInterrupt, typer.Abort):  # typer turns the first into the second
-        print("bayesrange: stopped; the same command goes on from here.", file=sys.stderr)
-        return INTERRUPTED
+    except (KeyboardInterrupt, typer.Abort):  # typer itself turns an interrupt of a command into its status
+        status = INTERRUPTED
     except Exception as error:
         return _unexpected(error)
+    if status == INTERRUPTED:
+        print("bayesrange: stopped; the same command goes on from here.", file=sys.stderr)
     return status if isinstance(status, int) else 0
 
 

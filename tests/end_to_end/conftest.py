@@ -12,10 +12,10 @@ ROOT = Path(__file__).parents[2]
 
 
 @pytest.fixture(scope="session")
-def environment(tmp_path_factory):
-    """Environment of the commands: the package from the checkout, compiled programs in a folder of this session."""
+def environment(pytestconfig):
+    """Environment of the commands: the package from the checkout, compiled programs in pytest's own cache."""
     path = os.pathsep.join([str(ROOT), *filter(None, [os.environ.get("PYTHONPATH")])])
-    cache = tmp_path_factory.mktemp("cache")
+    cache = pytestconfig.cache.mkdir("commands")
     return {**os.environ, "PYTHONPATH": path, "XDG_CACHE_HOME": str(cache), "COLUMNS": "200"}
 
 

@@ -10,7 +10,7 @@ import xarray as xr
 from inference._tiny_study import HOMES, SETTINGS, SOUTH_GROUP, UNWATCHED
 from inference._twin import Ground, fix_densities, gibbs_law, solitary
 
-from bayesrange import open_run
+from bayesrange import commands, open_run
 from bayesrange.inference import Scales
 from bayesrange.study import autocorrelation_weights, read_study
 
@@ -105,7 +105,9 @@ def test_posterior_has_the_groups_and_dimensions_of_the_format(tree):
     }  # fmt: skip
     for group, variables in expected.items():
         found = tree[group].dataset
-        named = {name: dict(zip(v.dims, v.shape, strict=True)) for name, v in found.data_vars.items() if "chain" in v.dims}
+        named = {
+            name: dict(zip(v.dims, v.shape, strict=True)) for name, v in found.data_vars.items() if "chain" in v.dims
+        }
         assert named == {name: lead | extra for name, extra in variables.items()}, group
     prior = tree["prior"].dataset
     assert set(prior.data_vars) == set(expected["posterior"]) and prior.sizes["chain"] == 1
@@ -137,7 +139,9 @@ def draw_by_hand(tree, info, study, chain, draw):
     at = tree["posterior"].dataset.isel(chain=chain, draw=draw)
     ground = Ground.of(study, ["worms"])
     homes = study.groups[["x", "y"]].to_numpy(float) / 1000
-    potential = solitary(ground, np.full(3, float(at["localising"])), np.full((1, 3), float(at["resource"][0])), homes, 0.05)
+    potential = solitary(
+        ground, np.full(3, float(at["localising"])), np.full((1, 3), float(at["resource"][0])), homes, 0.05
+    )
     marking = np.array([2.0, 3.0, 4.0]) * info["scales"]["a0_km2"]
     return ground, gibbs_law(ground, potential, np.full(3, float(at["avoidance"])), 0.0, marking, 0.2)
 
@@ -148,7 +152,9 @@ def test_what_is_kept_of_a_draw_can_be_redone_by_hand(tree, info, study_folder, 
     ground, density = draw_by_hand(tree, info, study, chain, draw)
     fixes = study.fixes
     owner = fixes["group"].map({name: i for i, name in enumerate(HOMES)}).to_numpy()
-    at = fix_densities(ground, density, fixes["x"].to_numpy(), fixes["y"].to_numpy(), owner, fixes["error_m"].to_numpy())
+    at = fix_densities(
+        ground, density, fixes["x"].to_numpy(), fixes["y"].to_numpy(), owner, fixes["error_m"].to_numpy()
+    )
     kept = tree["log_likelihood/fixes"].values[chain, draw]
     weighted = tree["constant_data/weight"].values * np.log(at)
     np.testing.assert_allclose(kept, weighted, rtol=1e-5, atol=1e-6)  # single precision: 6e-8 of the largest
@@ -227,21 +233,20 @@ def test_finished_run_opens_in_python(run_folder, tree):
     run.posterior.close()
 
 
-def test_second_fit_is_refused_and_changes_nothing(bayesrange, run_folder, study_folder):
+def test_second_fit_is_refused_and_changes_nothing(run_folder, study_folder, capsys):
     before = {file: file.stat().st_mtime_ns for file in study_folder.rglob("*")}
-    answer = bayesrange("fit", study_folder)
-    assert answer.returncode == 2
-    assert answer.stderr == (
+    assert commands.main(["fit", str(study_folder)]) == 2
+    assert capsys.readouterr().err == (
         f"bayesrange: {run_folder}: a finished run is here and is never overwritten; add --again for a new one, or "
         "--out with another folder.\n"
     )
     assert {file: file.stat().st_mtime_ns for file in study_folder.rglob("*")} == before
 
 
-def test_report_is_written_anew_and_the_posterior_left_alone(bayesrange, run_folder):
+def test_report_is_written_anew_and_the_posterior_left_alone(run_folder, capsys):
     before = (run_folder / "posterior.nc").read_bytes()
     (run_folder / "report.html").unlink()
-    answer = bayesrange("report", run_folder)
-    assert answer.returncode == 0, answer.stderr
+    assert commands.main(["report", str(run_folder)]) == 0
+    assert str(run_folder / "report.html") in capsys.readouterr().out.replace("\n", "")
     assert (run_folder / "report.html").stat().st_size > 10_000
     assert (run_folder / "posterior.nc").read_bytes() == before

@@ -4,7 +4,17 @@ import numpy as np
 import pandas as pd
 import pytest
 import xarray as xr
-from inference._tiny_study import HOMES, NORTH, SOUTH, SOUTH_GROUP, UNWATCHED, WEST, fixes_table, groups_table, write_study
+from inference._tiny_study import (
+    HOMES,
+    NORTH,
+    SOUTH,
+    SOUTH_GROUP,
+    UNWATCHED,
+    WEST,
+    fixes_table,
+    groups_table,
+    write_study,
+)
 
 from bayesrange import commands, open_run
 
@@ -54,7 +64,10 @@ def test_run_that_did_not_converge_ends_with_status_3_and_is_written_and_marked(
     status, run = answered
     assert status == 3 and not run.converged and run.info["card"]["name"] == "own"
     assert {"own.toml", "fixes.csv"} <= set(run.info["files"])
-    assert "R-hat cannot be computed from one chain; set chains to at least 2, better 4." in run.info["diagnostics"]["problems"]
+    assert (
+        "R-hat cannot be computed from one chain; set chains to at least 2, better 4."
+        in run.info["diagnostics"]["problems"]
+    )
     assert run.info["diagnostics"]["max_rhat"] is None
     assert "not converged</strong>" in (run.folder / "report.html").read_text(encoding="utf-8")
 
@@ -66,9 +79,11 @@ def test_hierarchical_posterior_has_the_dimensions_of_the_format(answered):
     assert posterior.sizes["chain"] == 1 and posterior.sizes["draw"] == DRAWS
     own = {name: v.dims[2:] for name, v in posterior.data_vars.items() if not name.startswith("group_")}
     assert own == {
-        "localising": ("group",), "localising_population": (), "localising_spread": (), "localising_effect": ("covariate",),
+        "localising": ("group",), "localising_population": (), "localising_spread": (),
+        "localising_effect": ("covariate",),
         "resource": ("layer", "group"), "resource_population": ("layer",), "resource_spread": ("layer",),
-        "resource_effect": ("layer", "covariate"), "home_x": ("home_group",), "home_y": ("home_group",),
+        "resource_effect": ("layer", "covariate"),
+        "home_x": ("home_group",), "home_y": ("home_group",),
     }  # fmt: skip
     assert list(posterior["home_group"].values) == [NORTH]
     assert np.isnan(constant["home_x"].sel(group=NORTH)) and constant["home_x"].sel(group=UNWATCHED) == WEST + 1800

@@ -1,5 +1,6 @@
 """Wrong input: status 2, one sentence on standard error, nothing written."""
 
+import subprocess
 import sys
 
 import pytest
@@ -18,20 +19,23 @@ WRONG = {
     "unknown layer": ({"model": {"layers": ["worm"]}}, "worm"),
     "card with a folder": ({"model": {"card": "../x"}}, "without a folder"),
     "prior of another card": (
-        {"model": {"priors": {"retreat": {"family": "half-normal", "scale": 1.0}}}}, "no such parameter"
+        {"model": {"priors": {"retreat": {"family": "half-normal", "scale": 1.0}}}},
+        "no such parameter",
     ),
     "prior that can be negative": (
-        {"model": {"priors": {"avoidance": {"family": "normal", "mean": 0.0, "sd": 1.0}}}}, "cannot be below 0"
+        {"model": {"priors": {"avoidance": {"family": "normal", "mean": 0.0, "sd": 1.0}}}},
+        "cannot be below 0",
     ),
-    "hierarchical with two": ({"model": {"pooling": "hierarchical"}, "groups": no_groups_with_two()}, "at least 3 groups"),
-    "one group": (
-        {"groups": groups_table().iloc[:1], "fixes": fixes_table().iloc[:100]}, "about neighbours"
+    "hierarchical with two": (
+        {"model": {"pooling": "hierarchical"}, "groups": no_groups_with_two()},
+        "at least 3 groups",
     ),
+    "one group": ({"groups": groups_table().iloc[:1], "fixes": fixes_table().iloc[:100]}, "about neighbours"),
     "no chains": ({"sampling": {"chains": 0}}, "chains"),
     "sensitive": ({"study": {"sensitive": "high"}}, "not built yet"),
     "covariate without hierarchy": ({"model": {"covariates": ["size"]}}, "hierarchical"),
     "home outside": ({"groups": groups_table().assign(x=0.0)}, "outside the study area"),
-}  # fmt: skip
+}
 
 
 @pytest.mark.parametrize("wrong", WRONG)
@@ -109,10 +113,10 @@ def test_cards_are_listed_and_shown(capsys, tmp_path):
     assert "resource: normal (mean 0, sd 2). [bold]" in shown and "Own words" in shown
 
 
-def test_cards_need_no_numerics(bayesrange):
+def test_cards_need_no_numerics():
     # Listing is quick: it must not import what sampling needs. Checked in a process of its own.
-    import subprocess
-
-    code = "import sys; from bayesrange.commands import main; main(['cards', 'localising']); print('jax' in sys.modules)"
+    code = (
+        "import sys; from bayesrange.commands import main; main(['cards', 'localising']); print('jax' in sys.modules)"
+    )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert done.stdout.splitlines()[-1] == "False"

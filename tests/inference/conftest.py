@@ -2,14 +2,35 @@
 
 from collections import namedtuple
 
+import jax
+import jax.numpy as jnp
 import numpy as np
 import pytest
 from inference._tiny_study import HOMES, NORTH, SOUTH, WEST, fixes_table, groups_table, write_study
+from jax.flatten_util import ravel_pytree
 
-from bayesrange.inference import Program, as_arrays, find_card, make_data, make_scales, make_spec, read_card
+from bayesrange.inference import (
+    Program,
+    Whitening,
+    as_arrays,
+    find_card,
+    find_start,
+    make_data,
+    make_scales,
+    make_spec,
+    read_card,
+)  # fmt: skip
+from bayesrange.inference._start import whitening_scale
 from bayesrange.study import autocorrelation_weights, read_study
 
 Model = namedtuple("Model", "study card spec scales weight data program")
+
+
+@pytest.fixture(scope="session", autouse=True)
+def compiled_programs(pytestconfig):
+    """Compiled programs outlive the session, as they do in a fit: compiling is most of what these tests cost."""
+    jax.config.update("jax_compilation_cache_dir", str(pytestconfig.cache.mkdir("programs")))
+    jax.config.update("jax_persistent_cache_min_compile_time_secs", 0.5)
 
 
 def build(file, warmup=60, chunk=50):
@@ -24,6 +45,14 @@ def build(file, warmup=60, chunk=50):
     data = as_arrays(make_data(study, card, spec, scales, weight))
     program = Program(spec, data, warmup, 0.9, chunk)
     return Model(study, card, spec, scales, weight, data, program)
+
+
+def whiten(program, data):
+    """The sampler's coordinates, as the first worker of a fit finds them."""
+    guess = np.asarray(ravel_pytree(program.first_guess(data))[0])
+    start = find_start(lambda z: program.value_and_gradient(jnp.asarray(z), data), guess)
+    scale = whitening_scale(start.curvature, program.apart())
+    return Whitening(jnp.asarray(start.mode), jnp.asarray(scale))
 
 
 @pytest.fixture(scope="session")

@@ -122,9 +122,13 @@ BROKEN = {
     "unknown solver": ('solver = "newton"\n' + GOOD, 'own.toml, solver: expected "flux" or "gibbs", got .newton.'),
     "retreat by gibbs": (GOOD.replace('"avoidance"]', '"retreat"]'), 'own.toml, solver: expected "flux", got .gibbs.'),
     "prior missing": (GOOD.replace("[priors.avoidance]", "[between_groups.avoidance]"), "priors.avoidance"),
-    "prior too many": (GOOD + '[priors.resource]\nfamily = "normal"\nmean = 0\nsd = 1\n', "own.toml, .priors.resource.*no"),
+    "prior too many": (
+        GOOD + '[priors.resource]\nfamily = "normal"\nmean = 0\nsd = 1\n',
+        "own.toml, .priors.resource.*no",
+    ),
     "scaled without a length": (
-        GOOD.replace("scale = 1.0", 'scale = 1.0\nscaled_by = "1/home_length"'), "own.toml, .priors.avoidance.: `scaled_by`"
+        GOOD.replace("scale = 1.0", 'scale = 1.0\nscaled_by = "1/home_length"'),
+        "own.toml, .priors.avoidance.: `scaled_by`",
     ),
     "family": (GOOD.replace('"half-normal"', '"cauchy"'), "`family` must be one of normal, half-normal"),
     "no family": (GOOD.replace('family = "log-normal"', ""), "`family` must be one of .*got None"),
@@ -133,7 +137,10 @@ BROKEN = {
     "number infinite": (GOOD.replace("8.0", "inf"), "`median` must be a number, got inf"),
     "number as flag": (GOOD.replace("8.0", "true"), "`median` must be a number, got True"),
     "spread zero": (GOOD.replace("spread = 0.8", "spread = 0"), "`spread` must be above 0"),
-    "number of another family": (GOOD.replace("scale = 1.0", "scale = 1.0\nmean = 2"), "half-normal takes scale, not mean"),
+    "number of another family": (
+        GOOD.replace("scale = 1.0", "scale = 1.0\nmean = 2"),
+        "half-normal takes scale, not mean",
+    ),
     "scale unknown": (GOOD.replace("1/home_length", "1/cell"), "`scaled_by` must be 1/home_length, got '1/cell'"),
     "negative allowed": (
         GOOD.replace('family = "half-normal"\nscale = 1.0', 'family = "normal"\nmean = 1\nsd = 1'),
@@ -147,7 +154,10 @@ BROKEN = {
         GOOD.replace('family = "half-normal"\nscale = 1.0', 'family = "uniform"\nlow = 2\nhigh = 1'),
         "`low` must be below `high`",
     ),
-    "priors no table": ("priors = 3\n" + GOOD[: GOOD.index("[priors")], "own.toml, .priors.: expected one table a parameter"),
+    "priors no table": (
+        "priors = 3\n" + GOOD[: GOOD.index("[priors")],
+        "own.toml, .priors.: expected one table a parameter",
+    ),
     "between groups misspelt": (
         GOOD + '[between_groups.localizing]\nfamily = "half-normal"\nscale = 1\n',
         "own.toml, .between_groups.localizing.: .*localising",
@@ -161,14 +171,16 @@ BROKEN = {
         "own.toml, .between_groups.localising.: .*scaled_by",
     ),
     "covariate effect": (
-        GOOD + '[covariate_effect]\nfamily = "half-normal"\nscale = 1\n', "own.toml, .covariate_effect.: .*normal"
+        GOOD + '[covariate_effect]\nfamily = "half-normal"\nscale = 1\n',
+        "own.toml, .covariate_effect.: .*normal",
     ),
     "covariate effect off centre": (
-        GOOD + '[covariate_effect]\nfamily = "normal"\nmean = 1\nsd = 1\n', "own.toml, .covariate_effect.: .*mean 0"
+        GOOD + '[covariate_effect]\nfamily = "normal"\nmean = 1\nsd = 1\n',
+        "own.toml, .covariate_effect.: .*mean 0",
     ),
     "covariate effect no table": ("covariate_effect = 3\n" + GOOD, "own.toml, .covariate_effect."),
     "references no tables": ('references = ["Okubo 1980"]\n' + GOOD, "own.toml, .*references"),
-}  # fmt: skip
+}
 
 
 @pytest.mark.parametrize("broken", BROKEN)
@@ -196,7 +208,10 @@ def test_priors_of_the_study_take_the_place_of_the_cards(card):
 @pytest.mark.parametrize(
     ("override", "sentence"),
     [
-        ({"avoidence": {}}, "study.toml, .model.priors. avoidence: the card own has no such .* Did you mean avoidance?"),
+        (
+            {"avoidence": {}},
+            "study.toml, .model.priors. avoidence: the card own has no such .* Did you mean avoidance?",
+        ),
         ({"resource": {}}, "study.toml, .model.priors. resource: the card own has no such parameter"),
         ({"avoidance": {"family": "normal", "mean": 0, "sd": 1}}, "study.toml, .model.priors. avoidance: .*below 0"),
     ],

@@ -44,17 +44,18 @@ def test_nodes_have_the_variance_of_the_error(study):
     assert excess == pytest.approx(0.15**2 + 0.1**2 / 6, rel=1e-4)
 
 
-def test_wide_error_has_the_gaussian_mass_of_each_cell(study):
-    sd = 350.0
-    cells, log_share = fix_entries(
-        study.grid, np.array([WEST + 1200.0]), np.array([SOUTH + 1300.0]), np.array([sd]), "bilinear"
-    )
+@pytest.mark.parametrize("reading", ["bilinear", "cell"])
+def test_wide_error_has_the_gaussian_mass_of_each_cell(study, reading):
+    sd, place = 350.0, (np.array([WEST + 1200.0]), np.array([SOUTH + 1300.0]))
+    cells, log_share = fix_entries(study.grid, *place, np.array([sd]), reading)
     share = np.zeros(24 * 24)
     np.add.at(share, cells[0], np.exp(log_share[0]))
     edges = np.arange(25) * 100.0
     along = np.diff(stats.norm(1200, sd).cdf(edges))
     up = np.diff(stats.norm(1300, sd).cdf(edges))
-    expected = np.outer(up, along) * study.grid.habitable
+    # Each cell's share is what it has in the density's integral
+    part = study.grid.basis_share if reading == "bilinear" else study.grid.habitable
+    expected = np.outer(up, along) * part
     # Beyond 5 sd nothing is counted; here the area ends before.
     np.testing.assert_allclose(share.reshape(24, 24), expected, rtol=1e-9, atol=1e-15)
 

@@ -57,7 +57,9 @@ def test_interrupt_stops_every_worker(workers):
         raise KeyboardInterrupt
 
     with pytest.raises(KeyboardInterrupt):
-        workers(['print("{}", flush=True); import time; time.sleep(600)', "import time; time.sleep(600)"], tell=interrupt)
+        workers(
+            ['print("{}", flush=True); import time; time.sleep(600)', "import time; time.sleep(600)"], tell=interrupt
+        )
     assert len(workers.begun) == 2 and all(process.poll() is not None for process in workers.begun)
 
 

@@ -7,10 +7,8 @@ import pytest
 from arviz_stats.base import array_stats
 from inference._tiny_study import HOMES, fixes_table, write_study
 from inference._twin import Ground, fix_densities, log_normal, positive, solitary
-from inference.conftest import build
-from jax.flatten_util import ravel_pytree
+from inference.conftest import build, whiten
 
-from bayesrange.inference import Whitening, find_start
 from bayesrange.inference._worker import _first_state, _key
 
 CARD = """
@@ -42,9 +40,7 @@ def model(tmp_path_factory):
 def draws(model):
     """Draws of β and γ, each (chain, draw), in chunks of 50."""
     program, data = model.program, model.data
-    guess = np.asarray(ravel_pytree(program.first_guess(data))[0])
-    start = find_start(lambda z: program.value_and_gradient(jnp.asarray(z), data), guess)
-    whitening = Whitening(jnp.asarray(start.mode), jnp.asarray(start.scale))
+    whitening = whiten(program, data)
     chains = []
     for chain in range(CHAINS):
         program.ready(data, whitening)

@@ -76,7 +76,12 @@ def test_hierarchical_rows_are_named_as_documented():
         "localising", "localising spread", "localising:size", "localising:site=wet", "localising[north]",
         "localising[säter, <b>low</b>]", "localising[east wood]", "localising[new group]", "retreat",
     ]  # fmt: skip
-    for name in ("resource[worms] spread", "resource[worms]:size", "resource[worms, north]", "resource[height, new group]"):
+    for name in (
+        "resource[worms] spread",
+        "resource[worms]:size",
+        "resource[worms, north]",
+        "resource[height, new group]",
+    ):
         assert name in table.index
     assert table.index.is_unique
     individual = {row.name for row in found if row.individual}
@@ -95,7 +100,12 @@ def test_units_say_what_the_numbers_are_in():
 
 def test_raw_rows_are_the_scaled_ones_in_raw_units():
     table, _, _ = described(SHARED, shared_sites())
-    for name, factor in (("avoidance", 0.6), ("over_marking", 0.6), ("resource[worms]", 1 / 8), ("resource[height]", 0.5)):
+    for name, factor in (
+        ("avoidance", 0.6),
+        ("over_marking", 0.6),
+        ("resource[worms]", 1 / 8),
+        ("resource[height]", 0.5),
+    ):
         # α multiplies n u A₀, γ (h − mean)/sd: the raw slope is α A₀ and γ/sd
         columns = ["mean", "sd", "median", "lower", "upper", "prior_lower", "prior_upper"]
         wanted = table.loc[name, columns].astype(float) * factor
@@ -176,7 +186,10 @@ def test_new_group_is_drawn_from_the_population():
     ):  # fmt: skip
         assert abs(draws.mean() - mean) < 4 * sd / np.sqrt(20_000)
         assert abs(draws.std() - sd) < 4 * sd / np.sqrt(40_000)
-    assert abs(np.corrcoef(new["resource[worms, new group]"].ravel(), new["resource[height, new group]"].ravel())[0, 1]) < 0.03
+    assert (
+        abs(np.corrcoef(new["resource[worms, new group]"].ravel(), new["resource[height, new group]"].ravel())[0, 1])
+        < 0.03
+    )
 
 
 def test_a_parameter_the_data_say_nothing_of_has_no_contraction():
