@@ -75,7 +75,7 @@ class FitView:
             self.console.print(f"{prepared.weights.sentence}, because an animal's next fix is near its last.")
         for warning in prepared.warnings:
             self.console.print(f"[yellow]Note:[/yellow] {escape(warning)}")
-        self.console.print(f"Run folder: {escape(message['folder'])}")
+        self.console.print(f"Run folder: {escape(message['folder'])}", soft_wrap=True)
 
     def _on_compiling(self, message: dict[str, Any]) -> None:
         self.console.print("Compiling the model (the first time takes about half a minute; later runs find it ready) …")
@@ -141,8 +141,8 @@ def show_result(run: Run, page: Path, console: Console) -> None:
         console.print("[red bold]Not converged[/red bold]: do not report these intervals.")
         for problem in run.info["diagnostics"]["problems"]:
             console.print(f"  {escape(problem)}")
-    console.print(f"Run folder: {escape(str(run.folder))}")
-    console.print(f"Report: {escape(str(page))}")
+    console.print(f"Run folder: {escape(str(run.folder))}", soft_wrap=True)
+    console.print(f"Report: {escape(str(page))}", soft_wrap=True)
 
 
 def number(value: float) -> str:

@@ -1,5 +1,6 @@
 """The command line: what the user types, and nothing else. Heavy imports wait until a command needs them."""
 
+import io
 import sys
 from pathlib import Path
 from typing import Annotated
@@ -98,6 +99,9 @@ def main(arguments: list[str] | None = None) -> int:
         0 done; 2 the input is wrong; 3 done but not converged; 130 interrupted; 1 anything else. As a console script
         the process exits with it.
     """
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):  # a terminal without × or ² gets a ?, not a crash
+            stream.reconfigure(errors="replace")
     try:
         status = app(args=arguments, standalone_mode=False)
     except StudyError as error:

@@ -35,6 +35,8 @@ from bayesrange.inference._range_model import (
 from bayesrange.spaceuse import SOLVED, Parameters, arrival_scent, gibbs
 
 MAX_TREE_DEPTH = 10
+MODEST_MARKING = 0.01
+"""Over-marking from which the search for the mode begins at the most: steady where summed scent is below some 100."""
 
 
 class Whitening(NamedTuple):
@@ -104,7 +106,10 @@ class Program:
         if parameter in data.priors:
             family, numbers = self.spec.family(parameter), data.priors[parameter]
             if family in POSITIVE:
-                return jnp.full_like(value, numbers[0] * (1.0 if family == "log-normal" else 0.3))
+                centre = numbers[0] * (1.0 if family == "log-normal" else 0.3)
+                if parameter == "over_marking":  # a wide prior has its centre where marks grow without bound
+                    centre = jnp.minimum(centre, MODEST_MARKING)
+                return jnp.full_like(value, centre)
             return jnp.full_like(value, numbers.mean() if family == "uniform" else numbers[0])
         return jnp.zeros_like(value)
 

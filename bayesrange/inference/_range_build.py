@@ -31,6 +31,10 @@ def make_spec(study: Study, card: Card) -> RangeSpec:
             f'{where}, [model] pooling: "hierarchical" needs at least 3 groups, the study has {len(study.groups)}; '
             'use "shared".'
         )
+    if hierarchical and "new group" in set(study.groups["group"]):
+        raise StudyError(
+            f'{where}: a group is called "new group", which is what the tables call one from the population; rename it.'
+        )
     unknown_home = study.groups[["x", "y"]].isna().any(axis=1).to_numpy()
     names = card.parameters + (("over_marking",) if model.over_marking else ())
     return RangeSpec(

@@ -19,7 +19,8 @@ from bayesrange import StudyError, commands, fit
 
 SCRIPT = """
 import bayesrange, sys
-run = bayesrange.fit(sys.argv[1], again=True, processes=2, tell=lambda message: print(message["stage"]))
+study = bayesrange.read_study(sys.argv[1])
+run = bayesrange.fit(study, again=True, processes=2, tell=lambda message: print(message["stage"]))
 print(run.folder)
 """  # a plain script: no `if __name__ == "__main__"`
 

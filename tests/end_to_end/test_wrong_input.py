@@ -120,3 +120,10 @@ def test_cards_need_no_numerics():
     )
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert done.stdout.splitlines()[-1] == "False"
+
+
+def test_output_that_knows_few_letters_gets_question_marks_and_no_crash(environment):
+    plain = {**environment, "PYTHONIOENCODING": "ascii"}
+    command = [sys.executable, "-m", "bayesrange", "cards", "resources"]
+    done = subprocess.run(command, capture_output=True, env=plain, check=True)
+    assert b"proportional to exp(?" in done.stdout.replace(b"\n", b" ")

@@ -61,6 +61,12 @@ def test_potential_is_minus_the_log_posterior_worked_by_hand(coupled, homes_km):
         assert float(value) == pytest.approx(twin_potential(coupled, ground, point, homes_km), rel=1e-8)
 
 
+def test_search_for_the_mode_begins_where_marks_are_finite_however_wide_the_prior(coupled):
+    wide = coupled.data._replace(priors={**coupled.data.priors, "over_marking": jnp.array([50.0])})
+    guess = ravel_pytree(coupled.program.first_guess(wide))[0]
+    assert np.isfinite(coupled.program.value_and_gradient(guess, wide)[0])
+
+
 def test_gradient_agrees_with_central_differences(coupled):
     z, step = ravel_pytree(POINTS[0])[0], 1e-4
 
