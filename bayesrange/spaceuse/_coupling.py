@@ -9,7 +9,7 @@ from jaxtyping import Array, Float
 
 from bayesrange.spaceuse._fixed_point import TOLERANCE, anderson
 from bayesrange.spaceuse._gibbs import _law, _perceived
-from bayesrange.spaceuse._operator import drift_terms, face_drift, outflow
+from bayesrange.spaceuse._operator import Terms, drift_terms, face_drift, outflow
 from bayesrange.spaceuse._scent import foreign_scent
 from bayesrange.spaceuse._terms import Parameters, Setting, solitary_potential
 
@@ -31,12 +31,17 @@ def felt_scent(density: Float[Array, "groups ny nx"], theta: Theta, coupled: boo
 
 
 def balance(
-    density: Float[Array, "groups ny nx"], theta: Theta, coupled: bool
+    density: Float[Array, "groups ny nx"], theta: Theta, coupled: bool, terms: Terms | None = None
 ) -> tuple[Float[Array, "groups ny nx"], Float[Array, " groups"]]:
-    """M(F̃(u)) u, which is 0 in the steady state, and the log of each group's mass, which is 0 for a density."""
+    """M(F̃(u)) u, which is 0 in the steady state, and the log of each group's mass, which is 0 for a density.
+
+    In a loop over densities pass the `drift_terms` of θ, made once.
+    """
     parameters, setting = theta
     scent = jax.lax.optimization_barrier(felt_scent(density, theta, coupled))
-    drift = face_drift(scent, drift_terms(parameters, setting))
+    drift = jax.lax.optimization_barrier(
+        face_drift(scent, drift_terms(parameters, setting) if terms is None else terms)
+    )
     mass = (density * setting.domain.area[None]).sum((1, 2))
     return outflow(drift, density, setting.domain.inside), jnp.log(mass)
 
@@ -51,7 +56,9 @@ def gradient_state(theta: Theta, coupled: bool) -> tuple[Float[Array, "groups ny
     def step(flat: Array) -> Array:
         return _perceived(flat.reshape(zero.shape), gradient)[0].ravel()
 
-    foreign = anderson(step, step(zero.ravel()), _tolerance(theta)).value.reshape(zero.shape)
+    first = step(zero.ravel())
+    go_on = lambda: anderson(step, first, _tolerance(theta)).value  # noqa: E731
+    foreign = jax.lax.cond(jnp.any(theta[0].avoidance != 0), go_on, lambda: first).reshape(zero.shape)
     return _law(foreign, gradient), foreign
 
 
@@ -67,7 +74,8 @@ def gradient_adjoint(
     def step(flat: Array) -> Array:
         return (above + jnp.where(outside, 0.0, pull(flat.reshape(above.shape))[0])).ravel()
 
-    return anderson(step, above.ravel(), _tolerance(theta)).value.reshape(above.shape)
+    go_on = lambda: anderson(step, above.ravel(), _tolerance(theta)).value  # noqa: E731
+    return jax.lax.cond(jnp.any(theta[0].avoidance != 0), go_on, above.ravel).reshape(above.shape)
 
 
 def _gradient_terms(theta: Theta) -> tuple:

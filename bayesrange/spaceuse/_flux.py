@@ -16,7 +16,7 @@ from jaxtyping import Array, Float, Int
 from bayesrange.spaceuse._coupling import Theta, balance, felt_scent, gradient_state
 from bayesrange.spaceuse._fixed_point import TOLERANCE, Iteration, anderson
 from bayesrange.spaceuse._flux_adjoint import FAINT, adjoint, quotient
-from bayesrange.spaceuse._operator import Faces, drift_terms, face_drift, rates, steepest
+from bayesrange.spaceuse._operator import Faces, Terms, drift_terms, face_drift, rates, steepest
 from bayesrange.spaceuse._pinned import Pinned
 from bayesrange.spaceuse._scent import foreign_scent
 from bayesrange.spaceuse._solution import NO_STEADY_SCENT, NOT_FINITE, TOO_STEEP, Solution, result_code
@@ -122,7 +122,7 @@ def _iterate(theta: Theta, linear: Linear, coupled: bool, start: str) -> tuple[F
         first = found.rounds == 0
         anew = lambda: linear.refactor(pattern, analysis, factor, values(found.foreign))  # noqa: E731
         factor = jax.lax.cond(first, lambda: factor, anew)
-        log_density, ended = _on_one_factor(theta, coupled, pinned, factor, jnp.where(first, first_steps, STEPS))
+        log_density, ended = _on_one_factor(theta, coupled, terms, pinned, factor, jnp.where(first, first_steps, STEPS))
         foreign = felt_scent(jnp.exp(log_density), theta, coupled)
         return Found(log_density, foreign, found.steps + ended.steps, ended.residual, found.rounds + 1), factor
 
@@ -134,7 +134,7 @@ def _iterate(theta: Theta, linear: Linear, coupled: bool, start: str) -> tuple[F
 
 
 def _on_one_factor(
-    theta: Theta, coupled: bool, pinned: Pinned, factor: Any, max_steps: Int[Array, ""]
+    theta: Theta, coupled: bool, terms: Terms, pinned: Pinned, factor: Any, max_steps: Int[Array, ""]
 ) -> tuple[Float[Array, "groups ny nx"], Iteration]:
     """Log densities after at most `max_steps` with one factor, from the null vector of its matrix."""
     area = theta[1].domain.area[None]
@@ -148,7 +148,7 @@ def _on_one_factor(
     def step(flat: Array) -> Array:
         x = flat.reshape(shape)
         u = null * jnp.exp(x)
-        change = pinned.solve(factor, balance(u, theta, coupled)[0])
+        change = pinned.solve(factor, balance(u, theta, coupled, terms)[0])
         return normal(x - jnp.clip(quotient(change, u), -1.0, 1.0)).ravel()
 
     log_null = jnp.where(null > 0, jnp.log(jnp.where(null > 0, null, 1.0)), -jnp.inf)

@@ -12,11 +12,12 @@ from jaxtyping import Array, Float
 
 from bayesrange.spaceuse._coupling import Theta, balance, gradient_adjoint
 from bayesrange.spaceuse._fixed_point import anderson
+from bayesrange.spaceuse._operator import drift_terms
 from bayesrange.spaceuse._pinned import Pinned
 
 FAINT = 1e-280
 """Densities below this share of the pinned cell's count as 0: quotients of them are no longer numbers."""
-TOLERANCE = 1e-8
+TOLERANCE = 1e-7
 """Relative residual of μ; the gradient inherits it, and 1e−5 is what its users ask for."""
 STEPS = 60
 """As many as two factors of the forward solve may take."""
@@ -56,7 +57,8 @@ def adjoint(
     above = jnp.where(u > FAINT, from_above, 0.0)
     size = jnp.maximum(jnp.abs(above).max(), 1e-300)
     above = above / size
-    _, pull = jax.vjp(lambda u: balance(u, theta, coupled)[0], u)
+    terms = drift_terms(*theta)
+    _, pull = jax.vjp(lambda u: balance(u, theta, coupled, terms)[0], u)
 
     def duals(mu: Array) -> tuple[Array, Array]:
         centred = mu - share * mu.sum((1, 2), keepdims=True)  # transpose of "mass back to 1"

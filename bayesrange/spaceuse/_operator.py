@@ -93,7 +93,7 @@ def rates(drift: Faces, inside: Bool[Array, "ny nx"]) -> Rates:
     open_x, open_y = open_faces(inside)
     onward = Faces(jnp.where(open_x, bernoulli(-drift.x), 0.0), jnp.where(open_y, bernoulli(-drift.y), 0.0))
     back = Faces(jnp.where(open_x, bernoulli(drift.x), 0.0), jnp.where(open_y, bernoulli(drift.y), 0.0))
-    return Rates(onward, back)
+    return jax.lax.optimization_barrier(Rates(onward, back))
 
 
 def outflow(

@@ -24,22 +24,23 @@ class Pinned(NamedTuple):
 
     def solve(self, factor: Any, right: Float[Array, "groups ny nx"]) -> Float[Array, "groups ny nx"]:
         """δ with M δ = `right` in all rows but the pinned one, and δ = 0 there."""
-        free = right.reshape(right.shape[0], -1) * (1 - self.one())
-        flat = self.linear.solve(self.pattern, self.analysis, factor, free, False)
+        flat = self.linear.solve(self.pattern, self.analysis, factor, self._without(right), False)
         return flat.reshape(right.shape)
 
     def solve_transposed(self, factor: Any, right: Float[Array, "groups ny nx"]) -> Float[Array, "groups ny nx"]:
         """Transpose of `solve`."""
         flat = self.linear.solve(self.pattern, self.analysis, factor, right.reshape(right.shape[0], -1), True)
-        return (flat * (1 - self.one())).reshape(right.shape)
+        return self._without(flat).reshape(right.shape)
 
     def null(self, factor: Any, shape: tuple[int, ...]) -> Float[Array, "groups ny nx"]:
         """Density with M u = 0, 1 in the pinned cell."""
-        return self.linear.solve(self.pattern, self.analysis, factor, self.one(), False).reshape(shape)
+        one = jax.nn.one_hot(self.pin, self.pattern.size, dtype=jnp.float64)
+        return self.linear.solve(self.pattern, self.analysis, factor, one, False).reshape(shape)
 
-    def one(self) -> Float[Array, "groups cells"]:
-        """1 in the pinned cell, 0 elsewhere."""
-        return jax.nn.one_hot(self.pin, self.pattern.size, dtype=jnp.float64)
+    def _without(self, values: Array) -> Float[Array, "groups cells"]:
+        """0 in the pinned cell."""
+        flat = values.reshape(values.shape[0], -1)
+        return flat.at[jnp.arange(flat.shape[0]), self.pin].set(0.0)
 
 
 @partial(jax.jit, static_argnames="linear")

@@ -2,7 +2,7 @@
 
 The factor that travels through the program is the matrix itself. The host keeps the last factorisation beside the
 values it was made from, and makes it anew for other values: a solve is a function of its arguments alone, and the
-process holds one set of factors. Programs with host callbacks are not kept in JAX's compilation cache.
+process holds one set of factors.
 
 All of it happens in one thread of our own: SciPy books SuperLU's memory by Python thread state, and a thread of XLA
 gets a new state for every callback, at whose end the factors it made are freed under their owner.

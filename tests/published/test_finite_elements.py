@@ -1,7 +1,7 @@
 """Steady densities of two drifts on the unit square, against triangular finite elements of degree 2 (scikit-fem).
 
-With the stirring there is no potential and no closed form, so that nothing but the fluxes can get it right. Table and its
-accuracy: data/SOURCE_flux.md.
+With the stirring there is no potential and no closed form: nothing but the fluxes can get it right. The table and how
+accurate it is: data/SOURCE_flux.md.
 """
 
 import json

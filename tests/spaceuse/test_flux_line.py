@@ -1,7 +1,7 @@
 """Two groups on a line that retreat from, or avoid, each other's perceived scent, against quadrature in scipy.
 
-On a line every drift has a potential: log u_i = −β_i ρ_i − α_i F̃_i − κ_i ∫F̃_i ρ_i' dx + const. The reference iterates it on
-2,401 points with Simpson's rule; it knows no cells, no fluxes and no matrix.
+On a line every drift has a potential: log u_i = −β_i ρ_i − α_i F̃_i − κ_i ∫F̃_i ρ_i' dx + const. The reference
+iterates it on 2,401 points with Simpson's rule; it knows no cells, no fluxes and no matrix.
 """
 
 import jax.numpy as jnp
