@@ -24,8 +24,8 @@ FIXES = 150
 """Fixes of each group."""
 
 
-def case(cells: int, groups: int, avoidance: float, retreat: float = 0.0, seed: int = 0):
-    """Groups of 6 km² each on a square of `cells` × `cells`, a smooth layer, perception over two cells.
+def case(cells: int, groups: int, avoidance: float, retreat: float = 0.0, perception: float = 0.3, seed: int = 0):
+    """Groups of 6 km² each on a square of `cells` × `cells` and a smooth layer; perception in km, 0 for two cells.
 
     Returns:
         Parameters, setting and reading.
@@ -43,7 +43,7 @@ def case(cells: int, groups: int, avoidance: float, retreat: float = 0.0, seed: 
     layer = sum(a * np.cos(1.2 * (b * x + c * y) + 3 * d) for a, b, c, d in waves)
     layer = (layer - layer.mean()) / layer.std()
     animals = rng.integers(2, 8, groups).astype(float)
-    domain = make_domain(at, at, np.full((cells, cells), cell**2), 2 * cell)
+    domain = make_domain(at, at, np.full((cells, cells), cell**2), perception or 2 * cell)
     setting = Setting(
         domain, jnp.asarray(layer)[None], jnp.asarray(animals * side**2 / animals.sum()), jnp.asarray(cell / 2)
     )

@@ -61,9 +61,9 @@ def gradient_error(function, gradient: Parameters, arguments: tuple) -> float:
     return worst
 
 
-def measure(cells: int, groups: int, avoidance: float, retreat: float, solver: str) -> float:
+def measure(cells: int, groups: int, avoidance: float, retreat: float, solver: str, perception: float = 0.3) -> float:
     """Print one row; returns milliseconds of value and gradient."""
-    arguments = case(cells, groups, avoidance, retreat)
+    arguments = case(cells, groups, avoidance, retreat, perception)
     function = jax.jit(log_likelihood(solver))
     both = jax.jit(jax.value_and_grad(log_likelihood(solver)))
     _, gradient = both(*arguments)
@@ -71,7 +71,8 @@ def measure(cells: int, groups: int, avoidance: float, retreat: float, solver: s
     klu = klu_milliseconds(arguments[0]._replace(retreat=jnp.zeros(groups)), arguments[1])
     solution = jax.jit(lambda p, s: steady_state(p, s, solver=solver))(*arguments[:2])
     say(
-        solver=solver, cells=cells, groups=groups, avoidance=avoidance, retreat=retreat, ms=round(time, 2),
+        solver=solver, cells=cells, groups=groups, avoidance=avoidance, retreat=retreat,
+        perception=perception or "two cells", ms=round(time, 2),
         klu_ms=round(klu, 2), ratio=round(time / klu, 2), steps=int(solution.steps),
         solved=bool(solution.result == SOLVED), gradient_error=gradient_error(function, gradient, arguments),
     )  # fmt: skip
@@ -95,6 +96,10 @@ def main() -> None:
         for retreat in retreats:
             measure(64, 6, 0.0, retreat, solver)
         if not quick:
+            times = [measure(cells, 6, 2.0, 0.0, solver, perception=0.0) for cells in sizes]
+            say(
+                solver=solver, avoidance=2.0, perception="two cells", exponent_in_cells=round(exponent(sizes, times), 2)
+            )
             groups = [2, 12, 24]
             times = [measure(64, g, 2.0, 0.0, solver) for g in groups]
             slope = float(np.polyfit(np.log(groups), np.log(times), 1)[0])

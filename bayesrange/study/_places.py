@@ -15,8 +15,8 @@ from bayesrange.study._tables import counted, first_few
 _SDS = 3.0  # a fix may lie outside by this many standard deviations of its error
 _FEWEST_CELLS, _BETTER_CELLS = 10, 20
 _FEWEST_FIXES = 10
-# Bias of `localising` by cells across the 95 % range (measured; docs/mathematics, "Steady-state space use")
-_BIAS_CELLS, _BIAS_PERCENT = np.array([5.0, 8, 16, 24]), np.array([10.0, 5, 1.6, 0.8])
+# Bias of `localising` with bilinear reading, by cells across the 95 % range (tests/published/test_holgate_okubo.py)
+_BIAS_CELLS, _BIAS_PERCENT = np.array([5.0, 8, 10, 16, 24, 32]), np.array([23.0, 10.3, 7.0, 2.97, 1.4, 0.81])
 
 
 class Ground:

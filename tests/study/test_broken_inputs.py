@@ -62,7 +62,7 @@ SETTINGS = {
         "study",
         "cell_m",
         400,
-        "only 7.1 cells across, which would bias localising by about 6 % or more",
+        "only 7.1 cells across, which would bias localising by about 13 % or more",
     ),
     "cells too small": ("study", "cell_m", 5, "× 800 cells, more than 400 along a side"),
 }

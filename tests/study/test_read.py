@@ -149,8 +149,8 @@ def test_a_range_of_10_to_20_cells_is_said_with_the_bias_to_expect(folder):
     folder.toml["study"]["cell_m"] = 200
     said = [w for w in folder.read().warnings if "cells (3 groups have fewer than 20)" in w]
     assert len(said) == 1
-    # mathematics of the null model: 1.6 % at 16 cells, 5 % at 8; so between 1.6 and 5 % near 10 to 12 cells
-    assert 1.6 < float(said[0].split("biased by about ")[1].split(" ")[0]) < 5
+    # tests/published/test_holgate_okubo.py: 2.97 % at 16 cells, 7 % at 10
+    assert 2.97 < float(said[0].split("biased by about ")[1].split(" ")[0]) <= 7
 
 
 def test_defaults_are_filled_in_and_a_named_default_is_fine(folder):
