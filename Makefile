@@ -11,7 +11,7 @@ demo: setup
 	.venv/bin/bayesrange demo
 
 test: setup
-	.venv/bin/python -m pytest $(PYTEST_ARGS)
+	.venv/bin/python -m pytest -n 2 --dist loadfile $(PYTEST_ARGS)
 
 lint: setup
 	.venv/bin/ruff check .
