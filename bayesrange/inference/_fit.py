@@ -15,7 +15,7 @@ import numpy as np
 import bayesrange
 from bayesrange._errors import StudyError
 from bayesrange.inference._cards import Card, find_card, read_card
-from bayesrange.inference._folder import FORMAT, choose_folder, make_folder, write_atomically, write_json
+from bayesrange.inference._folder import FORMAT, choose_folder, held, make_folder, write_atomically, write_json
 from bayesrange.inference._processes import Message, cores, run_workers
 from bayesrange.inference._range_build import make_data, make_spec
 from bayesrange.inference._range_data import RangeSpec
@@ -77,30 +77,43 @@ def fit(
         raise ValueError(f"`processes` is a number of chains and must be at least 1, got {processes}.")
     study = study if isinstance(study, Study) else read_study(Path(study))
     prepared = prepare(study)
-    out, fingerprint = Path(out) if out else None, prepared.task.fingerprint
-    folder = choose_folder(study.path.parent, prepared.card.name, out, again, fingerprint)
+    out = Path(out) if out else None
+    folder = choose_folder(study.path.parent, prepared.card.name, out, again, prepared.task.fingerprint)
     checkpoints = folder / "checkpoints"
     _refuse_changes(checkpoints, prepared)
     make_folder(checkpoints)
+    with held(checkpoints):
+        tell({"stage": "read", "folder": str(folder), "prepared": prepared})
+        seconds, gib = _sample(checkpoints, prepared, tell, processes)
+        tell({"stage": "writing"})
+        _write(folder, prepared, seconds, gib)
+        shutil.rmtree(checkpoints)
+    return Run(folder)
+
+
+def _sample(
+    checkpoints: Path, prepared: Prepared, tell: Callable[[Message], None], processes: int | None
+) -> tuple[float, float]:
+    """Run what is left to do of the worker processes.
+
+    Returns:
+        Seconds a gradient, and GiB a worker.
+    """
+    task = prepared.task
     if not (checkpoints / "inputs.json").exists():
-        save_task(checkpoints, prepared.task)
-        write_json(checkpoints / "inputs.json", {"fingerprint": fingerprint, "inputs": _decisive(prepared.inputs)})
-    tell({"stage": "read", "folder": str(folder), "prepared": prepared})
+        save_task(checkpoints, task)
+        inputs = {"fingerprint": task.fingerprint, "inputs": _decisive(prepared.inputs)}
+        write_json(checkpoints / "inputs.json", inputs)
     log = checkpoints / "workers.log"
-    at_once = min(processes or cores(), prepared.task.chains)
+    at_once = min(processes or cores(), task.chains)
     if not (checkpoints / "start.npz").exists():
         run_workers(checkpoints, [["start"]], 1, tell, log)
     with np.load(checkpoints / "start.npz") as start:
         seconds, gib = float(start["seconds_per_gradient"]), float(start["peak_gib"])
-    tell({"stage": "cost", **_cost(prepared.task, seconds, gib, at_once)})
-    todo = [
-        k for k in range(1, prepared.task.chains + 1) if not (chain_folder(checkpoints, k) / "derived.npz").exists()
-    ]
+    tell({"stage": "cost", **_cost(task, seconds, gib, at_once)})
+    todo = [k for k in range(1, task.chains + 1) if not (chain_folder(checkpoints, k) / "derived.npz").exists()]
     run_workers(checkpoints, [["chain", str(k)] for k in todo], at_once, tell, log)
-    tell({"stage": "writing"})
-    _write(folder, prepared, seconds, gib)
-    shutil.rmtree(checkpoints)
-    return Run(folder)
+    return seconds, gib
 
 
 def prepare(study: Study) -> Prepared:

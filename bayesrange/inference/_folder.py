@@ -2,8 +2,15 @@
 
 import json
 import os
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
+
+try:
+    import fcntl
+except ImportError:  # not a POSIX system: nothing guards against a second fit there
+    fcntl = None  # type: ignore[assignment]
 
 from bayesrange._errors import StudyError
 
@@ -64,6 +71,25 @@ def make_folder(folder: Path) -> None:
         raise StudyError(
             f"{folder}: this folder cannot be made ({error.strerror}); choose another with --out."
         ) from error
+
+
+@contextmanager
+def held(checkpoints: Path) -> Iterator[None]:
+    """Keep a second process from writing the same run; the system lets go when this one ends, however it ends.
+
+    Raises:
+        StudyError: another process holds it.
+    """
+    with (checkpoints / "lock").open("w") as file:
+        if fcntl is not None:
+            try:
+                fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            except BlockingIOError as error:
+                raise StudyError(
+                    f"{checkpoints.parent}: another fit is writing this run right now; wait for it, or choose another "
+                    "folder with --out."
+                ) from error
+        yield
 
 
 def write_atomically(path: Path, content: bytes) -> None:

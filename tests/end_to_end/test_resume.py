@@ -161,3 +161,18 @@ def test_command_line_answers_a_resumed_change_with_status_2(tmp_path, study_fol
     assert commands.main(["fit", str(study_folder), "--out", str(tmp_path / "run")]) == 2
     assert "worms.tif" in capsys.readouterr().err
     assert [file.name for file in checkpoints.iterdir()] == ["inputs.json"]
+
+
+def test_second_fit_of_a_run_in_the_making_is_refused(tmp_path, study_folder, capsys):
+    # Another process that samples into the same folder holds its lock
+    checkpoints = tmp_path / "run" / "checkpoints"
+    checkpoints.mkdir(parents=True)
+    hold = "import fcntl, sys; file = open(sys.argv[1], 'w'); fcntl.flock(file, 2); print('held'); sys.stdin.read()"
+    with subprocess.Popen(
+        [sys.executable, "-uc", hold, str(checkpoints / "lock")], stdin=subprocess.PIPE, stdout=subprocess.PIPE
+    ) as other:
+        assert other.stdout.readline()
+        assert commands.main(["fit", str(study_folder), "--out", str(tmp_path / "run")]) == 2
+        assert "another fit is writing this run right now" in capsys.readouterr().err
+        assert [file.name for file in checkpoints.iterdir()] == ["lock"]
+        other.stdin.close()

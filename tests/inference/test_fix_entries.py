@@ -63,6 +63,9 @@ def test_wide_error_has_the_gaussian_mass_of_each_cell(study, reading):
 @pytest.mark.parametrize("reading", ["bilinear", "cell"])
 def test_mass_beyond_the_edge_is_lost_and_not_moved_inside(study, reading):
     # Half the error of a fix on the edge lies outside, where there is no density.
+    # Three nodes 1.73 sd apart: one of weight 1/6 lies 34 m outside, still within reach of the first row's centres.
+    _, mass = read(study.grid, np.ones((24, 24)), [600.0, 600.0], [1.0, 1200.0], [20.0, 20.0], reading)
+    np.testing.assert_allclose(mass, [1 - 1 / 6, 1], rtol=1e-12)
     _, mass = read(study.grid, np.ones((24, 24)), [600.0, 600.0], [1.0, 1200.0], [150.0, 150.0], reading)
     # Five nodes: the middle one (weight 8/15) is just inside, one side (7/30) outside. Source: Gauss–Hermite weights of
     # order 5, Abramowitz & Stegun table 25.10.
@@ -107,5 +110,5 @@ def test_grid_with_no_go_ground_gives_it_no_mass(study):
     habitable = study.grid.habitable.copy()
     habitable[:, :10] = 0.0
     walled = dataclasses.replace(study.grid, sub_cells=sub_cells, habitable=habitable)
-    _, mass = read(walled, np.ones((24, 24)), 1001.0, 1200.0, 30.0)
+    _, mass = read(walled, np.ones((24, 24)), 1001.0, 1200.0, 20.0)
     assert mass[0] == pytest.approx(1 - 1 / 6)  # the outer node of three has weight 1/6
