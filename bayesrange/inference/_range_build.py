@@ -44,7 +44,7 @@ def make_spec(study: Study, card: Card) -> RangeSpec:
         solver=card.solver,
         coupled=card.scent and len(study.groups) > 1,
         over_marking=model.over_marking,
-        layers=tuple(model.layers) if "resources" in card.terms else (),
+        layers=study.model_layers if "resources" in card.terms else (),
         groups=tuple(study.groups["group"]),
         covariates=tuple(name for name, _ in code_covariates(study)),
         estimated=tuple(int(i) for i in np.flatnonzero(unknown_home)) if needs_home else (),

@@ -15,11 +15,16 @@ from bayesrange.study import Study
 
 @dataclass(frozen=True)
 class LayerScale:
-    """Mean and sd of a layer over the habitable area of the fitted study, in the layer's unit."""
+    """Mean and sd of a layer over the habitable area of the fitted study, in the layer's unit.
+
+    A contrast of classes stays as it is, 0 or 1: its mean here is 0, its sd 1, and `reference` names the class that
+    it compares with ("" of other layers).
+    """
 
     mean: float
     sd: float
     unit: str
+    reference: str = ""
 
 
 @dataclass(frozen=True)
@@ -75,6 +80,7 @@ def make_scales(study: Study, layers: list[str]) -> Scales:
                 "told; "
                 "leave it out of [model] layers."
             )
-        scales[name] = LayerScale(mean, sd, layer.unit)
+        as_it_is = LayerScale(0.0, 1.0, "", layer.reference)
+        scales[name] = as_it_is if layer.reference else LayerScale(mean, sd, layer.unit)
     perception = study.settings.model.perception_m or 2 * grid.cell_m
     return Scales(area / animals, float(np.sqrt(area / len(study.groups))), perception, grid.cell_m / 2, scales)

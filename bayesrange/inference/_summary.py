@@ -64,39 +64,45 @@ def _of_parameter(
     """The rows of one parameter, or of one layer's response."""
     pick = {"layer": layer} if layer is not None else {}
     label = f"{name}[{layer}]" if layer is not None else name
-    factor, raw_unit = _raw(name, layer, scales)
+    unit, (factor, raw_unit) = _unit(name, layer, scales), _raw(name, layer, scales)
 
     def pair(variable: str, **at: str) -> tuple[np.ndarray, np.ndarray]:
         return tuple(_values(data[variable].sel({**pick, **at})) for data in sets)  # type: ignore[return-value]
 
     varying = name in spec.varying
     centre = pair(f"{name}_population" if varying else name)
-    yield Row(label, UNITS[name], *centre)
+    yield Row(label, unit, *centre)
     if factor is not None:
         yield Row(f"{label} raw", raw_unit, *(value * factor for value in centre))
     if not varying:
         return
     on_log = name not in SIGNED
     spread = pair(f"{name}_spread")
-    yield Row(f"{label} spread", "log scale" if on_log else UNITS[name], *spread)
+    yield Row(f"{label} spread", "log scale" if on_log else unit, *spread)
     for covariate in spec.covariates:
-        yield Row(
-            f"{label}:{covariate}", "log scale" if on_log else UNITS[name], *pair(f"{name}_effect", covariate=covariate)
-        )
+        yield Row(f"{label}:{covariate}", "log scale" if on_log else unit, *pair(f"{name}_effect", covariate=covariate))
     for group in spec.groups:
         own = f"{name}[{layer}, {group}]" if layer is not None else f"{name}[{group}]"
-        yield Row(own, UNITS[name], *pair(name, group=group), individual=True)
+        yield Row(own, unit, *pair(name, group=group), individual=True)
     new = [
         np.exp(np.log(c) + s * rng.standard_normal(c.shape)) if on_log else c + s * rng.standard_normal(c.shape)
         for c, s in zip(centre, spread, strict=True)
     ]
-    yield Row(f"{name}[{layer}, new group]" if layer is not None else f"{name}[new group]", UNITS[name], *new)
+    yield Row(f"{name}[{layer}, new group]" if layer is not None else f"{name}[new group]", unit, *new)
+
+
+def _unit(name: str, layer: str | None, scales: Scales) -> str:
+    """Unit of a parameter; of a contrast of classes what it compares with."""
+    reference = scales.layers[layer].reference if layer is not None else ""
+    return f"against {reference}" if reference else UNITS[name]
 
 
 def _raw(name: str, layer: str | None, scales: Scales) -> tuple[float | None, str]:
     """Factor and unit that turn a scaled parameter into raw units, where it is scaled."""
     if layer is not None:
         scale = scales.layers[layer]
+        if scale.reference:
+            return None, ""
         unit = scale.unit if scale.unit.isalnum() or not scale.unit else f"({scale.unit})"
         return 1 / scale.sd, f"1/{unit}" if unit else "per unit of the layer"
     raw_units = {"avoidance": "km² per animal", "retreat": "km per animal", "over_marking": "km² per animal"}

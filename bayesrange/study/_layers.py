@@ -1,27 +1,27 @@
-"""Map layers from GeoTIFF, averaged onto the grid, and no-go ground on its sub-cells.
+"""Map layers on the grid: rasters averaged, classes as contrasts, distances to features; and no-go ground.
 
-Only the part of a raster around the grid is read. No-data pixels count neither in an average nor as no-go.
+No-data pixels count neither in an average nor as no-go. A layer has a value in every cell inside the area, or the
+user has said from how far one may be borrowed.
 """
 
-import warnings
 from dataclasses import dataclass
 from pathlib import Path
+from typing import NamedTuple
 
 import numpy as np
 import pyproj
-import rasterio
-from affine import Affine
 from jaxtyping import Bool, Float
 from numpy.typing import NDArray
-from rasterio.errors import NotGeoreferencedWarning, RasterioError
-from rasterio.warp import Resampling, reproject, transform_bounds
-from rasterio.windows import Window
+from rasterio.warp import Resampling
 
 from bayesrange._errors import StudyError
+from bayesrange.study._classes import absent_class, classes_on_cells, codes_without_name, contrasts
+from bayesrange.study._distance import distance_to_features
 from bayesrange.study._grid import SUB, Frame, Grid
-
-_MARGIN_CELLS = 2
-_SAME = 1e-6  # share by which a pixel may be smaller than a cell and still be of its size
+from bayesrange.study._missing import fill_nearest, missing_cells
+from bayesrange.study._raster import onto_cells, read_raster, warp
+from bayesrange.study._settings import LayerSection
+from bayesrange.study._tables import counted
 
 
 @dataclass(frozen=True)
@@ -29,159 +29,115 @@ class Layer:
     """A map layer on the grid.
 
     Attributes:
-        name: as in the study file.
-        values: mean over the cell in raw units; NaN where the cell is not inside.
-        unit: as in the study file.
+        name: as in the study file; a contrast of classes is called `cover=wood`.
+        values: mean over the cell in raw units; NaN where the cell is not inside. Of a contrast 1 where its class
+            takes most of the cell, else 0.
+        unit: as in the study file; "m" of a distance.
         file: as in the study file.
+        section: the name of the section in the study file that it comes from.
+        reference: the class that a contrast compares with; "" of other layers.
     """
 
     name: str
     values: Float[NDArray, "ny nx"]
     unit: str
     file: str
+    section: str = ""
+    reference: str = ""
 
 
-@dataclass(frozen=True)
-class _Raster:
-    """The part of a source raster that is needed; NaN where it has no data."""
+class Reading(NamedTuple):
+    """What a section of the study file gives: layers by name, what has to be said, and how many cells were filled."""
 
-    values: Float[NDArray, "rows columns"]
-    transform: Affine
-    crs: pyproj.CRS
-    name: str
+    layers: dict[str, Layer]
+    said: list[str]
+    filled: int
 
 
-def read_layer(path: Path, file: str, name: str, unit: str, grid: Grid, wanted: bool) -> tuple[Layer, list[str]]:
-    """One layer on the grid, and what has to be said.
+def read_layer(folder: Path, name: str, entry: LayerSection, grid: Grid, wanted: bool) -> Reading:
+    """The layer or contrasts of one section `[layers.NAME]` on the grid.
 
-    Pixels smaller than a cell are averaged over the cell, others are read bilinearly at its centre: a raster on
-    exactly the grid's cells passes unchanged.
+    Pixels smaller than a cell are averaged over the cell (classes: the commonest is taken), others are read
+    bilinearly at its centre (classes: the nearest): a raster on exactly the grid's cells passes unchanged.
 
     Args:
-        path: where the GeoTIFF is.
-        file: what the user calls it.
-        name: the layer's name.
-        unit: the unit of its values.
+        folder: where the study file is.
+        name: the section's name.
+        entry: its keys.
         grid: the study's grid.
         wanted: whether the model uses it; then missing cells and a constant layer are errors, else remarks.
 
     Raises:
         StudyError: unreadable, no reference system, no overlap, and what `wanted` adds.
     """
-    frame = Frame(grid.west_m, grid.south_m, grid.cell_m, *grid.shape)
-    raster = _read_raster(path, file, frame, grid.crs)
-    values = np.where(grid.inside, _onto_cells(raster, frame, grid.crs), np.nan)
-    problems = list(_problems(values, grid.inside, name, file))
-    if problems and wanted:
-        raise StudyError(problems[0])
-    return Layer(name, values, unit, file), problems
+    file = entry.distance or entry.file or ""
+    where = f"[layers.{name}] {file}"
+    values, problem = _values(folder, file, entry, grid, where)
+    said, filled = [], 0
+    if entry.fill is not None and entry.fill_within_m is not None:
+        values, filled, farthest_m = fill_nearest(values, grid, entry.fill_within_m)
+        if filled:
+            said.append(
+                f"{where}: {counted(filled, 'cell', 'cells')} inside the area had no value and took that of the "
+                f"nearest cell, at most {farthest_m:.0f} m away."
+            )
+    missing = missing_cells(values, grid, entry.fill is not None)
+    problem = problem or (f"{where}: {missing}" if missing else None) or _nothing_to_learn(values, grid, entry, where)
+    if problem and wanted:
+        raise StudyError(problem)
+    values = np.where(grid.inside, values, np.nan)
+    return Reading(_as_layers(name, values, file, entry), said + ([problem] if problem else []), filled)
 
 
-def no_go_sub_cells(path: Path, file: str, frame: Frame, crs: pyproj.CRS) -> Bool[NDArray, "rows columns"]:
+def no_go_sub_cells(path: Path, entry: LayerSection, frame: Frame, crs: pyproj.CRS) -> Bool[NDArray, "rows columns"]:
     """Sub-cells (row 0 south) whose nearest pixel is above 0; ground off the raster is not no-go.
 
     Raises:
         StudyError: unreadable, no reference system, no overlap.
     """
-    raster = _read_raster(path, file, frame, crs)
-    values = _warp(raster, frame, crs, SUB, Resampling.nearest)
+    raster = read_raster(path, entry.file or "", frame, crs, entry.band)
+    values = warp(raster, frame, crs, SUB, Resampling.nearest)
     return np.nan_to_num(values, nan=0.0) > 0
 
 
-def _problems(values: np.ndarray, inside: np.ndarray, name: str, file: str) -> list[str]:
-    found = values[inside]
-    missing = int(np.isnan(found).sum())
-    if missing:
-        return [
-            f"[layers.{name}] {file}: {missing} of {found.size} cells inside the area have no value; "
-            "give a raster that covers the whole area, or draw the area within it."
-        ]
-    if np.ptp(found) <= 1e-9 * np.abs(found).max():
-        return [
-            f"[layers.{name}] {file}: every cell inside the area has the value {found[0]:g}, so nothing can be "
-            "learnt from it; take it out of [model] layers."
-        ]
-    return []
+def _values(
+    folder: Path, file: str, entry: LayerSection, grid: Grid, where: str
+) -> tuple[Float[NDArray, "ny nx"], str | None]:
+    """Values on every cell of the grid, inside or not, of classes their positions; and what is wrong with them."""
+    frame = Frame(grid.west_m, grid.south_m, grid.cell_m, *grid.shape)
+    if entry.distance is not None:
+        return distance_to_features(folder / file, file, entry.table, frame, grid.crs, entry.cap_m), None
+    raster = read_raster(folder / file, file, frame, grid.crs, entry.band)
+    if entry.classes is None:
+        return onto_cells(raster, frame, grid.crs), None
+    cells = classes_on_cells(raster, entry.classes, frame, grid.crs, where)
+    problem = codes_without_name(raster, cells, grid.inside, where)
+    return np.where(cells < 0, np.nan, cells), problem
 
 
-def _read_raster(path: Path, file: str, frame: Frame, crs: pyproj.CRS) -> _Raster:
-    if not path.is_file():
-        raise StudyError(f"{file}: there is no such file beside the study file.")
-    try:
-        with _opened(path) as source:
-            if source.crs is None:
-                raise StudyError(f"{file}: the raster does not say its reference system; save it with one.")
-            if source.count != 1:
-                raise StudyError(f"{file}: the raster has {source.count} bands; expected one, so save the wanted band.")
-            system = pyproj.CRS.from_user_input(source.crs)
-            window = _window(source, frame, crs)
-            if window is None:
-                raise StudyError(f"{file}: the raster does not overlap the study area; check its reference system.")
-            read = source.read(1, window=window, masked=True)
-            values = read.astype(float).filled(np.nan) * source.scales[0] + source.offsets[0]
-            transform = source.window_transform(window)
-    except RasterioError as error:
-        raise StudyError(f"{file}: this cannot be read as a raster: {error}.") from None
-    if np.isinf(values).any():
-        raise StudyError(f"{file}: the raster has infinite values in the study area; mark them as no data.")
-    return _Raster(values, transform, system, file)
-
-
-def _opened(path: Path) -> rasterio.DatasetReader:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", NotGeoreferencedWarning)  # answered by a StudyError of our own
-        return rasterio.open(path)
-
-
-def _window(source: rasterio.DatasetReader, frame: Frame, crs: pyproj.CRS) -> Window | None:
-    """The pixels around the grid, or None if there are none."""
-    whole = Window(0, 0, source.width, source.height)
-    edge = _MARGIN_CELLS * frame.cell_m
-    west, south = frame.west_m - edge, frame.south_m - edge
-    east, north = frame.west_m + frame.nx * frame.cell_m + edge, frame.south_m + frame.ny * frame.cell_m + edge
-    box = transform_bounds(crs.to_wkt(), source.crs, west, south, east, north)
-    tilted = source.transform.b != 0 or source.transform.d != 0
-    if tilted:
-        return whole
-    corners = [_applied(~source.transform, x, y) for x, y in ((box[0], box[1]), (box[2], box[3]))]
-    (left, right), (top, bottom) = (sorted(c[k] for c in corners) for k in (0, 1))
-    left, top = max(int(np.floor(left)) - 1, 0), max(int(np.floor(top)) - 1, 0)
-    right, bottom = min(int(np.ceil(right)) + 1, source.width), min(int(np.ceil(bottom)) + 1, source.height)
-    return Window(left, top, right - left, bottom - top) if right > left and bottom > top else None
-
-
-def _onto_cells(raster: _Raster, frame: Frame, crs: pyproj.CRS) -> Float[NDArray, "ny nx"]:
-    finer = _pixel_m(raster, frame, crs) < frame.cell_m * (1 - _SAME)
-    return _warp(raster, frame, crs, 1, Resampling.average if finer else Resampling.bilinear)
-
-
-def _pixel_m(raster: _Raster, frame: Frame, crs: pyproj.CRS) -> float:
-    """Edge of a pixel amid the raster [m]: root of its area in the study's reference system."""
-    rows, columns = raster.values.shape
-    corners = [_applied(raster.transform, columns / 2 + i, rows / 2 + j) for i, j in ((0, 0), (1, 0), (0, 1))]
-    x, y = pyproj.Transformer.from_crs(raster.crs, crs, always_xy=True).transform(*np.transpose(corners))
-    return float(np.sqrt(abs((x[1] - x[0]) * (y[2] - y[0]) - (x[2] - x[0]) * (y[1] - y[0]))))
-
-
-def _warp(
-    raster: _Raster, frame: Frame, crs: pyproj.CRS, parts: int, how: Resampling
-) -> Float[NDArray, "rows columns"]:
-    """The raster on the frame's cells, each edge cut into `parts`; row 0 south, NaN where it has no data."""
-    onto = np.full((frame.ny * parts, frame.nx * parts), np.nan)
-    reproject(
-        raster.values,
-        onto,
-        src_transform=raster.transform,
-        src_crs=raster.crs.to_wkt(),
-        src_nodata=np.nan,
-        dst_transform=frame.transform(parts),
-        dst_crs=crs.to_wkt(),
-        dst_nodata=np.nan,
-        resampling=how,
-        tolerance=0.0,
+def _nothing_to_learn(values: Float[NDArray, "ny nx"], grid: Grid, entry: LayerSection, where: str) -> str | None:
+    found = values[grid.inside]
+    if entry.classes is not None:
+        absent = absent_class(values, grid.inside, entry.classes)
+        if absent is None:
+            return None
+        return (
+            f'{where}: the class "{absent}" takes most of no cell inside the area, so nothing can be learnt about it; '
+            "take it out of classes, or give it and another class one name."
+        )
+    if np.ptp(found) > 1e-9 * np.abs(found).max():
+        return None
+    return (
+        f"{where}: every cell inside the area has the value {found[0]:g}, so nothing can be learnt from it; "
+        "take it out of [model] layers."
     )
-    return onto[::-1].copy()
 
 
-def _applied(t: Affine, x: float, y: float) -> tuple[float, float]:
-    return t.a * x + t.b * y + t.c, t.d * x + t.e * y + t.f
+def _as_layers(name: str, values: Float[NDArray, "ny nx"], file: str, entry: LayerSection) -> dict[str, Layer]:
+    if entry.classes is None or entry.reference is None:
+        unit = entry.unit or ("m" if entry.distance is not None else "")
+        return {name: Layer(name, values, unit, file, name)}
+    parts = contrasts(values, entry.classes, entry.reference)
+    return {
+        f"{name}={part}": Layer(f"{name}={part}", own, "", file, name, entry.reference) for part, own in parts.items()
+    }

@@ -1,4 +1,4 @@
-"""Are fixes and home centres where the model can have them, and is the grid fine enough for the ranges."""
+"""Are fixes and home centres where the model can have them."""
 
 import numpy as np
 import pandas as pd
@@ -9,14 +9,10 @@ from scipy import ndimage
 from scipy.spatial import cKDTree
 
 from bayesrange._errors import StudyError
-from bayesrange.study._grid import LARGEST, SUB, Frame, Grid
+from bayesrange.study._grid import SUB, Grid
 from bayesrange.study._tables import counted, first_few
 
 _SDS = 3.0  # a fix may lie outside by this many standard deviations of its error
-_FEWEST_CELLS, _BETTER_CELLS = 10, 20
-_FEWEST_FIXES = 10
-# Bias of `localising` with bilinear reading, by cells across the 95 % range (tests/published/test_holgate_okubo.py)
-_BIAS_CELLS, _BIAS_PERCENT = np.array([5.0, 8, 10, 16, 24, 32]), np.array([23.0, 10.3, 7.0, 2.97, 1.4, 0.81])
 
 
 class Ground:
@@ -117,59 +113,3 @@ def check_homes(groups: pd.DataFrame, ground: Ground, name: str) -> None:
             f'{name}: the home centre of "{group}" is {what}; mend its x and y ([study] crs), '
             "or leave them blank to have it estimated."
         )
-
-
-def check_size(frame: Frame, groups: int) -> None:
-    """Refuse a grid so large that a fit would take days."""
-    if max(frame.ny, frame.nx) <= LARGEST:
-        return
-    cells = frame.ny * frame.nx
-    # 16 ms for value and gradient at 64 × 64 cells and 6 groups, power 1.2 in cells; 4 × 1000 draws of 15 steps
-    days = 0.016 * (cells / 64**2) ** 1.2 * max(groups, 1) / 6 * 4 * 1000 * 15 / 86400
-    coarser = frame.cell_m * max(frame.ny, frame.nx) / LARGEST
-    raise StudyError(
-        f"[study] cell_m: the grid would have {frame.ny} × {frame.nx} cells, more than {LARGEST} along a side, and a "
-        f"fit would take about {days:.2g} days; use cells of at least {coarser:.0f} m, or a smaller area."
-    )
-
-
-def check_resolution(fixes: pd.DataFrame, grid: Grid) -> list[str]:
-    """Remarks on groups whose range is only 10 to 20 cells across, or that have few fixes.
-
-    Across means twice the distance from the median place that holds 95 % of the group's fixes.
-
-    Raises:
-        StudyError: a group whose range is less than 10 cells across.
-    """
-    said, coarse = [], []
-    for group, own in fixes.groupby("group"):
-        label = f'group "{group}"' if group else "study"
-        if len(own) < _FEWEST_FIXES:
-            said.append(f"The {label} has only {counted(len(own), 'fix', 'fixes')}: too few to judge the cell size by.")
-            continue
-        across_m = 2 * np.quantile(np.hypot(own["x"] - own["x"].median(), own["y"] - own["y"].median()), 0.95)
-        cells = across_m / grid.cell_m
-        if cells < _FEWEST_CELLS:
-            raise StudyError(
-                f"[study] cell_m: 95 % of the fixes of the {label} lie within {across_m:.0f} m, only {cells:.1f} cells "
-                f"across, which would bias localising by about {_bias(cells):.0f} % or more; "
-                f"use cells of at most {across_m / _FEWEST_CELLS:.0f} m, better {across_m / _BETTER_CELLS:.0f} m."
-            )
-        if cells < _BETTER_CELLS:
-            coarse.append((cells, label))
-    if coarse:
-        cells, label = min(coarse)
-        others = (
-            f" ({counted(len(coarse), 'group', 'groups')} have fewer than {_BETTER_CELLS})" if len(coarse) > 1 else ""
-        )
-        better = cells * grid.cell_m / _BETTER_CELLS
-        said.append(
-            f"95 % of the fixes of the {label} lie within only {cells:.1f} cells{others}: expect localising to be "
-            f"biased by about {_bias(cells):.1f} %; cells of {better:.0f} m would make it {_BETTER_CELLS}."
-        )
-    return said
-
-
-def _bias(cells: float) -> float:
-    """Bias of localising expected with so many cells across a range [%]."""
-    return float(np.exp(np.interp(np.log(max(cells, 1)), np.log(_BIAS_CELLS), np.log(_BIAS_PERCENT))))

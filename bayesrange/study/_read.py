@@ -16,12 +16,13 @@ from numpy.typing import NDArray
 
 from bayesrange._errors import StudyError
 from bayesrange.study._area import read_area
+from bayesrange.study._cell_size import check_resolution, check_size, choose_cell
 from bayesrange.study._crs import carry, crs_text, look_like_degrees, metric_crs, parse_crs, scale_warnings, utm_for
 from bayesrange.study._fixes import RawFixes, read_fixes
 from bayesrange.study._grid import SUB, Frame, Grid, area_sub_cells, build_grid, frame_of, without_scraps
 from bayesrange.study._groups import groups_of_fixes, match_groups, read_groups
 from bayesrange.study._layers import Layer, no_go_sub_cells, read_layer
-from bayesrange.study._places import Ground, check_fixes, check_homes, check_resolution, check_size
+from bayesrange.study._places import Ground, check_fixes, check_homes
 from bayesrange.study._settings import StudySettings
 from bayesrange.study._settings_file import locate_study, read_settings
 
@@ -57,6 +58,12 @@ class Study:
     warnings: list[str]
     hashes: dict[str, str]
 
+    @property
+    def model_layers(self) -> tuple[str, ...]:
+        """Names in `layers` that the model's list means: of a layer of classes all its contrasts, in their order."""
+        wanted = self.settings.model.layers
+        return tuple(name for listed in wanted for name, own in self.layers.items() if own.section == listed)
+
 
 def read_study(path: str | Path) -> Study:
     """Read the study file (or the folder with study.toml) and all files it names.
@@ -73,19 +80,21 @@ def read_study(path: str | Path) -> Study:
     fixes = _placed(raw.table, fixes_crs, crs)
     groups, said_of_groups = _groups(settings, folder, fixes, fixes_crs, crs)
 
-    frame = frame_of(area, settings.study.cell_m)
-    check_size(frame, len(groups))
+    cell_m, said_of_cells = _cell(settings, fixes, area)
+    frame = frame_of(area, cell_m)
+    said_of_cells += check_size(frame, len(groups), settings.sampling)
     no_go = _no_go(settings, folder, frame, crs)
     habitable, said_of_scraps = without_scraps(area_sub_cells(area, frame) & ~no_go, frame)
     grid = build_grid(frame, crs, habitable)
     ground = Ground(area, grid, habitable, no_go, settings.model.reading)
     outside = check_fixes(fixes, ground, carry(*raw.table[["y", "x"]].to_numpy(dtype=float).T, fixes_crs, crs))
     check_homes(groups, ground, settings.groups.file if settings.groups else "groups")
-    layers, said_of_layers = _layers(settings, folder, grid)
+    layers, said_of_layers, filled = _layers(settings, folder, grid)
 
     counts = raw.counts | {"fixes": len(fixes), "animals": fixes["animal"].nunique(), "groups": len(groups)}
-    counts["outside_within_error"] = outside
-    warnings = said_of_crs + raw.warnings + said_of_groups + said_of_scraps + check_resolution(fixes, grid)
+    counts |= {"outside_within_error": outside} | ({"cells_filled": filled} if filled else {})
+    warnings = said_of_crs + raw.warnings + said_of_groups + said_of_cells + said_of_scraps
+    warnings += check_resolution(fixes, grid)
     warnings += said_of_layers
     hashes = _hashes(path, settings, raw.files)
     return Study(path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes)
@@ -155,28 +164,46 @@ def _groups(
     return groups, said + match_groups(fixes, groups, name)
 
 
+def _cell(
+    settings: StudySettings, fixes: pd.DataFrame, area: shapely.Polygon | shapely.MultiPolygon
+) -> tuple[float, list[str]]:
+    """Edge of a cell [m], given or chosen; if chosen, why."""
+    if settings.study.cell_m != "auto":
+        return settings.study.cell_m, []
+    chosen, why = choose_cell(fixes, area)
+    return chosen, [f"[study] cell_m: {why}"]
+
+
 def _no_go(settings: StudySettings, folder: Path, frame: Frame, crs: pyproj.CRS) -> Bool[NDArray, "rows columns"]:
     found = np.zeros((frame.ny * SUB, frame.nx * SUB), dtype=bool)
     for layer in settings.layers.values():
         if layer.no_go and layer.file:
-            found |= no_go_sub_cells(folder / layer.file, layer.file, frame, crs)
+            found |= no_go_sub_cells(folder / layer.file, layer, frame, crs)
     return found
 
 
-def _layers(settings: StudySettings, folder: Path, grid: Grid) -> tuple[dict[str, Layer], list[str]]:
+def _layers(settings: StudySettings, folder: Path, grid: Grid) -> tuple[dict[str, Layer], list[str], int]:
+    """Layers by name, what has to be said, and how many cells were filled."""
     layers: dict[str, Layer] = {}
     said: list[str] = []
+    filled = 0
     for name, entry in settings.layers.items():
-        if not entry.no_go and entry.file:
-            wanted = name in settings.model.layers
-            layers[name], remarks = read_layer(folder / entry.file, entry.file, name, entry.unit, grid, wanted)
-            said += remarks
-    return layers, said
+        if entry.no_go or (entry.file is None and entry.distance is None):
+            continue
+        found = read_layer(folder, name, entry, grid, wanted=name in settings.model.layers)
+        twice = next(iter(found.layers.keys() & layers.keys()), None)
+        if twice is not None:
+            raise StudyError(f'[layers.{name}]: there would be two layers called "{twice}"; rename this section.')
+        layers |= found.layers
+        said += found.said
+        filled += found.filled
+    return layers, said, filled
 
 
 def _hashes(path: Path, settings: StudySettings, fixes: dict[str, Path]) -> dict[str, str]:
     """SHA-256 of every file that was read, by its name as the user wrote it."""
-    named = [settings.study.area, *(layer.file for layer in settings.layers.values() if layer.file)]
+    named = [settings.study.area]
+    named += [file for layer in settings.layers.values() for file in (layer.file, layer.distance) if file]
     if settings.groups is not None:
         named.append(settings.groups.file)
     files = {path.name: path} | fixes | {name: path.parent / name for name in named}

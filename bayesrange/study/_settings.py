@@ -90,6 +90,14 @@ class LayerSection(Section):
 
     file: Name | None = Field(None, description=A_FILE)
     files: dict[str, Name] | None = Field(None, description='one file a period, such as { before = "…", after = "…" }')
+    distance: Name | None = Field(None, description="the name of a vector file in quotes")
+    table: Name | None = Field(None, description="the name of a table of the vector file in quotes")
+    cap_m: Metres | None = Field(None, description=METRES)
+    band: int | None = Field(None, ge=1, description="a whole number of at least 1")
+    classes: dict[str, str] | None = Field(
+        None, description='the numbers in the raster and their names, such as { 1 = "wood", 2 = "grass" }'
+    )
+    reference: Name | None = Field(None, description="the name of one of the classes in quotes")
     unit: str = Field("", description="a unit in quotes")
     fill: Literal["nearest"] | None = Field(None, description='"nearest"')
     fill_within_m: Metres | None = Field(None, description=METRES)

@@ -13,6 +13,7 @@ from typing import Any, NamedTuple, get_args
 from pydantic import BaseModel, ValidationError
 
 from bayesrange._errors import StudyError
+from bayesrange.study._layer_keys import layer_problems
 from bayesrange.study._settings import LayerSection, PeriodSection, Section, StudySettings
 
 _NAMED_SECTIONS = {"layers": LayerSection, "periods": PeriodSection}
@@ -163,8 +164,7 @@ def _as_toml(value: Any) -> str:
 def _contradictions(s: StudySettings) -> Iterator[str]:
     """Values that are each well-formed but do not go together."""
     for name, layer in s.layers.items():
-        if layer.file is None and layer.files is None:
-            yield f"[layers.{name}] file: this is missing; expected the name of a file in quotes."
+        yield from layer_problems(name, layer)
     for name in s.model.layers:
         if name not in s.layers:
             close = nearest(name, list(s.layers))
@@ -184,7 +184,6 @@ def _not_built(s: StudySettings) -> Iterator[str]:
     """Keys of the design whose given value this version cannot honour."""
     fixes, model = s.fixes, s.model
     given = {
-        '[study] cell_m = "auto"': s.study.cell_m == "auto",
         '[study] sensitive = "high"': s.study.sensitive == "high",
         "[fixes] tag": fixes.tag is not None,
         "[fixes] time as a list of columns": isinstance(fixes.time, list),
@@ -199,8 +198,6 @@ def _not_built(s: StudySettings) -> Iterator[str]:
         given[f"[model] {name}"] = getattr(model, name) is not None
     for name, layer in s.layers.items():
         given[f"[layers.{name}] files (one a period)"] = layer.files is not None
-        given[f"[layers.{name}] fill"] = layer.fill is not None
-        given[f"[layers.{name}] fill_within_m"] = layer.fill_within_m is not None
     for file in [fixes.file] if isinstance(fixes.file, str) else fixes.file:
         for ending in (".parquet", ".gpkg"):
             given[f"[fixes] file: {ending}"] = given.get(f"[fixes] file: {ending}", False) or file.endswith(ending)

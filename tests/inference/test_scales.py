@@ -9,6 +9,7 @@ from inference._tiny_study import fixes_table, groups_table, write_study
 
 from bayesrange import StudyError
 from bayesrange.inference import Scales, make_scales
+from bayesrange.inference._scales import LayerScale
 from bayesrange.study import read_study
 
 
@@ -69,6 +70,16 @@ def test_layer_of_zeros_is_refused(study):
     flat = dataclasses.replace(study.layers["worms"], values=np.where(study.grid.inside, 0.0, np.nan))
     with pytest.raises(StudyError, match="the same value everywhere"):
         make_scales(dataclasses.replace(study, layers={"worms": flat}), ["worms"])
+
+
+def test_a_contrast_of_classes_is_not_standardised(study):
+    wood = (np.arange(study.grid.inside.size) % 3 == 0).reshape(study.grid.shape).astype(float)
+    layer = dataclasses.replace(
+        study.layers["worms"], values=np.where(study.grid.inside, wood, np.nan), reference="fen"
+    )
+    scales = make_scales(dataclasses.replace(study, layers={"cover=wood": layer}), ["cover=wood"])
+    assert scales.layers["cover=wood"] == LayerScale(0.0, 1.0, "", "fen")
+    assert Scales.from_json(json.loads(json.dumps(scales.as_json()))) == scales
 
 
 def test_home_length_is_that_of_the_groups_in_the_table(tmp_path):

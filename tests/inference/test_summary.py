@@ -197,3 +197,14 @@ def test_a_parameter_the_data_say_nothing_of_has_no_contraction():
     table = parameter_table([Row("a", "1", draws, draws[:1]), Row("b", "1", draws / 10, draws[:1])])
     assert table["contraction"][0] == pytest.approx(0, abs=0.05)
     assert table["contraction"][1] == pytest.approx(0.99, abs=0.002)
+
+
+def test_a_contrast_of_classes_says_what_it_compares_with_and_has_no_raw_row():
+    height = LayerScale(0.0, 1.0, "", "grass")
+    scales = Scales(0.6, 1.4, 200.0, 50.0, {"worms": LayerScale(40.0, 8.0, "kg/ha"), "height": height})
+    for spec, sites in ((SHARED, shared_sites), (HIERARCHICAL, hierarchical_sites)):
+        sets = [parameter_dataset(spec, sites(1, 60, seed)) for seed in (1, 2)]
+        units = {row.name: row.unit for row in rows(spec, scales, *sets, seed=3)}
+        assert units["resource[height]"] == "against grass"
+        assert units["resource[worms]"] == "per sd" and "resource[worms] raw" in units
+        assert "resource[height] raw" not in units

@@ -76,7 +76,6 @@ def test_a_wrong_setting(folder, case):
 
 
 LATER = {
-    "auto cells": ("study", {"cell_m": "auto"}, '[study] cell_m = "auto"'),
     "sensitive": ("study", {"sensitive": "high"}, '[study] sensitive = "high"'),
     "tag": ("fixes", {"tag": "tag"}, "[fixes] tag"),
     "two columns": ("fixes", {"time": ["date", "clock"]}, "[fixes] time as a list of columns"),
@@ -85,7 +84,6 @@ LATER = {
     "animals": ("animals", {"file": "animals.csv"}, "[animals] file"),
     "settle in": ("animals", {"settle_in_days": 3}, "[animals] settle_in_days"),
     "by period": ("layers", {"worms": {"files": {"before": "a.tif"}}}, "[layers.worms] files"),
-    "fill": ("layers", {"worms": {"file": "worms.tif", "fill": "nearest"}}, "[layers.worms] fill"),
     "individual": ("model", {"pooling": "individual"}, '[model] pooling = "individual"'),
     "memory": ("model", {"memory_start": "learned"}, '[model] memory_start = "learned"'),
     "interval": ("model", {"interval_h": 1.0}, "[model] interval_h"),
@@ -352,7 +350,7 @@ def test_broken_layers(folder):
     folder.raster("worms.tif", np.arange(1600.0).reshape(40, 40), 100.0, north=folder.south + 90_000)
     refused(folder, "worms.tif: the raster does not overlap the study area")
     folder.raster("worms.tif", np.ones((2, 40, 40)), 100.0, count=2)
-    refused(folder, "worms.tif: the raster has 2 bands; expected one")
+    refused(folder, "worms.tif: the raster has 2 bands; say which is meant by band = …: 1, 2.")
     folder.raster("worms.tif", np.where(np.eye(40) > 0, np.inf, 1.0), 100.0)
     refused(folder, "worms.tif: the raster has infinite values")
     folder.raster("worms.tif", np.ones((40, 40)), 100.0, crs=None)
