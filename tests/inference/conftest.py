@@ -1,6 +1,7 @@
 """Studies and compiled programs that several test files share: compiling one takes seconds."""
 
 from collections import namedtuple
+from pathlib import Path
 
 import jax
 import jax.numpy as jnp
@@ -26,11 +27,21 @@ from bayesrange.study import autocorrelation_weights, read_study
 Model = namedtuple("Model", "study card spec scales weight data program")
 
 
-@pytest.fixture(scope="session", autouse=True)
+def pytest_collection_modifyitems(items):
+    # A cached program that another process is just writing, or that was cut short, is compiled anew: no failure.
+    harmless = pytest.mark.filterwarnings("ignore:Error (reading|writing) persistent compilation cache:UserWarning")
+    for item in items:
+        if Path(__file__).parent in item.path.parents:
+            item.add_marker(harmless)
+
+
+@pytest.fixture(scope="module", autouse=True)
 def compiled_programs(pytestconfig):
     """Compiled programs outlive the session, as they do in a fit: compiling is most of what these tests cost."""
     jax.config.update("jax_compilation_cache_dir", str(pytestconfig.cache.mkdir("programs")))
     jax.config.update("jax_persistent_cache_min_compile_time_secs", 0.5)
+    yield
+    jax.config.update("jax_compilation_cache_dir", None)
 
 
 def build(file, warmup=60, chunk=50):

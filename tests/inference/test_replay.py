@@ -45,8 +45,3 @@ def test_replay_finds_the_wall_in_the_transitions_that_diverged(coupled, data, s
 def test_without_divergences_nothing_is_replayed(coupled, data, sampled):
     whitening, state, _ = sampled
     assert failed_solves(coupled.program, data, whitening, state, {"diverging": np.zeros(4, bool)}) == 0
-
-
-def test_every_draw_has_a_steady_state(coupled, data, sampled):
-    for z in sampled[2]["position"][::10]:
-        assert bool(coupled.program.derive(jnp.asarray(z), data)["solved"])
