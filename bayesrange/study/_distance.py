@@ -1,6 +1,7 @@
 """Distance to the nearest feature of a vector file: GeoPackage, GeoJSON or a zipped shapefile."""
 
 import json
+import warnings
 import zipfile
 from pathlib import Path
 
@@ -26,8 +27,8 @@ _BEND_M = 1000.0  # edges are cut this often before they are reprojected, so tha
 
 def distance_to_features(
     path: Path, file: str, table: str | None, frame: Frame, crs: pyproj.CRS, cap_m: float | None
-) -> Float[NDArray, "ny nx"]:
-    """Mean distance [m] over each cell to the nearest point, line or polygon; 0 within polygons.
+) -> tuple[Float[NDArray, "ny nx"], list[str]]:
+    """Mean distance [m] over each cell to the nearest point, line or polygon (0 within polygons), and remarks.
 
     Args:
         path: where the vector file is.
@@ -40,34 +41,42 @@ def distance_to_features(
     Raises:
         StudyError: unreadable, too large, no features, no reference system, several tables and none named.
     """
-    shapes = read_features(path, file, table, crs)
+    shapes, said = read_features(path, file, table, crs)
     edge = frame.cell_m / _PARTS
     x = frame.west_m + edge * (np.arange(frame.nx * _PARTS) + 0.5)
     y = frame.south_m + edge * (np.arange(frame.ny * _PARTS) + 0.5)
     distance = _nearest_m(shapes, *(a.ravel() for a in np.meshgrid(x, y)))
     if cap_m is not None:
         distance = np.minimum(distance, cap_m)
-    return distance.reshape(frame.ny, _PARTS, frame.nx, _PARTS).mean(axis=(1, 3))
+    return distance.reshape(frame.ny, _PARTS, frame.nx, _PARTS).mean(axis=(1, 3)), said
 
 
-def read_features(path: Path, file: str, table: str | None, crs: pyproj.CRS) -> NDArray[np.object_]:
-    """The shapes of a vector file in the study's reference system, blank ones left out."""
+def read_features(path: Path, file: str, table: str | None, crs: pyproj.CRS) -> tuple[NDArray[np.object_], list[str]]:
+    """The shapes of a vector file in the study's reference system, blank ones left out; and what the reader remarks."""
     source = _source(path, file)
-    try:
-        names = [str(name) for name in pyogrio.list_layers(source)[:, 0]]
-        table = _table(names, file, table)
-        number = pyogrio.read_info(source, layer=table, force_feature_count=True)["features"]
-        if number > _MOST_FEATURES:
-            raise StudyError(
-                f"{file}: there are {number:,} features, more than the {_MOST_FEATURES:,} that are read; "
-                "keep those near the study area."
-            )
-        found = geopandas.read_file(source, layer=table, columns=[])
-    except (DataSourceError, DataLayerError, ValueError, shapely.errors.ShapelyError) as error:
-        if isinstance(error, StudyError):
+    with warnings.catch_warnings(record=True) as remarks:
+        warnings.simplefilter("always")
+        try:
+            found = _features(source, file, table)
+        except StudyError:
             raise
-        raise StudyError(f"{file}: this cannot be read as a vector file: {error}.") from None
-    return _carried(found, file, path.suffix.lower() in (".geojson", ".json") and not _names_its_system(path), crs)
+        except (DataSourceError, DataLayerError, ValueError, shapely.errors.ShapelyError) as error:
+            raise StudyError(f"{file}: this cannot be read as a vector file: {error}.") from None
+    said = [f"{file}: on reading: {text}" for text in dict.fromkeys(str(remark.message) for remark in remarks)]
+    in_degrees = path.suffix.lower() in (".geojson", ".json") and not _names_its_system(path)
+    return _carried(found, file, in_degrees, crs), said
+
+
+def _features(source: str, file: str, table: str | None) -> object:
+    names = [str(name) for name in pyogrio.list_layers(source)[:, 0]]
+    table = _table(names, file, table)
+    number = pyogrio.read_info(source, layer=table, force_feature_count=True)["features"]
+    if number > _MOST_FEATURES:
+        raise StudyError(
+            f"{file}: there are {number:,} features, more than the {_MOST_FEATURES:,} that are read; "
+            "keep those near the study area."
+        )
+    return geopandas.read_file(source, layer=table, columns=[])
 
 
 def _source(path: Path, file: str) -> str:

@@ -51,6 +51,9 @@ def class_problems(name: str, classes: dict[str, str] | None, reference: str | N
                 f'{where} classes: "{code}" is no whole number; expected the numbers in the raster and their names, '
                 'such as { 1 = "wood", 2 = "grass" }.'
             )
+            return
+    if len({int(code) for code in classes}) < len(classes):
+        yield f"{where} classes: a number stands twice; give each number one name."
     names = class_names(classes)
     plain = {"".join(own.casefold().split()) for own in names}
     if len(plain) < len(names) or "" in plain:

@@ -72,21 +72,22 @@ def read_layer(folder: Path, name: str, entry: LayerSection, grid: Grid, wanted:
     """
     file = entry.distance or entry.file or ""
     where = f"[layers.{name}] {file}"
-    values, problem = _values(folder, file, entry, grid, where)
-    said, filled = [], 0
+    values, problem, said = _values(folder, file, entry, grid, where)
+    filled, count = None, 0
     if entry.fill is not None and entry.fill_within_m is not None:
-        values, filled, farthest_m = fill_nearest(values, grid, entry.fill_within_m)
-        if filled:
+        filled, count, farthest_m = fill_nearest(values, grid, entry.fill_within_m)
+        if count:
             said.append(
-                f"{where}: {counted(filled, 'cell', 'cells')} inside the area had no value and took that of the "
+                f"{where}: {counted(count, 'cell', 'cells')} inside the area had no value and took that of the "
                 f"nearest cell, at most {farthest_m:.0f} m away."
             )
-    missing = missing_cells(values, grid, entry.fill is not None)
+    missing = missing_cells(values, grid, filled)
+    values = values if filled is None else filled
     problem = problem or (f"{where}: {missing}" if missing else None) or _nothing_to_learn(values, grid, entry, where)
     if problem and wanted:
         raise StudyError(problem)
     values = np.where(grid.inside, values, np.nan)
-    return Reading(_as_layers(name, values, file, entry), said + ([problem] if problem else []), filled)
+    return Reading(_as_layers(name, values, file, entry), said + ([problem] if problem else []), count)
 
 
 def no_go_sub_cells(path: Path, entry: LayerSection, frame: Frame, crs: pyproj.CRS) -> Bool[NDArray, "rows columns"]:
@@ -102,17 +103,18 @@ def no_go_sub_cells(path: Path, entry: LayerSection, frame: Frame, crs: pyproj.C
 
 def _values(
     folder: Path, file: str, entry: LayerSection, grid: Grid, where: str
-) -> tuple[Float[NDArray, "ny nx"], str | None]:
-    """Values on every cell of the grid, inside or not, of classes their positions; and what is wrong with them."""
+) -> tuple[Float[NDArray, "ny nx"], str | None, list[str]]:
+    """Values on every cell of the grid, inside or not (of classes their positions), what is wrong, and remarks."""
     frame = Frame(grid.west_m, grid.south_m, grid.cell_m, *grid.shape)
     if entry.distance is not None:
-        return distance_to_features(folder / file, file, entry.table, frame, grid.crs, entry.cap_m), None
+        distance, said = distance_to_features(folder / file, file, entry.table, frame, grid.crs, entry.cap_m)
+        return distance, None, said
     raster = read_raster(folder / file, file, frame, grid.crs, entry.band)
     if entry.classes is None:
-        return onto_cells(raster, frame, grid.crs), None
+        return onto_cells(raster, frame, grid.crs), None, []
     cells = classes_on_cells(raster, entry.classes, frame, grid.crs, where)
     problem = codes_without_name(raster, cells, grid.inside, where)
-    return np.where(cells < 0, np.nan, cells), problem
+    return np.where(cells < 0, np.nan, cells), problem, []
 
 
 def _nothing_to_learn(values: Float[NDArray, "ny nx"], grid: Grid, entry: LayerSection, where: str) -> str | None:

@@ -28,25 +28,27 @@ def fill_nearest(
     return np.where(filled, nearest, values), int(filled.sum()), float(distance_m[filled].max())
 
 
-def missing_cells(values: Float[NDArray, "ny nx"], grid: Grid, fill: bool) -> str | None:
+def missing_cells(
+    values: Float[NDArray, "ny nx"], grid: Grid, filled: Float[NDArray, "ny nx"] | None = None
+) -> str | None:
     """The end of a sentence on the cells inside the area that have no value: how many, where, what to do.
 
     Args:
         values: on every cell of the grid, those outside the area too.
         grid: the grid.
-        fill: whether the user has asked for filling, so that these are what it left.
+        filled: the same once the user has had them filled, None if filling was not asked for.
     """
-    missing = np.isnan(values) & grid.inside
+    missing = np.isnan(values if filled is None else filled) & grid.inside
     count = int(missing.sum())
     if not count:
         return None
     told = f"{count} of {int(grid.inside.sum())} cells inside the area have no value ({_where(missing, grid)})"
     if np.isnan(values).all():
-        return f"{told}; give a raster that has values there."
+        return f"{told}; give a file that has values there."
     farthest = float(_to_known(values, grid)[0][missing].max())
     step = 10 ** math.floor(math.log10(farthest))
     enough = f"{math.ceil(farthest / step - 1e-9) * step:g}"
-    if fill:
+    if filled is not None:
         return (
             f"{told}, and a cell that has one is up to {farthest:.0f} m away, farther than fill_within_m; give a "
             f"raster that covers the whole area, or fill_within_m = {enough}."
