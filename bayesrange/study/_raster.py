@@ -68,8 +68,10 @@ def read_raster(path: Path, file: str, frame: Frame, crs: pyproj.CRS, band: int 
             if window is None:
                 raise StudyError(f"{file}: the raster does not overlap the study area; check its reference system.")
             _refuse_too_large(source, window, band, file)
-            read = source.read(band, window=window, masked=True)
-            values = read.astype(float).filled(np.nan) * source.scales[band - 1] + source.offsets[band - 1]
+            values = source.read(band, window=window, out_dtype="float64")
+            values[source.read_masks(band, window=window) == 0] = np.nan
+            values *= source.scales[band - 1]
+            values += source.offsets[band - 1]
             transform = source.window_transform(window)
     except (RasterioError, RasterCRSError, CRSError) as error:
         raise StudyError(f"{file}: this cannot be read as a raster (expected GeoTIFF): {error}.") from None

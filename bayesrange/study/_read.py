@@ -207,4 +207,8 @@ def _hashes(path: Path, settings: StudySettings, fixes: dict[str, Path]) -> dict
     if settings.groups is not None:
         named.append(settings.groups.file)
     files = {path.name: path} | fixes | {name: path.parent / name for name in named}
-    return {name: hashlib.sha256(file.read_bytes()).hexdigest() for name, file in files.items()}
+    hashes = {}
+    for name, file in files.items():
+        with file.open("rb") as opened:  # piece by piece: a raster may be larger than memory
+            hashes[name] = hashlib.file_digest(opened, "sha256").hexdigest()
+    return hashes

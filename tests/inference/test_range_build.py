@@ -7,11 +7,12 @@ import jax.numpy as jnp
 import numpy as np
 import pandas as pd
 import pytest
+import rasterio
 from inference._tiny_study import HOMES, NORTH, SOUTH, WEST, fixes_table, groups_table, write_study
 
 from bayesrange import StudyError
 from bayesrange.inference import as_arrays, find_card, log_likelihood, make_data, make_scales, make_spec, read_card
-from bayesrange.inference._range_build import BUCKET, code_covariates, first_homes
+from bayesrange.inference._range_build import BUCKET, code_covariates, first_homes, make_setting
 from bayesrange.spaceuse import Parameters
 from bayesrange.study import read_study
 
@@ -38,6 +39,10 @@ WRONG = {
     "layers missing": ({"card": "resources", "layers": []}, r"layers: the card resources responds to layers; list at"),
     "layers too many": ({"card": "avoidance"}, r"layers: the card avoidance has no resource term; take the list out"),
     "over-marking": ({"card": "resources", "over_marking": True}, "over_marking: the card resources has no term that"),
+    "a prior without use": (
+        {"priors": {"over_marking": {"family": "half-normal", "scale": 0.01}}, "card": "avoidance", "layers": []},
+        "over_marking: this prior has no use while over_marking is off",
+    ),
     "one group": (
         {"card": "avoidance", "layers": [], "groups": ONE, "fixes": fixes_table().iloc[:100]},
         "card: avoidance is about neighbours, and the study has one group",
@@ -227,3 +232,23 @@ def test_cell_reading_gives_the_density_of_the_cell(tmp_path):
     column = ((study.fixes["x"] - WEST) // 100).astype(int).to_numpy()
     owner = study.fixes["group"].map({name: i for i, name in enumerate(HOMES)}).to_numpy()
     np.testing.assert_allclose(terms[: len(row)], np.asarray(solution.log_density)[owner, row, column], rtol=1e-12)
+
+
+def test_contrasts_of_classes_enter_as_0_and_1_in_the_order_of_the_study_file(tmp_path):
+    file = write_study(tmp_path, model={"layers": ["cover", "worms"]})
+    plain = read_study(write_study(tmp_path / "plain")).grid
+    codes = np.random.default_rng(1).choice([4, 5, 6], size=plain.shape).astype("uint8")
+    profile = {"driver": "GTiff", "height": codes.shape[0], "width": codes.shape[1], "count": 1, "dtype": "uint8"}
+    with rasterio.open(tmp_path / "cover.tif", "w", crs=plain.crs, transform=plain.transform, **profile) as target:
+        target.write(codes[::-1], 1)
+    section = (
+        '[layers.cover]\nfile = "cover.tif"\nclasses = { 5 = "fen", 4 = "wood", 6 = "grass" }\nreference = "wood"\n'
+    )
+    file.write_text(file.read_text() + "\n" + section)
+    study = read_study(file)
+    spec = make_spec(study, read_card(find_card(study.settings.model.card, tmp_path)))
+    assert spec.layers == ("cover=fen", "cover=grass", "worms")
+    layers = make_setting(study, make_scales(study, list(spec.layers)), spec).layers
+    inside = study.grid.inside
+    np.testing.assert_array_equal(layers[0][inside], (codes == 5)[inside])
+    np.testing.assert_array_equal(layers[1][inside], (codes == 6)[inside])
