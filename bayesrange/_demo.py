@@ -26,7 +26,7 @@ def copy_study(out: Path | None) -> Path:
         out: the folder; default `bayesrange-demo` here, or the next free number. An unfinished demo is gone on with.
 
     Raises:
-        StudyError: `out` holds something else.
+        StudyError: `out` holds something else, or a file that was changed.
     """
     source = demo_folder()
     if out is None:
@@ -39,7 +39,9 @@ def copy_study(out: Path | None) -> Path:
     out.mkdir(parents=True, exist_ok=True)
     for file in source.iterdir():
         target = out / file.name
-        if file.is_file() and not (target.exists() and target.read_bytes() == file.read_bytes()):
+        if target.exists() and target.read_bytes() != file.read_bytes():
+            raise StudyError(f"{target}: differs from the bundled study's file; choose another folder with --out.")
+        if file.is_file() and not target.exists():
             shutil.copyfile(file, target)
     return out
 

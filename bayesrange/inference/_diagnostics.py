@@ -91,9 +91,7 @@ def _problems(
         )
     of_groups = float(np.max([0.0, *table["rhat"][individual]]))
     if not of_groups < RHAT_INDIVIDUAL and chains > 1:
-        said.append(
-            f"R-hat of a single group reaches {of_groups:.3f} (wanted below {RHAT_INDIVIDUAL}); raise draws."
-        )
+        said.append(f"R-hat of a single group reaches {of_groups:.3f} (wanted below {RHAT_INDIVIDUAL}); raise draws.")
     wanted = ESS_PER_CHAIN * chains
     if not min(bulk, tail) >= wanted:
         said.append(

@@ -71,6 +71,11 @@ def _check_card(study: Study, card: Card) -> None:
             f"{where}, [model] layers: the card {card.name} has no resource term; take the list out or choose another "
             "card."
         )
+    if "over_marking" in model.priors and not model.over_marking:
+        raise StudyError(
+            f"{where}, [model.priors] over_marking: this prior has no use while over_marking is off; set "
+            "over_marking = true in [model], or take the prior out."
+        )
     if model.over_marking and not card.scent:
         raise StudyError(f"{where}, [model] over_marking: the card {card.name} has no term that uses scent.")
     if card.scent and len(study.groups) < 2:

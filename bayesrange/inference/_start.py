@@ -85,11 +85,11 @@ def find_start(value_and_gradient: ValueAndGradient, guess: np.ndarray) -> Start
 
 
 def curvature_at(value_and_gradient: ValueAndGradient, z: np.ndarray) -> np.ndarray:
-    """Second derivatives of the potential at z, by central differences of its gradient."""
+    """Second derivatives of the potential at z, by central differences of its gradient; 0 where that is no number."""
     curvature = np.empty((z.size, z.size))
     for i in range(z.size):
         step = np.zeros(z.size)
         step[i] = STEP
         ahead, behind = (np.asarray(value_and_gradient(z + side * step)[1], float) for side in (1, -1))
-        curvature[i] = (ahead - behind) / (2 * STEP)
+        curvature[i] = np.nan_to_num((ahead - behind) / (2 * STEP), nan=0.0, posinf=0.0, neginf=0.0)
     return (curvature + curvature.T) / 2

@@ -66,6 +66,8 @@ def _start(folder: Path) -> None:
     state = program.begin(jnp.zeros(program.dimension), _key(task.seed, 0), data, whitening)
     program.advance.lower(state, 1, data, whitening).compile()
     program.derive.lower(whitening.mode, data).compile()
+    if task.spec.coupled and task.spec.solver == "gibbs":
+        program.other_state.lower(whitening.mode, data).compile()
     program.constrain.lower(jnp.zeros((task.draws, program.dimension)), data).compile()
     arrays = {"mode": start.mode, "scale": scale, "centring": np.asarray(data.centring), "potential": start.potential}
     arrays |= {"seconds_per_gradient": np.median(times), "peak_gib": _peak_gib()}

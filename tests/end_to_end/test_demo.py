@@ -9,7 +9,7 @@ import sys
 
 import pytest
 
-from bayesrange import open_run
+from bayesrange import StudyError, open_run
 from bayesrange._demo import TOO_FAR, copy_study, truth_table
 
 
@@ -55,3 +55,11 @@ def test_an_unfinished_demo_is_gone_on_with_and_a_finished_one_left_alone(tmp_pa
     run.mkdir(parents=True)
     (run / "run.json").write_text("{}")
     assert copy_study(None).name == "bayesrange-demo-2"
+
+
+def test_a_changed_file_of_the_demo_is_not_overwritten(tmp_path):
+    folder = copy_study(tmp_path / "heath")
+    (folder / "groups.csv").write_text("group,x,y,animals\n")
+    with pytest.raises(StudyError, match="groups.csv: differs from the bundled study's file; choose another folder"):
+        copy_study(folder)
+    assert (folder / "groups.csv").read_text() == "group,x,y,animals\n"
