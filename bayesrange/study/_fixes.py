@@ -14,7 +14,15 @@ import pandas as pd
 from bayesrange._errors import StudyError
 from bayesrange.study._darwin_core import SD_PER_RADIUS, UNCERTAINTY, with_darwin_core
 from bayesrange.study._settings import FixesSection
-from bayesrange.study._tables import column_or_error, counted, first_few, numbers, one_name_each, read_table
+from bayesrange.study._tables import (
+    column_or_error,
+    counted,
+    first_few,
+    has_decimal_commas,
+    numbers,
+    one_name_each,
+    read_table,
+)  # fmt: skip
 from bayesrange.study._times import read_times
 
 _PATTERN = set("*?[")
@@ -91,6 +99,8 @@ def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd
         raise StudyError(f"{name}, line {table.index[animal == ''][0]}: the animal is blank; name it.")
     times, said = read_times(column_or_error(table, str(section.time), name, "[fixes] time names"), section.zone, name)
     error, said_of_error = _errors(table, section, name)
+    if has_decimal_commas(table[section.x]) or has_decimal_commas(table[section.y]):
+        said.append(f"{name}: {section.x} and {section.y} are written with decimal commas and were read so.")
     part = pd.DataFrame(
         {
             "animal": animal.to_numpy(),

@@ -8,7 +8,7 @@ import pandas as pd
 
 from bayesrange._errors import StudyError
 from bayesrange.study._settings_file import nearest
-from bayesrange.study._tables import counted, first_few
+from bayesrange.study._tables import counted, first_few, shown
 
 _ISO = re.compile(r"\d{4}-\d\d-\d\d(?P<clock>[T ]\d\d:\d\d(:\d\d([.,]\d+)?)?(?P<offset> ?(Z|[+-]\d\d(:?\d\d)?))?)?")
 _EXAMPLE = "expected ISO 8601 such as 2031-03-01T04:00:00+01:00"
@@ -45,6 +45,28 @@ def read_times(texts: pd.Series, zone: str | None, name: str) -> tuple[pd.Series
     return times, [f"{name}: {what} without a clock time, read as 00:00."] if days else []
 
 
+def known_zone(zone: str) -> str:
+    """The zone's name, if there is such a zone.
+
+    Raises:
+        StudyError: suggests the nearest known one.
+    """
+    if zone not in available_timezones():
+        close = nearest(zone, sorted(available_timezones()))
+        hint = f'did you mean "{close}"?' if close else 'expected a name such as "Europe/Oslo".'
+        raise StudyError(f'[fixes] zone: there is no time zone "{shown(zone)}"; {hint}')
+    return zone
+
+
+def clock_minutes(texts: pd.Series, times: pd.Series, zone: str | None) -> np.ndarray:
+    """Minutes since midnight on the clock of the study's zone, or without one on the clock as it is written."""
+    if zone is not None:
+        local = times.dt.tz_convert(ZoneInfo(known_zone(zone)))
+        return (local.dt.hour * 60 + local.dt.minute).to_numpy(dtype=int)
+    clock = texts.str.extract(r"[T ](\d\d):(\d\d)").fillna("0").astype(int)
+    return (clock[0] * 60 + clock[1]).to_numpy(dtype=int)
+
+
 def _parsed(texts: pd.Series, original: pd.Series, name: str) -> pd.Series:
     """Moments read as if in UTC where no offset is given."""
     times = pd.to_datetime(texts, format="ISO8601", utc=True, errors="coerce").astype("datetime64[ns, UTC]")
@@ -54,11 +76,7 @@ def _parsed(texts: pd.Series, original: pd.Series, name: str) -> pd.Series:
 
 
 def _in_zone(local: pd.Series, texts: pd.Series, zone: str, name: str) -> pd.Series:
-    if zone not in available_timezones():
-        close = nearest(zone, sorted(available_timezones()))
-        hint = f'did you mean "{close}"?' if close else 'expected a name such as "Europe/Oslo".'
-        raise StudyError(f'[fixes] zone: there is no time zone "{zone}"; {hint}')
-    placed = local.dt.tz_localize(ZoneInfo(zone), ambiguous="NaT", nonexistent="NaT")
+    placed = local.dt.tz_localize(ZoneInfo(known_zone(zone)), ambiguous="NaT", nonexistent="NaT")
     lost = placed.isna().to_numpy()
     _refuse(texts.loc[local.index], lost, name, f"summer time in {zone} skips or repeats it; write it with its offset")
     return placed.dt.tz_convert("UTC")
@@ -68,4 +86,4 @@ def _refuse(texts: pd.Series, bad: np.ndarray, name: str, why: str) -> None:
     if bad.any():
         lines = first_few(texts.index[bad])
         word = "lines" if bad.sum() > 1 else "line"
-        raise StudyError(f'{name}, {word} {lines}: the time "{texts[bad].iloc[0]}" cannot be read: {why}.')
+        raise StudyError(f'{name}, {word} {lines}: the time "{shown(texts[bad].iloc[0])}" cannot be read: {why}.')
