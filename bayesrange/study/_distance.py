@@ -63,8 +63,7 @@ def read_features(path: Path, file: str, table: str | None, crs: pyproj.CRS) -> 
         except (DataSourceError, DataLayerError, ValueError, shapely.errors.ShapelyError) as error:
             raise StudyError(f"{file}: this cannot be read as a vector file: {error}.") from None
     said = [f"{file}: on reading: {text}" for text in dict.fromkeys(str(remark.message) for remark in remarks)]
-    in_degrees = path.suffix.lower() in (".geojson", ".json") and not _names_its_system(path)
-    return _carried(found, file, in_degrees, crs), said
+    return _carried(found, path, file, crs), said
 
 
 def _features(source: str, file: str, table: str | None) -> object:
@@ -130,14 +129,17 @@ def _table(names: list[str], file: str, wanted: str | None) -> str:
     return wanted or names[0]
 
 
-def _names_its_system(path: Path) -> bool:
-    try:
-        return "crs" in json.loads(path.read_text(encoding="utf-8-sig"))
-    except (UnicodeDecodeError, json.JSONDecodeError):
+def _should_be_degrees(path: Path) -> bool:
+    """Whether it is GeoJSON without the older "crs" member."""
+    if path.suffix.lower() not in (".geojson", ".json"):
         return False
+    try:
+        return "crs" not in json.loads(path.read_text(encoding="utf-8-sig"))
+    except (UnicodeDecodeError, json.JSONDecodeError):
+        return True
 
 
-def _carried(found: object, file: str, in_degrees: bool, crs: pyproj.CRS) -> NDArray[np.object_]:
+def _carried(found: object, path: Path, file: str, crs: pyproj.CRS) -> NDArray[np.object_]:
     if not isinstance(found, geopandas.GeoDataFrame):
         raise StudyError(f"{file}: the features have no places; expected points, lines or polygons.")
     shapes = found.geometry[~(found.geometry.isna() | found.geometry.is_empty)].force_2d()
@@ -145,7 +147,7 @@ def _carried(found: object, file: str, in_degrees: bool, crs: pyproj.CRS) -> NDA
         raise StudyError(f"{file}: there is no feature in it; expected points, lines or polygons.")
     if shapes.crs is None:
         raise StudyError(f"{file}: the file does not say its reference system; save it with one.")
-    if in_degrees and np.abs(shapes.total_bounds).max() > 180:
+    if np.abs(shapes.total_bounds).max() > 180 and _should_be_degrees(path):
         raise StudyError(
             f"{file}: the coordinates look metric, but GeoJSON is in longitude and latitude unless it has a "
             '"crs" member; save it in EPSG:4326, or as a GeoPackage.'
@@ -174,6 +176,7 @@ def _nearest_m(shapes: NDArray, x: Float[NDArray, " n"], y: Float[NDArray, " n"]
     found = np.full(len(places), np.inf)
     found[which[0]] = distance
     polygons = singles[dims == 2]
-    if polygons.size:
-        found[np.unique(shapely.STRtree(polygons).query(places, predicate="intersects")[0])] = 0.0
+    place, polygon = shapely.STRtree(polygons).query(places)  # whose boxes overlap
+    shapely.prepare(polygons)
+    found[place[shapely.intersects(polygons[polygon], places[place])]] = 0.0
     return found

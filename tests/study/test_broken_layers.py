@@ -9,6 +9,8 @@ import geopandas
 import numpy as np
 import pytest
 import shapely
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
 from bayesrange.study import StudyError, read_study
 
@@ -253,3 +255,42 @@ def test_a_cap_below_every_distance_leaves_nothing_to_learn(road):
     folder = road("roads.gpkg", cap_m=5)
     lines(folder, "roads.gpkg", shapes=[shapely.Point(folder.west - 5000, folder.south)])
     refused(folder, "[layers.road] roads.gpkg: every cell inside the area has the value 5, so nothing can be learnt")
+
+
+ANY_SECTION = st.fixed_dictionaries(
+    {},
+    optional={
+        "file": st.sampled_from(["worms.tif", "cover.tif", "none.tif", "roads.gpkg"]),
+        "distance": st.sampled_from(["roads.gpkg", "none.gpkg", "worms.tif"]),
+        "table": st.sampled_from(["roads", "tracks"]),
+        "cap_m": st.floats(-1, 1e4),
+        "band": st.integers(0, 2),
+        "classes": st.dictionaries(
+            st.sampled_from(["1", "2", "01", "x"]), st.sampled_from(["a", "b", "A "]), max_size=3
+        ),
+        "reference": st.sampled_from(["a", "b", "c"]),
+        "fill": st.just("nearest"),
+        "fill_within_m": st.floats(0, 1e4),
+        "no_go": st.booleans(),
+    },
+)
+
+
+@given(section=ANY_SECTION)
+@settings(max_examples=60, deadline=None, suppress_health_check=[HealthCheck.function_scoped_fixture])
+def test_any_section_is_read_whole_or_refused_in_a_sentence(folder, section):
+    lines(folder, "roads.gpkg", layer="roads")
+    cover = np.repeat([[1, 2]], 40, axis=0).repeat(20, axis=1).astype("uint8")
+    cover[3, 4] = 0
+    folder.raster("cover.tif", cover, 100.0, nodata=0)
+    folder.toml["layers"] = {"any": section}
+    folder.toml["model"]["layers"] = [] if section.get("no_go") else ["any"]
+    try:
+        study = folder.read()
+    except StudyError as error:
+        assert "\n" not in str(error) and str(error)[-1] in ".?"
+        return
+    assert all(np.isfinite(study.layers[name].values[study.grid.inside]).all() for name in study.model_layers)
+    assert len(study.model_layers) == (
+        0 if section.get("no_go") else max(len(set(section.get("classes", {}).values())) - 1, 1)
+    )
