@@ -6,6 +6,7 @@ from typing import Any
 
 from rich.console import Console
 from rich.markup import escape
+from rich.padding import Padding
 from rich.progress import BarColumn, Progress, TaskID, TextColumn
 from rich.table import Table
 
@@ -151,7 +152,7 @@ def number(value: float) -> str:
 
 
 def show_cards(name: str | None, study: Path | None) -> None:
-    """All cards in a table, or one in full.
+    """All cards in short, or one in full.
 
     Raises:
         StudyError: no such card.
@@ -161,10 +162,12 @@ def show_cards(name: str | None, study: Path | None) -> None:
     console = Console()
     folder = study.parent if study is not None and study.is_file() else study
     if name is None:
-        table = Table("card", "says", "use when", "not when", title="Model cards", title_justify="left")
         for card in cards(folder):
-            table.add_row(*(escape(text) for text in (card.name, card.says, card.use_when, card.not_when)))
-        console.print(table)
+            own = " (in the study's folder)" if folder is not None and card.file.parent == folder else ""
+            console.print(f"[bold]{escape(card.name)}[/bold]{own}: {escape(card.title)}")
+            for text in (card.says, f"Use when: {card.use_when}", f"Not when: {card.not_when}"):
+                console.print(Padding(escape(text), (0, 0, 0, 4)))
+            console.print()
         console.print(
             "A card copied into the study's folder and edited goes before the package's own of the same name."
         )
