@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from rasterio.warp import Resampling
 
 from bayesrange._errors import StudyError
-from bayesrange.study._classes import absent_class, classes_on_cells, codes_without_name, contrasts
+from bayesrange.study._classes import absent_class, classes_on_cells, contrasts
 from bayesrange.study._distance import distance_to_features
 from bayesrange.study._grid import SUB, Frame, Grid
 from bayesrange.study._missing import fill_nearest, missing_cells
@@ -112,9 +112,7 @@ def _values(
     raster = read_raster(folder / file, file, frame, grid.crs, entry.band)
     if entry.classes is None:
         return onto_cells(raster, frame, grid.crs), None, []
-    cells = classes_on_cells(raster, entry.classes, frame, grid.crs, where)
-    problem = codes_without_name(raster, cells, grid.inside, where)
-    return np.where(cells < 0, np.nan, cells), problem, []
+    return *classes_on_cells(raster, entry.classes, grid, where), []
 
 
 def _nothing_to_learn(values: Float[NDArray, "ny nx"], grid: Grid, entry: LayerSection, where: str) -> str | None:

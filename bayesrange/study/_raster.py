@@ -5,7 +5,7 @@ read like others.
 """
 
 import warnings
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -37,10 +37,6 @@ class Raster:
     transform: Affine
     crs: pyproj.CRS
     file: str
-
-    def with_values(self, values: Float[NDArray, "rows columns"]) -> "Raster":
-        """The same pixels with other values."""
-        return replace(self, values=values)
 
 
 def read_raster(path: Path, file: str, frame: Frame, crs: pyproj.CRS, band: int | None = None) -> Raster:
