@@ -25,6 +25,11 @@ print(run.folder)
 """  # a plain script: no `if __name__ == "__main__"`
 
 
+def listen_to_ctrl_c():
+    """A shell starts background jobs with SIGINT ignored, and children inherit that; a terminal's command listens."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
+
+
 class Interrupted:
     """What became of the run at each stop."""
 
@@ -38,7 +43,7 @@ class Interrupted:
         command = [sys.executable, "-m", "bayesrange", "fit", str(self.study), "--again", "--processes", "1"]
         process = subprocess.Popen(
             command, env=self.environment, cwd=self.elsewhere, start_new_session=True, text=True,
-            stdout=subprocess.DEVNULL, stderr=subprocess.PIPE,
+            stdout=subprocess.DEVNULL, stderr=subprocess.PIPE, preexec_fn=listen_to_ctrl_c,
         )  # fmt: skip
         while not (self.checkpoints / file).exists():
             assert process.poll() is None, process.stderr.read()
