@@ -1,4 +1,4 @@
-"""Relocations from text tables: one row a fix, in the coordinates of the file.
+"""Relocations from tables: one row a fix, in the coordinates of the file.
 
 Rows with blank coordinates are failed fixes: counted and set aside. Anything else that is not well-formed is an
 error, so that no fix is lost by a typing mistake.
@@ -12,8 +12,12 @@ import numpy as np
 import pandas as pd
 
 from bayesrange._errors import StudyError
+from bayesrange.study._crs import parse_crs
 from bayesrange.study._darwin_core import SD_PER_RADIUS, UNCERTAINTY, with_darwin_core
-from bayesrange.study._settings import FixesSection
+from bayesrange.study._deployments import assign_animals, read_deployments
+from bayesrange.study._keep import by_column
+from bayesrange.study._settings import AnimalsSection, FixesSection
+from bayesrange.study._sources import ENDINGS, read_source
 from bayesrange.study._tables import (
     column_or_error,
     counted,
@@ -21,9 +25,8 @@ from bayesrange.study._tables import (
     has_decimal_commas,
     numbers,
     one_name_each,
-    read_table,
 )  # fmt: skip
-from bayesrange.study._times import read_times
+from bayesrange.study._times import clock_minutes, read_times
 
 _PATTERN = set("*?[")
 
@@ -32,15 +35,23 @@ _PATTERN = set("*?[")
 class RawFixes:
     """Fixes before they are placed in the study's reference system."""
 
-    table: pd.DataFrame  # animal, time, x, y [units of the file], group, error_m, file, row
+    table: pd.DataFrame  # as in Study, x, y [units of the file]; minutes (clock), kept_by_column
     counts: dict[str, int]
     warnings: list[str]
     files: dict[str, Path]
     crs: str | None  # reference system of x and y, where one is given
 
 
-def read_fixes(folder: Path, section: FixesSection) -> RawFixes:
-    """All fixes of the study, sorted by animal and time.
+def read_fixes(
+    folder: Path, section: FixesSection, animals: AnimalsSection | None = None, study_crs: str | None = None
+) -> RawFixes:
+    """All fixes of the study, sorted by animal and time; those outside any deployment are set aside.
+
+    Args:
+        folder: where the study file is.
+        section: `[fixes]`.
+        animals: `[animals]`.
+        study_crs: reference system of files that name none.
 
     Raises:
         StudyError: names file, line and column of what is wrong.
@@ -48,8 +59,8 @@ def read_fixes(folder: Path, section: FixesSection) -> RawFixes:
     files = _files(folder, [section.file] if isinstance(section.file, str) else section.file)
     parts, counts, warnings, systems = [], {"rows": 0, "failed": 0}, [], set()
     for name, path in files.items():
-        table = read_table(path, name)
-        own = with_darwin_core(section, table, name)
+        table, crs = read_source(path, name, section)
+        own = with_darwin_core(_own_system(section, crs, name), table, name)
         part, said = _fixes_of(table, own, name)
         systems.add(own.crs)
         counts["rows"] += len(table)
@@ -59,9 +70,17 @@ def read_fixes(folder: Path, section: FixesSection) -> RawFixes:
     fixes = pd.concat(parts, ignore_index=True)
     if fixes.empty:
         raise StudyError(f"{first_few(files)}: there is no fix with coordinates ({counts['rows']} rows).")
+    if len(systems) > 1 and systems <= {None, study_crs}:
+        systems = {None}
     if len(systems) > 1:
         raise StudyError("[fixes] file: the files are in more than one reference system; read them as one study each.")
-    one_name_each(fixes["animal"], "animals", first_few(files))
+    one_name_each(fixes["animal"], "tags" if section.tag else "animals", first_few(files))
+    if animals is not None and animals.file is not None:
+        deployments = read_deployments(folder, animals, section.zone, section.tag is not None)
+        fixes, set_aside, said = assign_animals(fixes, deployments, animals.file)
+        counts |= set_aside
+        warnings += said
+        files[animals.file] = folder / animals.file
     _refuse_repeats(fixes)
     earlier = fixes.groupby("animal")["time"].diff() < pd.Timedelta(0)
     counts["unsorted"] = int(earlier.sum())
@@ -74,7 +93,7 @@ def _files(folder: Path, given: list[str]) -> dict[str, Path]:
     for entry in given:
         path = folder / entry
         if path.is_dir():
-            names = sorted(str(Path(entry) / p.name) for p in path.glob("*.csv"))
+            names = sorted(str(Path(entry) / p.name) for p in path.iterdir() if p.suffix.lower() in ENDINGS)
         elif _PATTERN & set(entry) and not path.is_file():
             names = sorted(glob.glob(entry, root_dir=folder, recursive=True))
         else:
@@ -94,10 +113,12 @@ def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd
             f"{name}, line {table.index[half][0]}: one coordinate is blank; give both, or blank both for a failed fix."
         )
     table = table[(x != "").to_numpy()]
-    animal = column_or_error(table, section.animal, name, "[fixes] animal names")
+    key = "animal" if section.tag is None else "tag"
+    animal = column_or_error(table, section.tag or section.animal, name, f"[fixes] {key} names")
     if (animal == "").any():
-        raise StudyError(f"{name}, line {table.index[animal == ''][0]}: the animal is blank; name it.")
-    times, said = read_times(column_or_error(table, str(section.time), name, "[fixes] time names"), section.zone, name)
+        raise StudyError(f"{name}, line {table.index[animal == ''][0]}: the {key} is blank; name it.")
+    texts = _time_texts(table, section, name)
+    times, said = read_times(texts, section.zone, name)
     error, said_of_error = _errors(table, section, name)
     if has_decimal_commas(table[section.x]) or has_decimal_commas(table[section.y]):
         said.append(f"{name}: {section.x} and {section.y} are written with decimal commas and were read so.")
@@ -111,9 +132,32 @@ def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd
             "error_m": error,
             "file": name,
             "row": table.index.to_numpy(dtype=np.int64),
+            "minutes": clock_minutes(texts, times, section.zone),
+            "kept_by_column": by_column(table, section.keep, name),
         }
     ).astype({"animal": "str", "group": "str", "file": "str"})
     return part, said + said_of_error
+
+
+def _time_texts(table: pd.DataFrame, section: FixesSection, name: str) -> pd.Series:
+    """Times as written; a day and a clock in two columns are put together."""
+    if isinstance(section.time, str):
+        return column_or_error(table, section.time, name, "[fixes] time names")
+    day, clock = (column_or_error(table, column, name, "[fixes] time names") for column in section.time)
+    return day.str.cat(clock, sep="T")
+
+
+def _own_system(section: FixesSection, crs: str | None, name: str) -> FixesSection:
+    """The section with the system that the file itself declares.
+
+    Raises:
+        StudyError: the study file says another.
+    """
+    if crs is None:
+        return section
+    if section.crs is not None and parse_crs(section.crs, "[fixes] crs") != parse_crs(crs, name):
+        raise StudyError(f"[fixes] crs: it is {section.crs}, but {name} says of itself {crs}; take crs out.")
+    return section.model_copy(update={"crs": section.crs or crs})
 
 
 def _groups(table: pd.DataFrame, section: FixesSection, name: str) -> np.ndarray:

@@ -6,13 +6,24 @@ import numpy as np
 import pandas as pd
 
 from bayesrange._errors import StudyError
+from bayesrange.study._moments import bounds
+from bayesrange.study._periods import Span
 from bayesrange.study._tables import column_or_error, counted, first_few, numbers, one_name_each, read_table
 
 _OWN = ("group", "x", "y", "animals", "from", "until")
 
 
-def read_groups(path: Path, name: str, covariates: list[str]) -> tuple[pd.DataFrame, list[str]]:
+def read_groups(
+    path: Path, name: str, covariates: list[str], span: Span, zone: str | None
+) -> tuple[pd.DataFrame, list[str]]:
     """Groups in the order of the file, coordinates as written there, and what has to be said.
+
+    Args:
+        path: where the file is.
+        name: what the user calls it.
+        covariates: columns that the model uses.
+        span: time that is fitted; a group marks through all of it, or is not there at all and left out.
+        zone: of the study's clock.
 
     Returns:
         Columns group, x, y [as written; NaN = to be estimated], animals, then every further column: numbers where
@@ -31,9 +42,11 @@ def read_groups(path: Path, name: str, covariates: list[str]) -> tuple[pd.DataFr
     if again.any():
         raise StudyError(f'{name}, line {table.index[again][0]}: the group "{group[again].iloc[0]}" stands twice.')
     one_name_each(group, "groups", name)
-    for column in ("from", "until"):
-        if column in table.columns and (table[column] != "").any():
-            raise StudyError(f'{name}, column "{column}": groups that come or go are not built yet; leave it blank.')
+    there = _there(table, name, span, zone)
+    absent = group[~there]
+    table, group = table[there], group[there]
+    if table.empty:
+        raise StudyError(f"{name}: no group is there in the time that is fitted; check from and until.")
     x, y = (numbers(column_or_error(table, c, name, "a groups table needs"), name, blank=np.nan) for c in ("x", "y"))
     half = np.isnan(x) != np.isnan(y)
     if half.any():
@@ -48,7 +61,27 @@ def read_groups(path: Path, name: str, covariates: list[str]) -> tuple[pd.DataFr
     for column in covariates:
         if column not in groups.columns or column in _OWN:
             column_or_error(table.drop(columns=[*_OWN], errors="ignore"), column, name, "[model] covariates names")
+    if len(absent):
+        said.append(f"{name}: not there in the time that is fitted, and left out: {first_few(absent)}.")
     return groups, said
+
+
+def _there(table: pd.DataFrame, name: str, span: Span, zone: str | None) -> np.ndarray:
+    """Which groups mark through the whole time that is fitted, by their columns from and until."""
+    blank = pd.Series("", index=table.index)
+    start = bounds(table.get("from", blank), zone, name, end=False)
+    end = bounds(table.get("until", blank), zone, name, end=True)
+    back = (end <= start).to_numpy()
+    if back.any():
+        raise StudyError(f"{name}, line {table.index[back][0]}: until is not after from; mend one of them.")
+    some = ((start < span.end) & (end > span.start)).to_numpy()
+    partly = some & ~((start <= span.start) & (end >= span.end)).to_numpy()
+    if partly.any():
+        raise StudyError(
+            f'{name}, line {table.index[partly][0]}: the group "{table["group"][partly].iloc[0]}" is there only part '
+            "of the time that is fitted, which is not built yet; fit [periods] in which none comes or goes."
+        )
+    return some
 
 
 def groups_of_fixes(fixes: pd.DataFrame) -> tuple[pd.DataFrame, list[str]]:

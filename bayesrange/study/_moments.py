@@ -57,8 +57,7 @@ def bounds(texts: pd.Series, zone: str | None, name: str, end: bool) -> pd.Serie
 
 def _midnight(day: date, zone: str | None, where: str, end: bool) -> pd.Timestamp:
     own = ZoneInfo(known_zone(zone)) if zone else ZoneInfo("UTC")
-    try:
-        start = pd.Timestamp(day) + pd.Timedelta(days=1 if end else 0)
-        return start.tz_localize(own, ambiguous=True, nonexistent="shift_forward").tz_convert("UTC")
-    except (pd.errors.OutOfBoundsDatetime, OverflowError):
-        raise StudyError(f"{where}: {day} is too far off; expected a day between 1700 and 2250.") from None
+    if not OPEN_START.year < day.year < OPEN_END.year:
+        raise StudyError(f"{where}: {day} is too far off; expected a day between 1701 and 2249.")
+    start = pd.Timestamp(day) + pd.Timedelta(days=1 if end else 0)
+    return start.tz_localize(own, ambiguous=True, nonexistent="shift_forward").tz_convert("UTC")

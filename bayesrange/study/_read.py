@@ -4,7 +4,7 @@ Nothing is written. Easting and northing are in metres of the study's reference 
 """
 
 import hashlib
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -21,7 +21,9 @@ from bayesrange.study._crs import carry, crs_text, look_like_degrees, metric_crs
 from bayesrange.study._fixes import RawFixes, read_fixes
 from bayesrange.study._grid import SUB, Frame, Grid, area_sub_cells, build_grid, frame_of, without_scraps
 from bayesrange.study._groups import groups_of_fixes, match_groups, read_groups
+from bayesrange.study._keep import keep_fixes
 from bayesrange.study._layers import Layer, no_go_sub_cells, read_layer
+from bayesrange.study._periods import Span, for_period, in_period
 from bayesrange.study._places import Ground, check_fixes, check_homes
 from bayesrange.study._settings import StudySettings
 from bayesrange.study._settings_file import locate_study, read_settings
@@ -44,6 +46,7 @@ class Study:
         counts: what was read and set aside.
         warnings: sentences for the user.
         hashes: SHA-256 of every file read, by its name relative to the study.
+        period: which of the study's periods was read, if it has some.
     """
 
     path: Path
@@ -57,6 +60,7 @@ class Study:
     counts: dict[str, int]
     warnings: list[str]
     hashes: dict[str, str]
+    period: str | None = None
 
     @property
     def model_layers(self) -> tuple[str, ...]:
@@ -65,20 +69,26 @@ class Study:
         return tuple(name for listed in wanted for name, own in self.layers.items() if own.section == listed)
 
 
-def read_study(path: str | Path) -> Study:
+def read_study(path: str | Path, period: str | None = None) -> Study:
     """Read the study file (or the folder with study.toml) and all files it names.
+
+    Args:
+        path: the file or folder.
+        period: which of the study's periods is meant, where it has some.
 
     Raises:
         StudyError: one sentence on what is wrong, where, and how to mend it.
     """
     path = locate_study(path)
     settings, folder = read_settings(path), path.parent
-    raw = read_fixes(folder, settings.fixes)
+    settings, span = for_period(settings, period, path.name)
+    raw = read_fixes(folder, settings.fixes, settings.animals, settings.study.crs)
     crs, fixes_crs, said_of_crs = _reference_systems(settings, raw)
     area = read_area(folder / settings.study.area, settings.study.area, crs)
     said_of_crs += scale_warnings(crs, area.representative_point().x, area.representative_point().y)
-    fixes = _placed(raw.table, fixes_crs, crs)
-    groups, said_of_groups = _groups(settings, folder, fixes, fixes_crs, crs)
+    fixes, raw = _used(_placed(raw.table, fixes_crs, crs), raw, settings, span, period, crs)
+    span = span or Span(fixes["time"].min(), fixes["time"].max())
+    groups, said_of_groups = _groups(settings, folder, fixes, fixes_crs, crs, span)
 
     cell_m, said_of_cells = _cell(settings, fixes, area)
     frame = frame_of(area, cell_m)
@@ -97,7 +107,7 @@ def read_study(path: str | Path) -> Study:
     warnings += check_resolution(fixes, grid)
     warnings += said_of_layers
     hashes = _hashes(path, settings, raw.files)
-    return Study(path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes)
+    return Study(path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes, period)
 
 
 def _reference_systems(settings: StudySettings, raw: RawFixes) -> tuple[pyproj.CRS, pyproj.CRS, list[str]]:
@@ -141,15 +151,31 @@ def _placed(table: pd.DataFrame, source: pyproj.CRS, target: pyproj.CRS) -> pd.D
     return table.assign(x=x, y=y)
 
 
+def _used(
+    fixes: pd.DataFrame, raw: RawFixes, settings: StudySettings, span: Span | None, period: str | None, crs: pyproj.CRS
+) -> tuple[pd.DataFrame, RawFixes]:
+    """Fixes of the period that [fixes.keep] leaves; what is set aside is counted and said."""
+    counts, warnings = dict(raw.counts), list(raw.warnings)
+    if span is not None:
+        inside, said = in_period(fixes, span, str(period))
+        counts["outside_period"] = int((~inside).sum())
+        warnings.append(said)
+        fixes, raw = fixes[inside], replace(raw, table=raw.table[inside])
+    left, not_kept, said_of_keep = keep_fixes(fixes, settings.fixes.keep, crs)
+    table = raw.table[left].reset_index(drop=True)
+    fixes = fixes[left].reset_index(drop=True).drop(columns=["minutes", "kept_by_column"])
+    return fixes, replace(raw, table=table, counts=counts | not_kept, warnings=warnings + said_of_keep)
+
+
 def _groups(
-    settings: StudySettings, folder: Path, fixes: pd.DataFrame, fixes_crs: pyproj.CRS, crs: pyproj.CRS
+    settings: StudySettings, folder: Path, fixes: pd.DataFrame, fixes_crs: pyproj.CRS, crs: pyproj.CRS, span: Span
 ) -> tuple[pd.DataFrame, list[str]]:
     """Groups in the study's reference system, matched to the fixes."""
     if settings.groups is None:
         groups, said = groups_of_fixes(fixes)
         return groups, said + match_groups(fixes, groups, "[fixes] group")
     name = settings.groups.file
-    groups, said = read_groups(folder / name, name, settings.model.covariates)
+    groups, said = read_groups(folder / name, name, settings.model.covariates, span, settings.fixes.zone)
     given = groups["x"].notna().to_numpy()
     x, y = groups["x"].to_numpy(dtype=float)[given], groups["y"].to_numpy(dtype=float)[given]
     source = crs if settings.study.crs else fixes_crs

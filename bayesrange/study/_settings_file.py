@@ -14,6 +14,7 @@ from pydantic import BaseModel, ValidationError
 
 from bayesrange._errors import StudyError
 from bayesrange.study._layer_keys import layer_problems
+from bayesrange.study._period_keys import animal_problems, period_problems
 from bayesrange.study._settings import LayerSection, PeriodSection, Section, StudySettings
 
 _NAMED_SECTIONS = {"layers": LayerSection, "periods": PeriodSection}
@@ -165,6 +166,8 @@ def _contradictions(s: StudySettings) -> Iterator[str]:
     """Values that are each well-formed but do not go together."""
     for name, layer in s.layers.items():
         yield from layer_problems(name, layer)
+    yield from period_problems(s)
+    yield from animal_problems(s)
     for name in s.model.layers:
         if name not in s.layers:
             close = nearest(name, list(s.layers))
@@ -182,23 +185,12 @@ def _contradictions(s: StudySettings) -> Iterator[str]:
 
 def _not_built(s: StudySettings) -> Iterator[str]:
     """Keys of the design whose given value this version cannot honour."""
-    fixes, model = s.fixes, s.model
+    model = s.model
     given = {
         '[study] sensitive = "high"': s.study.sensitive == "high",
-        "[fixes] tag": fixes.tag is not None,
-        "[fixes] time as a list of columns": isinstance(fixes.time, list),
-        "[fixes.keep]": fixes.keep is not None and bool(fixes.keep.model_fields_set),
-        "[animals] file": s.animals is not None and s.animals.file is not None,
-        "[animals] settle_in_days": s.animals is not None and s.animals.settle_in_days != 0,
-        "[periods]": bool(s.periods),
         '[model] pooling = "individual"': model.pooling == "individual",
         '[model] memory_start = "learned"': model.memory_start == "learned",
     }
     for name in ("learning_days", "interval_h", "encoding_range_m", "shortest_step_m", "smallest_effect"):
         given[f"[model] {name}"] = getattr(model, name) is not None
-    for name, layer in s.layers.items():
-        given[f"[layers.{name}] files (one a period)"] = layer.files is not None
-    for file in [fixes.file] if isinstance(fixes.file, str) else fixes.file:
-        for ending in (".parquet", ".gpkg"):
-            given[f"[fixes] file: {ending}"] = given.get(f"[fixes] file: {ending}", False) or file.endswith(ending)
     return (what for what, is_given in given.items() if is_given)

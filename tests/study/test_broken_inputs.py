@@ -77,13 +77,6 @@ def test_a_wrong_setting(folder, case):
 
 LATER = {
     "sensitive": ("study", {"sensitive": "high"}, '[study] sensitive = "high"'),
-    "tag": ("fixes", {"tag": "tag"}, "[fixes] tag"),
-    "two columns": ("fixes", {"time": ["date", "clock"]}, "[fixes] time as a list of columns"),
-    "keep": ("fixes", {"keep": {"sun": "night"}}, "[fixes.keep]"),
-    "parquet": ("fixes", {"file": "fixes.parquet"}, "[fixes] file: .parquet"),
-    "animals": ("animals", {"file": "animals.csv"}, "[animals] file"),
-    "settle in": ("animals", {"settle_in_days": 3}, "[animals] settle_in_days"),
-    "by period": ("layers", {"worms": {"files": {"before": "a.tif"}}}, "[layers.worms] files"),
     "individual": ("model", {"pooling": "individual"}, '[model] pooling = "individual"'),
     "memory": ("model", {"memory_start": "learned"}, '[model] memory_start = "learned"'),
     "interval": ("model", {"interval_h": 1.0}, "[model] interval_h"),
@@ -98,13 +91,6 @@ def test_a_key_of_a_later_version_is_known_and_refused(folder, case):
     folder.toml.setdefault(section, {}).update(given)
     with pytest.raises(StudyError, match=re.escape(match) + ".* not built yet"):
         folder.read()
-
-
-def test_periods_are_known_and_refused(folder):
-    path = folder.write()
-    path.write_text(path.read_text() + "\n[periods]\nbefore = { from = 2031-03-01, until = 2031-06-10 }\n")
-    with pytest.raises(StudyError, match=r"\[periods\] is not built yet"):
-        read_study(path)
 
 
 def test_all_mistakes_of_a_file_stand_in_one_sentence(folder):
@@ -256,8 +242,10 @@ def test_a_group_that_nothing_is_known_of(folder):
 
 
 def test_groups_that_come_and_go(folder):
-    folder.groups["from"] = ["", "2031-04-01", ""]
-    refused(folder, 'groups.csv, column "from": groups that come or go are not built yet')
+    folder.groups["from"] = ["", "2031-03-05", ""]
+    refused(folder, 'groups.csv, line 3: the group "south" is there only part of the time that is fitted, which is not')
+    folder.groups["until"] = ["", "2031-03-01", ""]
+    refused(folder, "groups.csv, line 3: until is not after from")
 
 
 def test_a_blank_covariate(folder):
