@@ -11,9 +11,10 @@ from rich.progress import BarColumn, Progress, TaskID, TextColumn
 from rich.table import Table
 
 from bayesrange.inference import Run
+from bayesrange.study import Study
 
 
-def fit_and_report(study: Path, out: Path | None, again: bool, processes: int | None) -> Run:
+def fit_and_report(study: Path | Study, out: Path | None, again: bool, processes: int | None) -> Run:
     """Fit a study, write its tables, maps and page, and print how it went.
 
     Raises:

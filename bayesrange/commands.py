@@ -54,11 +54,16 @@ def fit(
     out: Out = None,
     again: Annotated[bool, typer.Option("--again", help="Make a new run folder where a finished run stands.")] = False,
     processes: Processes = None,
+    period: Annotated[
+        str | None, typer.Option("--period", metavar="NAME", help="Which of the study's periods to fit.")
+    ] = None,
 ) -> None:
     """Sample the posterior and write the run folder with tables, maps and report; the same command resumes."""
     from bayesrange import _screen
+    from bayesrange.study import read_study
 
-    run = _screen.fit_and_report(study, out=out, again=again, processes=processes)
+    whole = study if period is None else read_study(study, period)
+    run = _screen.fit_and_report(whole, out=out, again=again, processes=processes)
     _finish(run.converged)
 
 

@@ -59,8 +59,8 @@ def fit(
     run's folder for tables of ranges, maps and the page (the command `bayesrange fit` does).
 
     Args:
-        study: study file, its folder, or a study that was read.
-        out: run folder; default `runs/<card>` beside the study.
+        study: study file, its folder, or a study that was read (one period of it, where there are some).
+        out: run folder; default `runs/<card>`, or `runs/<card>-<period>` of a study with periods, beside the study.
         again: make a new folder where a finished run stands.
         tell: called with progress messages (dictionaries with a `stage`).
         processes: chains that run at the same time; default one a processor.
@@ -78,7 +78,8 @@ def fit(
     study = study if isinstance(study, Study) else read_study(Path(study))
     prepared = prepare(study)
     out = Path(out) if out else None
-    folder = choose_folder(study.path.parent, prepared.card.name, out, again, prepared.task.fingerprint)
+    name = prepared.card.name if study.period is None else f"{prepared.card.name}-{study.period}"
+    folder = choose_folder(study.path.parent, name, out, again, prepared.task.fingerprint)
     checkpoints = folder / "checkpoints"
     _refuse_changes(checkpoints, prepared)
     make_folder(checkpoints)
@@ -102,7 +103,7 @@ def _sample(
     task = prepared.task
     if not (checkpoints / "inputs.json").exists():
         save_task(checkpoints, task)
-        inputs = {"fingerprint": task.fingerprint, "inputs": _decisive(prepared.inputs)}
+        inputs = {"fingerprint": task.fingerprint, "inputs": _decisive(prepared.inputs, prepared.study.period)}
         write_json(checkpoints / "inputs.json", inputs)
     log = checkpoints / "workers.log"
     at_once = min(processes or cores(), task.chains)
@@ -133,7 +134,7 @@ def prepare(study: Study) -> Prepared:
     own_card = card.file.parent == study.path.parent
     card_name = card.file.name if own_card else f"models/{card.file.name}"  # a study file may be called like a card
     inputs[card_name] = hashlib.sha256(card.file.read_bytes()).hexdigest()
-    fingerprint = hashlib.sha256(json.dumps(_decisive(inputs), sort_keys=True).encode()).hexdigest()
+    fingerprint = hashlib.sha256(json.dumps(_decisive(inputs, study.period), sort_keys=True).encode()).hexdigest()
     task = Task(
         spec, data, sampling.chains, sampling.warmup, sampling.draws, sampling.seed, sampling.target_accept, fingerprint
     )
@@ -146,10 +147,11 @@ def prepare(study: Study) -> Prepared:
     return Prepared(study, card, spec, scales, weights, task, inputs, warnings)
 
 
-def _decisive(inputs: dict[str, str]) -> dict[str, str]:
+def _decisive(inputs: dict[str, str], period: str | None) -> dict[str, str]:
     """Everything that a run is only gone on with unchanged: input files and the versions that make the draws."""
     versions = {"bayesrange": bayesrange.__version__, **{name: version(name) for name in ("jax", "numpyro")}}
-    return inputs | {f"the version of {name}": number for name, number in versions.items()}
+    chosen = {} if period is None else {"the period": period}
+    return inputs | chosen | {f"the version of {name}": number for name, number in versions.items()}
 
 
 def _refuse_changes(checkpoints: Path, prepared: Prepared) -> None:
@@ -164,7 +166,7 @@ def _refuse_changes(checkpoints: Path, prepared: Prepared) -> None:
     before = json.loads(file.read_text(encoding="utf-8"))
     if before["fingerprint"] == prepared.task.fingerprint:
         return
-    old, new = before["inputs"], _decisive(prepared.inputs)
+    old, new = before["inputs"], _decisive(prepared.inputs, prepared.study.period)
     changed = sorted(name for name in old.keys() | new.keys() if old.get(name) != new.get(name))
     raise StudyError(
         f"{checkpoints.parent}: an unfinished run is here, and since it began {', '.join(changed)} changed; undo the "
@@ -261,5 +263,5 @@ def _describe(prepared: Prepared, diagnostics: Any, times: dict[str, float], wor
             "autocorrelation": settings.model.autocorrelation,
         },
         "diagnostics": diagnostics.as_json(), "converged": diagnostics.converged, "warnings": prepared.warnings,
-        "period": None, "sensitive": settings.study.sensitive,
+        "period": study.period, "sensitive": settings.study.sensitive,
     }  # fmt: skip
