@@ -191,6 +191,9 @@ def _scales(scales: dict[str, Any]) -> list[tuple[str, str]]:
     shown = [(name, f"{float(value):,.4g} {unit}") for name, value, unit in rows if value is not None]
     for name, layer in (scales.get("layers") or {}).items():
         unit = layer.get("unit") or ""
+        if layer.get("reference"):
+            shown.append((f"layer {name}", f"1 in the class, 0 in {layer['reference']}"))
+            continue
         shown.append(
             (f"layer {name}", f"mean {layer['mean']:,.4g}, sd {layer['sd']:,.4g} {unit}".strip().replace(" -", " −"))
         )
