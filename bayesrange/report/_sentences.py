@@ -39,9 +39,9 @@ NOTES = {
         "or poor ground that is not among the layers does the same."
     ),
     "resource": (
-        "Per sd of the layer over the habitable part of this area, or for a class against the reference class. It is no "
-        "step selection coefficient and not comparable with one; between studies only the rows marked “raw”, and those "
-        "of classes, compare."
+        "Per sd of the layer over the habitable part of this area, or for a class against the reference class. It is "
+        "no step selection coefficient and not comparable with one; between studies only the rows marked “raw”, and "
+        "those of classes, compare."
     ),
 }
 
