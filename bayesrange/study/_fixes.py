@@ -40,6 +40,7 @@ class RawFixes:
     warnings: list[str]
     files: dict[str, Path]
     crs: str | None  # reference system of x and y, where one is given
+    deployments: pd.DataFrame | None = None
 
 
 def read_fixes(
@@ -75,6 +76,7 @@ def read_fixes(
     if len(systems) > 1:
         raise StudyError("[fixes] file: the files are in more than one reference system; read them as one study each.")
     one_name_each(fixes["animal"], "tags" if section.tag else "animals", first_few(files))
+    deployments = None
     if animals is not None and animals.file is not None:
         deployments = read_deployments(folder, animals, section.zone, section.tag is not None)
         fixes, set_aside, said = assign_animals(fixes, deployments, animals.file)
@@ -85,7 +87,7 @@ def read_fixes(
     earlier = fixes.groupby("animal")["time"].diff() < pd.Timedelta(0)
     counts["unsorted"] = int(earlier.sum())
     fixes = fixes.sort_values(["animal", "time"], kind="stable", ignore_index=True)
-    return RawFixes(fixes, counts, warnings, files, systems.pop())
+    return RawFixes(fixes, counts, warnings, files, systems.pop(), deployments)
 
 
 def _files(folder: Path, given: list[str]) -> dict[str, Path]:

@@ -47,6 +47,7 @@ class Study:
         warnings: sentences for the user.
         hashes: SHA-256 of every file read, by its name relative to the study.
         period: which of the study's periods was read, if it has some.
+        deployments: animal, tag, from, until (UTC), then further columns such as fate; None without them.
     """
 
     path: Path
@@ -61,6 +62,7 @@ class Study:
     warnings: list[str]
     hashes: dict[str, str]
     period: str | None = None
+    deployments: pd.DataFrame | None = None
 
     @property
     def model_layers(self) -> tuple[str, ...]:
@@ -107,7 +109,9 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     warnings += check_resolution(fixes, grid)
     warnings += said_of_layers
     hashes = _hashes(path, settings, raw.files)
-    return Study(path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes, period)
+    return Study(
+        path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes, period, raw.deployments
+    )
 
 
 def _reference_systems(settings: StudySettings, raw: RawFixes) -> tuple[pyproj.CRS, pyproj.CRS, list[str]]:

@@ -41,6 +41,7 @@ def test_a_tag_is_used_again_and_what_is_between_is_set_aside(folder):
     study = folder.read()
     assert study.fixes["animal"].value_counts().to_dict() == {"N1": 18, "N2": 36, "S1": 60, "E1": 60}
     assert study.counts["outside_deployment"] == 6
+    assert study.deployments[["animal", "tag", "fate"]].iloc[0].tolist() == ["N1", "1", "died"]
     assert any("animals.csv: 6 fixes outside any deployment set aside" in w for w in study.warnings)
 
 
