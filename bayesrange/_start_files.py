@@ -10,7 +10,7 @@ STUDY = """\
 [study]
 name   = "My study"
 crs    = "EPSG:32633"          # a metric reference system; all computing happens in it
-cell_m = 100                   # edge of a grid cell in metres: at least 10, better 20 cells across a group's range
+cell_m = 100                   # edge of a cell in metres, at least 10, better 20 across a group's range; or "auto"
 area   = "area.geojson"        # polygon of the study area; animals are taken never to leave it
 
 [fixes]
