@@ -25,9 +25,8 @@ print(run.folder)
 """  # a plain script: no `if __name__ == "__main__"`
 
 
-def listen_to_ctrl_c():
-    """A shell starts background jobs with SIGINT ignored, and children inherit that; a terminal's command listens."""
-    signal.signal(signal.SIGINT, signal.SIG_DFL)
+LISTEN = "import os, signal, sys; signal.signal(signal.SIGINT, signal.SIG_DFL); os.execv(sys.executable, sys.argv[1:])"
+"""A shell starts background jobs with SIGINT ignored, and children inherit that; a terminal's command listens."""
 
 
 class Interrupted:
@@ -42,8 +41,8 @@ class Interrupted:
         """Start the command, send its whole process group a signal once a file is there; status and standard error."""
         command = [sys.executable, "-m", "bayesrange", "fit", str(self.study), "--again", "--processes", "1"]
         process = subprocess.Popen(
-            command, env=self.environment, cwd=self.elsewhere, start_new_session=True, text=True,
-            stdout=subprocess.DEVNULL, stderr=subprocess.PIPE, preexec_fn=listen_to_ctrl_c,
+            [sys.executable, "-c", LISTEN, *command], env=self.environment, cwd=self.elsewhere, text=True,
+            start_new_session=True, stdout=subprocess.DEVNULL, stderr=subprocess.PIPE,
         )  # fmt: skip
         while not (self.checkpoints / file).exists():
             assert process.poll() is None, process.stderr.read()
