@@ -4,6 +4,7 @@ from bayesrange._errors import StudyError as StudyError
 from bayesrange.study._autocorrelation import Weights as Weights
 from bayesrange.study._autocorrelation import autocorrelation_weights as autocorrelation_weights
 from bayesrange.study._autocorrelation import interval_weights as interval_weights
+from bayesrange.study._daylight import solar_clock as solar_clock
 from bayesrange.study._grid import Grid as Grid
 from bayesrange.study._layers import Layer as Layer
 from bayesrange.study._ornstein import CrossingTime as CrossingTime

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from bayesrange._errors import StudyError
 from bayesrange.study._area import read_area
+from bayesrange.study._card_kind import card_kind
 from bayesrange.study._cell_size import check_resolution, check_size, choose_cell
 from bayesrange.study._crs import carry, crs_text, look_like_degrees, metric_crs, parse_crs, scale_warnings, utm_for
 from bayesrange.study._fixes import RawFixes, read_fixes
@@ -25,6 +26,7 @@ from bayesrange.study._keep import keep_fixes
 from bayesrange.study._layers import Layer, no_go_sub_cells, read_layer
 from bayesrange.study._periods import Span, for_period, in_period
 from bayesrange.study._places import Ground, check_fixes, check_homes
+from bayesrange.study._rounding import rounding
 from bayesrange.study._settings import StudySettings
 from bayesrange.study._settings_file import locate_study, read_settings
 
@@ -48,6 +50,7 @@ class Study:
         hashes: SHA-256 of every file read, by its name relative to the study.
         period: which of the study's periods was read, if it has some.
         deployments: animal, tag, from, until (UTC), then further columns such as fate; None without them.
+        rounding_m: step to which the fixes' coordinates were written [m]; 0 if not known.
     """
 
     path: Path
@@ -63,6 +66,7 @@ class Study:
     hashes: dict[str, str]
     period: str | None = None
     deployments: pd.DataFrame | None = None
+    rounding_m: float = 0.0
 
     @property
     def model_layers(self) -> tuple[str, ...]:
@@ -106,12 +110,14 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     counts = raw.counts | {"fixes": len(fixes), "animals": fixes["animal"].nunique(), "groups": len(groups)}
     counts |= {"outside_within_error": outside} | ({"cells_filled": filled} if filled else {})
     warnings = said_of_crs + raw.warnings + said_of_groups + said_of_cells + said_of_scraps
-    warnings += check_resolution(fixes, grid)
+    if card_kind(settings.model.card, folder) == "range":
+        warnings += check_resolution(fixes, grid)
     warnings += said_of_layers
     hashes = _hashes(path, settings, raw.files)
     return Study(
-        path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes, period, raw.deployments
-    )
+        path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes, period, raw.deployments,
+        rounding(*raw.table[["x", "y"]].to_numpy(dtype=float).T, fixes_crs.is_geographic),
+    )  # fmt: skip
 
 
 def _reference_systems(settings: StudySettings, raw: RawFixes) -> tuple[pyproj.CRS, pyproj.CRS, list[str]]:

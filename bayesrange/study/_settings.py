@@ -109,15 +109,27 @@ class ModelSection(Section):
 
     card: Name = Field(description='the name of a model card such as "avoidance-resources"')
     layers: list[Name] = Field([], description='a list of layer names such as ["earthworms"]')
-    pooling: Literal["shared", "hierarchical", "individual"] = Field(
-        "shared", description='"shared", "hierarchical" or "individual"'
+    pooling: Literal["shared", "hierarchical", "individual"] | None = Field(
+        None, description='"shared", "hierarchical" or "individual"'
     )
     autocorrelation: Literal["weighted", "ignored"] = Field("weighted", description='"weighted" or "ignored"')
     reading: Literal["bilinear", "cell"] = Field("bilinear", description='"bilinear" or "cell"')
-    covariates: list[Name] = Field([], description='a list of columns of the groups table such as ["sex_ratio"]')
+    covariates: list[Name] = Field([], description='a list of columns of the groups or animals table such as ["sex"]')
     memory_start: Literal["naive", "learned"] = Field("naive", description='"naive" or "learned"')
     learning_days: float | None = Field(None, gt=0, description="a number of days above 0")
     interval_h: float | None = Field(None, gt=0, description="a number of hours above 0")
+    interval_tolerance: Annotated[float, Field(gt=0, lt=0.5)] = Field(
+        0.1, description="a share of the interval above 0 and below 0.5"
+    )
+    vary: list[Literal["step_length", "selection"]] = Field(
+        [], description='a list with "step_length" (by the hour), "selection" (by day and night), or both'
+    )
+    nodes: Annotated[int, Field(ge=16, le=4096)] | Literal["auto"] = Field(
+        "auto", description='"auto" or a whole number from 16 to 4096'
+    )
+    travelling_together: Literal["counted_once", "counted_each"] = Field(
+        "counted_once", description='"counted_once" or "counted_each"'
+    )
     encoding_range_m: Metres | Literal["estimate"] | None = Field(None, description=METRES + ', or "estimate"')
     shortest_step_m: Metres | None = Field(None, description=METRES)
     perception_m: Metres | None = Field(None, description=METRES)

@@ -179,8 +179,13 @@ def _contradictions(s: StudySettings) -> Iterator[str]:
         twice = sorted({n for n in names if names.count(n) > 1})
         if twice:
             yield f'[model] {key}: "{twice[0]}" is listed twice; list it once.'
-    if s.model.covariates and s.groups is None:
-        yield "[model] covariates: they are columns of the groups table, and there is no section [groups]; add it."
+    if s.model.covariates and s.groups is None and (s.animals is None or s.animals.file is None):
+        yield (
+            "[model] covariates: they are columns of the groups table, or of the animals table for cards of single "
+            "animals, and there is neither a section [groups] nor [animals]; add it."
+        )
+    if s.model.learning_days is not None and s.model.memory_start != "learned":
+        yield '[model] learning_days: it has no use unless memory_start = "learned"; add that, or take it out.'
 
 
 def _not_built(s: StudySettings) -> Iterator[str]:
@@ -188,9 +193,6 @@ def _not_built(s: StudySettings) -> Iterator[str]:
     model = s.model
     given = {
         '[study] sensitive = "high"': s.study.sensitive == "high",
-        '[model] pooling = "individual"': model.pooling == "individual",
-        '[model] memory_start = "learned"': model.memory_start == "learned",
+        "[model] smallest_effect": model.smallest_effect is not None,
     }
-    for name in ("learning_days", "interval_h", "encoding_range_m", "shortest_step_m", "smallest_effect"):
-        given[f"[model] {name}"] = getattr(model, name) is not None
     return (what for what, is_given in given.items() if is_given)

@@ -32,6 +32,16 @@ def solar_elevation(
     return np.degrees(np.arcsin(np.clip(sine, -1.0, 1.0)))
 
 
+def equation_of_time(time: pd.Series) -> Float[NDArray, " n"]:
+    """Apparent minus mean solar time [min].
+
+    Args:
+        time: moments in UTC.
+    """
+    days = (time - pd.Timestamp("2000-01-01T12:00Z")).dt.total_seconds().to_numpy(dtype=float) / 86400
+    return _sun(days / 36525)[1]
+
+
 def _sun(t: Float[NDArray, " n"]) -> tuple[Float[NDArray, " n"], Float[NDArray, " n"]]:
     """Declination [rad] and equation of time [min], t in Julian centuries since 2000-01-01 12:00."""
     mean_longitude = np.radians((280.46646 + t * (36000.76983 + 0.0003032 * t)) % 360)

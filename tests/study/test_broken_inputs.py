@@ -77,10 +77,6 @@ def test_a_wrong_setting(folder, case):
 
 LATER = {
     "sensitive": ("study", {"sensitive": "high"}, '[study] sensitive = "high"'),
-    "individual": ("model", {"pooling": "individual"}, '[model] pooling = "individual"'),
-    "memory": ("model", {"memory_start": "learned"}, '[model] memory_start = "learned"'),
-    "interval": ("model", {"interval_h": 1.0}, "[model] interval_h"),
-    "encoding": ("model", {"encoding_range_m": "estimate"}, "[model] encoding_range_m"),
     "effect": ("model", {"smallest_effect": {"avoidance": 0.1}}, "[model] smallest_effect"),
 }
 
