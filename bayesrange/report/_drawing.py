@@ -23,7 +23,7 @@ from matplotlib.ticker import MaxNLocator
 from numpy.typing import NDArray
 from shapely.geometry.base import BaseGeometry
 
-from bayesrange.report._read import Contents
+from bayesrange.report._contents import RunContents
 
 # Okabe & Ito (2008), Color Universal Design; without yellow and black, which are lost on white and among text.
 HUES = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9")
@@ -91,14 +91,14 @@ def short(name: str) -> str:
     return name if len(name) <= LONGEST_NAME else name[: LONGEST_NAME - 1] + "…"
 
 
-def extent_km(run: Contents) -> tuple[float, float, float, float]:
+def extent_km(run: RunContents) -> tuple[float, float, float, float]:
     """West, east, south, north of the grid [km]."""
     half = run.cell_m / 2
     west, east, south, north = run.x_m[0] - half, run.x_m[-1] + half, run.y_m[0] - half, run.y_m[-1] + half
     return float(west) / 1e3, float(east) / 1e3, float(south) / 1e3, float(north) / 1e3
 
 
-def map_axes(axes: Axes, run: Contents, northing: bool = True) -> None:
+def map_axes(axes: Axes, run: RunContents, northing: bool = True) -> None:
     """A map's frame: equal scales, easting and northing in km, ground that is not habitable in grey."""
     west, east, south, north = extent_km(run)
     axes.set_aspect("equal")
@@ -120,7 +120,7 @@ def map_axes(axes: Axes, run: Contents, northing: bool = True) -> None:
         axes.set_ylabel("northing [km]")
 
 
-def image(axes: Axes, run: Contents, values: Float[NDArray, "ny nx"] | Float[NDArray, "ny nx 4"], **how: object):
+def image(axes: Axes, run: RunContents, values: Float[NDArray, "ny nx"] | Float[NDArray, "ny nx 4"], **how: object):
     """Draw cell values (row 0 in the south) where they belong."""
     west, east, south, north = extent_km(run)
     return axes.imshow(values, extent=(west, east, south, north), origin="lower", zorder=1, **how)

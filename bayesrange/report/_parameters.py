@@ -4,9 +4,11 @@ from dataclasses import dataclass, field
 from math import isfinite
 from typing import Any
 
+from bayesrange.report._contents import RunContents
 from bayesrange.report._format import Bar, bar, fixed, interval, known_to, number, whole
-from bayesrange.report._read import Contents
-from bayesrange.report._sentences import MEANINGS, NOTES, prior_share, sparse_groups_note, sparse_note
+from bayesrange.report._sentences import RANGE_WORDS, Words, prior_share, sparse_groups_note, sparse_note
+
+READABLE_HOURS = 72.0
 
 
 @dataclass(frozen=True)
@@ -44,37 +46,40 @@ class Row:
     weak_ess: bool
     weak_rhat: bool
     prior_share: float | None
+    days: tuple[str, str] | None = None
     notes: list[str] = field(default_factory=list)
 
 
-def parameter_blocks(run: Contents, gate: Gate) -> list[dict[str, Any]]:
-    """Blocks of rows: shared or population parameters, then a block for each parameter that groups have singly."""
+def parameter_blocks(run: RunContents, gate: Gate, words: Words = RANGE_WORDS) -> list[dict[str, Any]]:
+    """Blocks of rows: shared or population parameters, then a block for each that groups or animals have singly."""
     lead: list[Row] = []
     single: dict[str, list[dict[str, Any]]] = {}
     told: set[str] = set()
     for record in run.parameters.to_dict("records"):
         name = str(record["parameter"])
         base, inner = split_name(name)
-        of_what, group = _of_group(base, inner, run)
-        if group is not None:
+        of_what, one = run.whose(base, inner)
+        if one is not None:
             if not _is_raw(name):
-                single.setdefault(of_what, []).append({**record, "parameter": group})
+                single.setdefault(of_what, []).append({**record, "parameter": one})
             continue
-        row = _row(record, gate, "" if _is_raw(name) else _meaning(name, base))
-        if base in NOTES and base not in told and not _is_raw(name) and not _is_spread(name):
+        row = _row(record, gate, "" if _is_raw(name) else _meaning(name, base, words))
+        if base in words.notes and base not in told and not _is_raw(name) and not _is_spread(name):
             told.add(base)
-            row.notes.append(NOTES[base])
+            row.notes.append(words.notes[base])
         if row.prior_share is not None:
             row.notes.append(sparse_note(name, row.prior_share))
         lead.append(row)
     blocks = [{"title": "Parameters", "meaning": "", "rows": lead, "notes": [], "single": False}] if lead else []
-    return blocks + [_group_block(of_what, records, gate) for of_what, records in single.items()]
+    for of_what, records in single.items():
+        blocks.append(_single_block(of_what, records, gate, words, told))
+    return blocks
 
 
-def raw_left_out(run: Contents) -> bool:
-    """Whether raw rows of single groups stand in the table only."""
+def raw_left_out(run: RunContents) -> bool:
+    """Whether raw rows of single groups or animals stand in the table only."""
     names = run.parameters["parameter"].astype(str)
-    return any(_is_raw(name) and _of_group(*split_name(name), run)[1] is not None for name in names)
+    return any(_is_raw(name) and run.whose(*split_name(name))[1] is not None for name in names)
 
 
 def split_name(name: str) -> tuple[str, str]:
@@ -89,27 +94,24 @@ def split_name(name: str) -> tuple[str, str]:
     return base, rest[: rest.rindex("]")]
 
 
-def _of_group(base: str, inner: str, run: Contents) -> tuple[str, str | None]:
-    """The parameter and the group: `localising[North]` is one group's, `resource[earthworms]` none's.
-
-    A layer's name is looked up, not split at the comma, which may be part of a name.
-    """
-    if not inner or (base == "resource" and inner in run.layers):
-        return base, None
-    for layer in run.layers if base == "resource" else ():
-        if inner.startswith(layer + ", "):
-            return f"{base}[{layer}]", inner.removeprefix(layer + ", ")
-    return base, inner
-
-
-def _group_block(of_what: str, records: list[dict[str, Any]], gate: Gate) -> dict[str, Any]:
-    """All groups' rows of one parameter, drawn on one axis so that groups compare."""
+def _single_block(
+    of_what: str, records: list[dict[str, Any]], gate: Gate, words: Words, told: set[str]
+) -> dict[str, Any]:
+    """All groups' or animals' rows of one parameter, drawn on one axis so that they compare."""
     axis = (min(float(record["lower"]) for record in records), max(float(record["upper"]) for record in records))
     rows = [_row(record, gate, "", axis) for record in records]
-    meaning = _meaning(of_what, of_what.partition("[")[0])
+    base = of_what.partition("[")[0]
+    notes = [] if base in told or base not in words.notes else [words.notes[base]]
+    told.add(base)
     sparse = {row.name: row.prior_share for row in rows if row.prior_share is not None}
-    notes = [sparse_groups_note(sparse)] if sparse else []
-    return {"title": f"{of_what} by group", "meaning": meaning, "rows": rows, "notes": notes, "single": True}
+    notes += [sparse_groups_note(sparse)] if sparse else []
+    return {
+        "title": f"{of_what} by {words.one}",
+        "meaning": _meaning(of_what, base, words),
+        "rows": rows,
+        "notes": notes,
+        "single": True,
+    }
 
 
 def _is_raw(name: str) -> bool:
@@ -147,7 +149,16 @@ def _row(record: dict[str, Any], gate: Gate, meaning: str, axis: tuple[float, fl
         weak_ess=not ess >= gate.least_ess,
         weak_rhat=split,
         prior_share=None if raw or split else prior_share(contraction),
+        days=_in_days(lower, median, upper) if str(record["unit"]) == "h" else None,
     )
+
+
+def _in_days(lower: float, median: float, upper: float) -> tuple[str, str] | None:
+    """Median and interval in days where hours are hard to read: above 72 h."""
+    if not median > READABLE_HOURS:
+        return None
+    known = known_to(lower, median, upper) / 24
+    return f"{number(median / 24, known)} days", f"{interval(lower / 24, upper / 24, known)} days"
 
 
 def _prior(lower: float, upper: float) -> str:
@@ -157,9 +168,9 @@ def _prior(lower: float, upper: float) -> str:
     return f"{number(lower, abs(lower))} to {number(upper, abs(upper))}"
 
 
-def _meaning(name: str, base: str) -> str:
+def _meaning(name: str, base: str, words: Words) -> str:
     if _is_spread(name):
-        return "sd between groups, on the unconstrained scale"
+        return f"sd between {words.one}s, on the unconstrained scale"
     if ":" in name:
         return "coefficient of a covariate, on the unconstrained scale"
-    return MEANINGS.get(base, "")
+    return words.meanings.get(base, "")

@@ -1,6 +1,7 @@
 """The words that stand beside the numbers: what a term is, and what its estimate cannot tell."""
 
 import math
+from dataclasses import dataclass
 
 from bayesrange.report._format import listed
 
@@ -57,6 +58,18 @@ CAUTIONS = (
     "Fitting well is no proof of the mechanism. Compare cards, and look at the posterior predictive checks, before you "
     "lean on it.",
 )
+
+
+@dataclass(frozen=True)
+class Words:
+    """What the parameters of a kind of card are called: whose they are, what each means, what stands beside each."""
+
+    one: str
+    meanings: dict[str, str]
+    notes: dict[str, str]
+
+
+RANGE_WORDS = Words("group", MEANINGS, NOTES)
 
 # Below this contraction the posterior sd is more than half of the prior's.
 SPARSE_BELOW = 0.75
