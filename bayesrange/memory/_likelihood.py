@@ -1,0 +1,224 @@
+r"""Log-likelihood of steps led by memory.
+
+$$ f(z \mid x_t, \mathrm{past}) = k(z) \omega_t(z) / \int k \omega_t, \qquad
+   \log \omega_t = b \cdot h + \kappa_R \rho(R_t) - \kappa_W \rho(W_t) - \eta |z - c|, \quad \rho(M) = M/(M + m_0) $$
+
+The integral is taken over each step's nodes with weights w = k / k_ref, in ratio form: Σ w ω over nodes on habitable
+ground divided by Σ w over all of them. ω = 1 then gives the exact gamma–von Mises likelihood with any nodes. Node
+arithmetic is in single precision, sums over a step in double. Units: km, h. Derivation: docs/mathematics.
+"""
+
+from typing import NamedTuple
+
+import jax
+import jax.numpy as jnp
+from jaxtyping import Array, Bool, Float
+
+from bayesrange.memory._basis import Basis, decay_coefficients, is_fixed, range_coefficients
+from bayesrange.memory._blocks import StepData
+from bayesrange.memory._kernel import log_short_chance, log_step_density
+
+NOWHERE = -1e30
+"""Log weight of a node that is not on habitable ground: finite, so that no gradient is NaN."""
+
+
+class StepParameters(NamedTuple):
+    """Parameters of every animal (a pytree of arrays).
+
+    Attributes:
+        shape: of the gamma step length.
+        scale: of the gamma step length [km].
+        concentration: of the von Mises turn.
+        rhythm: two harmonics of solar time, on the log of the scale.
+        selection: b [per sd].
+        reference_strength: κ_R, draws the animal back.
+        reference_decay: τ_R [h].
+        working_strength: κ_W, puts it off.
+        working_decay: τ_W [h].
+        recall_half: m₀, trace at which recall is half [h].
+        encoding_range: σ, of all animals [km]; not read where the table's is fixed.
+        home_pull: η [1/km].
+        home: c [km].
+        home_eps: smooths the pull at the home [km].
+    """
+
+    shape: Float[Array, " animals"]
+    scale: Float[Array, " animals"]
+    concentration: Float[Array, " animals"]
+    rhythm: Float[Array, "animals 4"]
+    selection: Float[Array, "animals layers"]
+    reference_strength: Float[Array, " animals"]
+    reference_decay: Float[Array, " animals"]
+    working_strength: Float[Array, " animals"]
+    working_decay: Float[Array, " animals"]
+    recall_half: Float[Array, " animals"]
+    encoding_range: Float[Array, ""]
+    home_pull: Float[Array, " animals"]
+    home: Float[Array, "animals 2"]
+    home_eps: Float[Array, ""]
+
+
+def step_log_likelihood(parameters: StepParameters, data: StepData) -> Float[Array, "blocks steps"]:
+    """Log-likelihood of each step [log 1/km²; a short step's chance is a pure number]; 0 where not counted."""
+    shared = data._replace(**{name: None for name in _PER_BLOCK})
+    everyone = parameters._replace(**{name: None for name in _PER_ANIMAL})
+    by_animal = {name: getattr(parameters, name)[data.animal] for name in _PER_ANIMAL}
+
+    def one(block: tuple[dict, dict]) -> Float[Array, " steps"]:
+        return _block(everyone._replace(**block[0]), shared._replace(**block[1]))
+
+    return jax.vmap(one)((by_animal, {name: getattr(data, name) for name in _PER_BLOCK}))
+
+
+def animal_log_likelihood(parameters: StepParameters, data: StepData) -> Float[Array, " animals"]:
+    """Log-likelihood of each animal's steps, times the animal's weight."""
+    by_block = step_log_likelihood(parameters, data).sum(1)
+    return data.weight * jnp.zeros_like(data.weight).at[data.animal].add(by_block)
+
+
+def step_log_ratio(
+    log_used: Float[Array, " steps"],
+    log_nodes: Float[Array, "steps nodes"],
+    log_quad: Float[Array, "steps nodes"],
+    allowed: Bool[Array, "steps nodes"],
+    below: bool = True,
+) -> Float[Array, " steps"]:
+    r"""Each step's selection against what was on offer: $\log\omega(z) - \log\sum_j w_j\omega_j + \log\sum_j w_j$.
+
+    Args:
+        log_used: log ω at the used place.
+        log_nodes: log ω at the nodes.
+        log_quad: log w.
+        allowed: nodes that count above; every node counts below.
+        below: subtract the sum of w. Without it, with w = 1 and the used place among the nodes, this is conditional
+            logistic regression.
+    """
+    above = _log_sum(jnp.where(allowed, log_nodes + log_quad, jnp.asarray(NOWHERE, log_nodes.dtype)))
+    return log_used - above + (_log_sum(log_quad) if below else 0.0)
+
+
+def _log_sum(terms: Float[Array, "steps nodes"]) -> Float[Array, " steps"]:
+    """Log Σ exp, in double precision from the sum on."""
+    top = jax.lax.stop_gradient(terms.max(1))
+    return jnp.log(jnp.exp(terms - top[:, None]).sum(1).astype(float)) + top.astype(float)
+
+
+_PER_ANIMAL = tuple(name for name in StepParameters._fields if name not in ("encoding_range", "home_eps"))
+_PER_BLOCK = tuple(
+    name
+    for name in StepData._fields
+    if name not in ("animal", "weight", "shortest", "reference_shape", "reference_scale", "decay_basis", "range_basis")
+)
+
+
+def _block(p: StepParameters, data: StepData) -> Float[Array, " steps"]:
+    """One block: `p` holds one animal's values, `data` the arrays of one block (their leading axis taken off)."""
+    log_scale = jnp.log(p.scale) + data.hours @ p.rhythm
+    moved = log_step_density(
+        data.length, data.cos_turn, data.turn_known & ~data.short, p.shape, log_scale, p.concentration
+    )
+    rested = log_short_chance(p.shape, jnp.where(data.short, jnp.log(data.shortest) - log_scale, -10.0))
+    log_quad = _log_quad(p, data, log_scale)
+    used, nodes = _log_weights(p, data)
+    value = jnp.where(data.short, rested, moved) + step_log_ratio(used, nodes, log_quad, data.allowed)
+    return jnp.where(data.counted, value, 0.0)
+
+
+def _log_quad(p: StepParameters, data: StepData, log_scale: Float[Array, " steps"]) -> Float[Array, "steps nodes"]:
+    """Log k / k_ref at the nodes, but for a constant of the step."""
+
+    def of_step(values: Array) -> Array:  # summed over steps in double precision on the way back
+        return jnp.broadcast_to(values, log_scale.shape).astype(data.radius.dtype)[:, None]
+
+    return (
+        of_step(p.shape - data.reference_shape) * data.log_radius
+        + of_step(1 / data.reference_scale - jnp.exp(-log_scale)) * data.radius
+        + of_step(p.concentration) * data.cos_nodes
+    )
+
+
+def _log_weights(p: StepParameters, data: StepData) -> tuple[Float[Array, " steps"], Float[Array, "steps nodes"]]:
+    """Log ω at the used place (double) and at the nodes (single)."""
+    steps, nodes = data.radius.shape
+    single, n = data.radius.dtype, data.table_nodes.shape[-1]
+    used, at_nodes = jnp.zeros(steps), jnp.zeros((steps, nodes), single)
+    if data.layers_used.shape[-1]:
+        used += data.layers_used.astype(float) @ p.selection
+        at_nodes += data.layers_nodes @ p.selection.astype(single)
+    if n:
+        log_decay = jnp.log(jnp.stack([p.reference_decay, p.working_decay]))
+        at = (log_decay, jnp.log(p.encoding_range), data.decay_basis, data.range_basis)
+        strength = jnp.stack([p.reference_strength, -p.working_strength])
+        used += _recall(traces(data.table_used.astype(float), *at), strength, p.recall_half)
+        trace = traces(data.table_nodes.reshape(-1, n), *at)
+        at_nodes += _recall(trace, strength.astype(single), p.recall_half.astype(single)).reshape(steps, nodes)
+    if data.xy_used.shape[0]:
+        used -= p.home_pull * _distance(data.xy_used.astype(float), p.home, p.home_eps)
+        single_home = (data.xy_nodes.reshape(-1, 2), p.home.astype(single), p.home_eps.astype(single))
+        at_nodes -= p.home_pull.astype(single) * _distance(*single_home).reshape(steps, nodes)
+    return used, at_nodes
+
+
+def _recall(
+    trace: Float[Array, "places 2"], strength: Float[Array, " 2"], half: Float[Array, ""]
+) -> Float[Array, " places"]:
+    """κ_R ρ(R) − κ_W ρ(W); a trace a rounding below 0 counts as 0."""
+    trace = jnp.maximum(trace, 0)
+    return (trace / (trace + half)) @ strength
+
+
+def _distance(
+    place: Float[Array, "places 2"], home: Float[Array, " 2"], eps: Float[Array, ""]
+) -> Float[Array, " places"]:
+    """Smoothed distance to the home [km]."""
+    return jnp.sqrt(((place - home[None]) ** 2).sum(1) + eps**2)
+
+
+@jax.custom_jvp
+def traces(
+    table: Float[Array, "places columns"],
+    log_decay: Float[Array, " 2"],
+    log_range: Float[Array, ""],
+    decay_basis: Basis,
+    range_basis: Basis,
+) -> Float[Array, "places 2"]:
+    """R and W at each place of the table [h], in the table's precision; not differentiable in the table.
+
+    Their derivatives come from the same product with the table as they do, so that going back never reads it again.
+
+    Args:
+        table: from `tabulate`.
+        log_decay: log τ_R, log τ_W [log h].
+        log_range: log σ [log km].
+        decay_basis: of the table.
+        range_basis: of the table.
+    """
+    return table @ _coefficients(log_decay, log_range, decay_basis, range_basis).astype(table.dtype).T
+
+
+@traces.defjvp
+def _traces_jvp(primals: tuple, tangents: tuple) -> tuple[Array, Array]:
+    table, log_decay, log_range, decay_basis, range_basis = primals
+    _, by_decay, by_range, _, _ = tangents
+
+    def at(log_decay: Array, log_range: Array) -> Array:
+        return _coefficients(log_decay, log_range, decay_basis, range_basis)
+
+    value, slope = jax.jvp(lambda d: at(d, log_range), (log_decay,), (jnp.ones_like(log_decay),))
+    rows = [value, slope]
+    if not is_fixed(range_basis):
+        rows.append(jax.jvp(lambda s: at(log_decay, s), (log_range,), (jnp.ones_like(log_range),))[1])
+    product = table @ jnp.concatenate(rows).astype(table.dtype).T
+    change = product[:, 2:4] * by_decay.astype(table.dtype)[None]
+    if not is_fixed(range_basis):
+        change += product[:, 4:6] * by_range.astype(table.dtype)
+    return product[:, :2], change
+
+
+def _coefficients(
+    log_decay: Float[Array, " 2"], log_range: Float[Array, ""], decay_basis: Basis, range_basis: Basis
+) -> Float[Array, "2 columns"]:
+    """Coefficients of both memories on the table's columns."""
+    decay = jax.vmap(lambda d: decay_coefficients(decay_basis, d))(log_decay)
+    reach = range_coefficients(range_basis, log_range)
+    return (decay[:, :, None] * reach[None, None, :]).reshape(2, -1)
