@@ -5,6 +5,9 @@ from bayesrange.study._autocorrelation import Weights as Weights
 from bayesrange.study._autocorrelation import autocorrelation_weights as autocorrelation_weights
 from bayesrange.study._autocorrelation import interval_weights as interval_weights
 from bayesrange.study._daylight import solar_clock as solar_clock
+from bayesrange.study._flags import DROPPABLE as DROPPABLE
+from bayesrange.study._flags import FLAGS as FLAGS
+from bayesrange.study._flags import find_flags as find_flags
 from bayesrange.study._grid import Grid as Grid
 from bayesrange.study._layers import Layer as Layer
 from bayesrange.study._ornstein import CrossingTime as CrossingTime
