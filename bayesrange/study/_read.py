@@ -18,14 +18,14 @@ from bayesrange._errors import StudyError
 from bayesrange.study._area import read_area
 from bayesrange.study._card_kind import card_kind
 from bayesrange.study._cell_size import check_resolution, check_size, choose_cell
-from bayesrange.study._crs import carry, crs_text, look_like_degrees, metric_crs, parse_crs, scale_warnings, utm_for
+from bayesrange.study._crs import carry, scale_warnings
 from bayesrange.study._fixes import RawFixes, read_fixes
 from bayesrange.study._grid import SUB, Frame, Grid, area_sub_cells, build_grid, frame_of, without_scraps
-from bayesrange.study._groups import groups_of_fixes, match_groups, read_groups
 from bayesrange.study._keep import keep_fixes
 from bayesrange.study._layers import Layer, no_go_sub_cells, read_layer
 from bayesrange.study._periods import Span, for_period, in_period
 from bayesrange.study._places import Ground, check_fixes, check_homes
+from bayesrange.study._placing import placed, placed_groups, reference_systems
 from bayesrange.study._rounding import rounding
 from bayesrange.study._settings import StudySettings
 from bayesrange.study._settings_file import locate_study, read_settings
@@ -89,12 +89,12 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     settings, folder = read_settings(path), path.parent
     settings, span = for_period(settings, period, path.name)
     raw = read_fixes(folder, settings.fixes, settings.animals, settings.study.crs)
-    crs, fixes_crs, said_of_crs = _reference_systems(settings, raw)
+    crs, fixes_crs, said_of_crs = reference_systems(settings, raw)
     area = read_area(folder / settings.study.area, settings.study.area, crs)
     said_of_crs += scale_warnings(crs, area.representative_point().x, area.representative_point().y)
-    fixes, raw = _used(_placed(raw.table, fixes_crs, crs), raw, settings, span, period, crs)
+    fixes, raw = _used(placed(raw.table, fixes_crs, crs), raw, settings, span, period, crs)
     span = span or Span(fixes["time"].min(), fixes["time"].max())
-    groups, said_of_groups = _groups(settings, folder, fixes, fixes_crs, crs, span)
+    groups, said_of_groups = placed_groups(settings, folder, fixes, fixes_crs, crs, span)
 
     cell_m, said_of_cells = _cell(settings, fixes, area)
     frame = frame_of(area, cell_m)
@@ -120,47 +120,6 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     )  # fmt: skip
 
 
-def _reference_systems(settings: StudySettings, raw: RawFixes) -> tuple[pyproj.CRS, pyproj.CRS, list[str]]:
-    """The study's system, the fixes' system, and what has to be said."""
-    x, y = raw.table["x"].to_numpy(dtype=float), raw.table["y"].to_numpy(dtype=float)
-    degrees = look_like_degrees(x, y)
-    given = settings.study.crs and metric_crs(settings.study.crs, "[study] crs")
-    if raw.crs is None:
-        if degrees:
-            raise StudyError(
-                '[fixes] crs: the coordinates look like longitude and latitude; say so by crs = "EPSG:4326" in [fixes].'
-            )
-        if not given:
-            raise StudyError('[study] crs: this is missing; expected a metric system such as "EPSG:32631".')
-        return given, given, []
-    of_fixes = parse_crs(raw.crs, "[fixes] crs")
-    if of_fixes.is_geographic and not degrees:
-        row = raw.table[~((np.abs(x) <= 180) & (np.abs(y) <= 90))].iloc[0]
-        raise StudyError(
-            f"{row['file']}, line {row['row']}: x = {row['x']:.10g}, y = {row['y']:.10g} is no longitude and "
-            f"latitude, but [fixes] crs is {raw.crs}; mend crs, or exchange x and y."
-        )
-    if given:
-        return given, of_fixes, []
-    if not of_fixes.is_geographic:
-        raise StudyError('[study] crs: this is missing; expected a metric system such as "EPSG:32631".')
-    chosen = utm_for(x, y, of_fixes)
-    return chosen, of_fixes, [f"[study] crs was chosen from the fixes: {crs_text(chosen)} ({chosen.name})."]
-
-
-def _placed(table: pd.DataFrame, source: pyproj.CRS, target: pyproj.CRS) -> pd.DataFrame:
-    """The fixes in the study's reference system."""
-    x, y = carry(table["x"].to_numpy(dtype=float), table["y"].to_numpy(dtype=float), source, target)
-    lost = ~(np.isfinite(x) & np.isfinite(y))
-    if lost.any():
-        row = table[lost].iloc[0]
-        raise StudyError(
-            f"{row['file']}, line {row['row']}: x = {row['x']:.10g}, y = {row['y']:.10g} lies where [study] crs "
-            "does not reach; check [fixes] crs and the order of x and y."
-        )
-    return table.assign(x=x, y=y)
-
-
 def _used(
     fixes: pd.DataFrame, raw: RawFixes, settings: StudySettings, span: Span | None, period: str | None, crs: pyproj.CRS
 ) -> tuple[pd.DataFrame, RawFixes]:
@@ -175,29 +134,6 @@ def _used(
     table = raw.table[left].reset_index(drop=True)
     fixes = fixes[left].reset_index(drop=True).drop(columns=["minutes", "kept_by_column"])
     return fixes, replace(raw, table=table, counts=counts | not_kept, warnings=warnings + said_of_keep)
-
-
-def _groups(
-    settings: StudySettings, folder: Path, fixes: pd.DataFrame, fixes_crs: pyproj.CRS, crs: pyproj.CRS, span: Span
-) -> tuple[pd.DataFrame, list[str]]:
-    """Groups in the study's reference system, matched to the fixes."""
-    if settings.groups is None:
-        groups, said = groups_of_fixes(fixes)
-        return groups, said + match_groups(fixes, groups, "[fixes] group")
-    name = settings.groups.file
-    groups, said = read_groups(folder / name, name, settings.model.covariates, span, settings.fixes.zone)
-    given = groups["x"].notna().to_numpy()
-    x, y = groups["x"].to_numpy(dtype=float)[given], groups["y"].to_numpy(dtype=float)[given]
-    source = crs if settings.study.crs else fixes_crs
-    if look_like_degrees(x, y) and not source.is_geographic:
-        if not fixes_crs.is_geographic:
-            raise StudyError(f"{name}: the home centres look like degrees; give them in {crs_text(crs)} [m].")
-        source = fixes_crs
-        said.append(f"{name}: home centres look like degrees and were read in {crs_text(fixes_crs)}, as the fixes are.")
-    elif source.is_geographic and len(x) and not look_like_degrees(x, y):
-        raise StudyError(f"{name}: expected home centres in degrees as the fixes are, or say [study] crs.")
-    groups.loc[given, "x"], groups.loc[given, "y"] = carry(x, y, source, crs)
-    return groups, said + match_groups(fixes, groups, name)
 
 
 def _cell(
