@@ -5,7 +5,7 @@ error, so that no fix is lost by a typing mistake.
 """
 
 import glob
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
@@ -41,6 +41,7 @@ class RawFixes:
     files: dict[str, Path]
     crs: str | None  # reference system of x and y, where one is given
     deployments: pd.DataFrame | None = None
+    failed: pd.DataFrame = field(default_factory=pd.DataFrame)  # animal, when (as written), file, row of failed fixes
 
 
 def read_fixes(
@@ -58,7 +59,7 @@ def read_fixes(
         StudyError: names file, line and column of what is wrong.
     """
     files = _files(folder, [section.file] if isinstance(section.file, str) else section.file)
-    parts, counts, warnings, systems = [], {"rows": 0, "failed": 0}, [], set()
+    parts, failed, counts, warnings, systems = [], [], {"rows": 0, "failed": 0}, [], set()
     for name, path in files.items():
         table, crs = read_source(path, name, section)
         own = with_darwin_core(_own_system(section, crs, name), table, name)
@@ -68,6 +69,7 @@ def read_fixes(
         counts["failed"] += len(table) - len(part)
         warnings += said
         parts.append(part)
+        failed.append(_failed_of(table, own, name))
     fixes = pd.concat(parts, ignore_index=True)
     if fixes.empty:
         raise StudyError(f"{first_few(files)}: there is no fix with coordinates ({counts['rows']} rows).")
@@ -75,7 +77,7 @@ def read_fixes(
         systems = {None}
     if len(systems) > 1:
         raise StudyError("[fixes] file: the files are in more than one reference system; read them as one study each.")
-    one_name_each(fixes["animal"], "tags" if section.tag else "animals", first_few(files))
+    one_name_each(fixes["animal"].unique(), "tags" if section.tag else "animals", first_few(files))
     deployments = None
     if animals is not None and animals.file is not None:
         deployments = read_deployments(folder, animals, section.zone, section.tag is not None)
@@ -83,11 +85,13 @@ def read_fixes(
         counts |= set_aside
         warnings += said
         files[animals.file] = folder / animals.file
-    _refuse_repeats(fixes)
+    if section.drop is None or "duplicate" not in section.drop.flags:
+        _refuse_repeats(fixes)
     earlier = fixes.groupby("animal")["time"].diff() < pd.Timedelta(0)
     counts["unsorted"] = int(earlier.sum())
     fixes = fixes.sort_values(["animal", "time"], kind="stable", ignore_index=True)
-    return RawFixes(fixes, counts, warnings, files, systems.pop(), deployments)
+    left_out = pd.concat(failed, ignore_index=True) if failed else pd.DataFrame()
+    return RawFixes(fixes, counts, warnings, files, systems.pop(), deployments, left_out)
 
 
 def _files(folder: Path, given: list[str]) -> dict[str, Path]:
@@ -134,11 +138,19 @@ def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd
             "error_m": error,
             "file": name,
             "row": table.index.to_numpy(dtype=np.int64),
-            "minutes": clock_minutes(texts, times, section.zone),
+            "minutes": clock_minutes(texts, times, section.zone) if section.keep and section.keep.hours else 0,
             "kept_by_column": by_column(table, section.keep, name),
         }
     ).astype({"animal": "str", "group": "str", "file": "str"})
     return part, said + said_of_error
+
+
+def _failed_of(table: pd.DataFrame, section: FixesSection, name: str) -> pd.DataFrame:
+    """Rows without coordinates, as written."""
+    rows = table[(table[section.x] == "").to_numpy()]
+    animal = column_or_error(rows, section.tag or section.animal, name, "[fixes] names").to_numpy()
+    when = _time_texts(rows, section, name).to_numpy()
+    return pd.DataFrame({"animal": animal, "when": when, "file": name, "row": rows.index.to_numpy(dtype=np.int64)})
 
 
 def _time_texts(table: pd.DataFrame, section: FixesSection, name: str) -> pd.Series:
@@ -193,4 +205,7 @@ def _refuse_repeats(fixes: pd.DataFrame) -> None:
     if again.any():
         rows = first_few(f"{f} line {r}" for f, r in zip(fixes["file"][again], fixes["row"][again], strict=True))
         number = counted(int(again.sum()), "fix repeats", "fixes repeat")
-        raise StudyError(f"{number} an animal and time that stand before ({rows}); keep one row for each.")
+        raise StudyError(
+            f"{number} an animal and time that stand before ({rows}); keep one row for each, or "
+            'drop the later ones by flags = ["duplicate"] in [fixes.drop].'
+        )

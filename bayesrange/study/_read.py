@@ -19,6 +19,7 @@ from bayesrange.study._area import read_area
 from bayesrange.study._card_kind import card_kind
 from bayesrange.study._cell_size import check_resolution, check_size, choose_cell
 from bayesrange.study._crs import carry, scale_warnings
+from bayesrange.study._drop import without_dropped
 from bayesrange.study._fixes import RawFixes, read_fixes
 from bayesrange.study._grid import SUB, Frame, Grid, area_sub_cells, build_grid, frame_of, without_scraps
 from bayesrange.study._keep import keep_fixes
@@ -92,7 +93,8 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     crs, fixes_crs, said_of_crs = reference_systems(settings, raw)
     area = read_area(folder / settings.study.area, settings.study.area, crs)
     said_of_crs += scale_warnings(crs, area.representative_point().x, area.representative_point().y)
-    fixes, raw = _used(placed(raw.table, fixes_crs, crs), raw, settings, span, period, crs)
+    fixes, raw = without_dropped(placed(raw.table, fixes_crs, crs), raw, settings.fixes, area)
+    fixes, raw = _used(fixes, raw, settings, span, period, crs)
     span = span or Span(fixes["time"].min(), fixes["time"].max())
     groups, said_of_groups = placed_groups(settings, folder, fixes, fixes_crs, crs, span)
 

@@ -45,6 +45,14 @@ class KeepSection(Section):
     column: dict[str, Any] | None = Field(None, description='a column and its value such as { activity = "active" }')
 
 
+class DropSection(Section):
+    """`[fixes.drop]`: fixes with these flags are left out; `screen` shows them."""
+
+    flags: list[Literal["duplicate", "speed", "spike", "stationary", "outside"]] = Field(
+        description='a list such as ["duplicate", "speed"], of duplicate, speed, spike, stationary and outside'
+    )
+
+
 class FixesSection(Section):
     """`[fixes]`: files and columns of the relocations."""
 
@@ -62,7 +70,11 @@ class FixesSection(Section):
     )
     zone: Name | None = Field(None, description='a time zone such as "Europe/Oslo"')
     crs: Name | None = Field(None, description='the reference system of x and y, such as "EPSG:4326"')
+    max_speed_kmh: float | None = Field(
+        None, gt=0, allow_inf_nan=False, description="a number of kilometres an hour above 0"
+    )
     keep: KeepSection | None = Field(None, description="the keys sun, hours or column")
+    drop: DropSection | None = Field(None, description='the key flags, such as flags = ["duplicate", "speed"]')
 
 
 class AnimalsSection(Section):
