@@ -28,6 +28,7 @@ from bayesrange.memory._likelihood import (  # noqa: E402
 )
 from bayesrange.memory._nodes import Nodes, Reference, fit_gamma, make_nodes, wide_reference  # noqa: E402
 from bayesrange.memory._pilot import choose_count, quadrature_error  # noqa: E402
+from bayesrange.memory._recall import recall_surfaces  # noqa: E402
 from bayesrange.memory._steps import Stays, Steps, Track, make_stays, make_steps  # noqa: E402
 from bayesrange.memory._table import tabulate  # noqa: E402
 from bayesrange.memory._trace import exact_trace  # noqa: E402
@@ -37,6 +38,6 @@ __all__ = [
     "Steps", "Track", "allowed", "animal_log_likelihood", "choose_count", "decay_basis", "decay_coefficients",
     "exact_trace", "fit_gamma", "fixed_range", "log_bessel", "log_short_chance", "log_step_density", "make_blocks",
     "make_nodes", "make_stays", "make_steps", "no_memory", "places", "quadrature_error", "range_basis",
-    "range_coefficients", "read_layers", "read_places", "step_log_likelihood", "step_log_ratio", "tabulate", "traces",
-    "wide_reference",
+    "range_coefficients", "read_layers", "read_places", "recall_surfaces", "step_log_likelihood", "step_log_ratio",
+    "tabulate", "traces", "wide_reference",
 ]  # fmt: skip

@@ -60,20 +60,53 @@ class StepParameters(NamedTuple):
 
 def step_log_likelihood(parameters: StepParameters, data: StepData) -> Float[Array, "blocks steps"]:
     """Log-likelihood of each step [log 1/km²; a short step's chance is a pure number]; 0 where not counted."""
-    shared = data._replace(**{name: None for name in _PER_BLOCK})
-    everyone = parameters._replace(**{name: None for name in _PER_ANIMAL})
-    by_animal = {name: getattr(parameters, name)[data.animal] for name in _PER_ANIMAL}
-
-    def one(block: tuple[dict, dict]) -> Float[Array, " steps"]:
-        return _block(everyone._replace(**block[0]), shared._replace(**block[1]))
-
-    return jax.vmap(one)((by_animal, {name: getattr(data, name) for name in _PER_BLOCK}))
+    return jax.lax.map(lambda block: _block(*_of_block(parameters, data, block)), _blocks(parameters, data))
 
 
 def animal_log_likelihood(parameters: StepParameters, data: StepData) -> Float[Array, " animals"]:
     """Log-likelihood of each animal's steps, times the animal's weight."""
-    by_block = step_log_likelihood(parameters, data).sum(1)
+    by_block = _block_sums(parameters, data)
     return data.weight * jnp.zeros_like(data.weight).at[data.animal].add(by_block)
+
+
+@jax.custom_jvp
+def _block_sums(parameters: StepParameters, data: StepData) -> Float[Array, " blocks"]:
+    """Log-likelihood of each block; not differentiable in the data.
+
+    Its derivative takes value and gradient of one block after the other, so that a block's intermediate results never
+    leave the cache; going back then only scales the gradients (four times faster at 20 animals).
+    """
+    return step_log_likelihood(parameters, data).sum(1)
+
+
+@_block_sums.defjvp
+def _block_sums_jvp(primals: tuple, tangents: tuple) -> tuple[Array, Array]:
+    parameters, data = primals
+    blocks = _blocks(parameters, data)
+
+    def one(block: tuple) -> tuple[Array, StepParameters]:
+        p, of_block = _of_block(parameters, data, block)
+        return jax.value_and_grad(lambda p: _block(p, of_block).sum())(p)
+
+    value, slope = jax.lax.map(one, blocks)
+    change = jnp.zeros_like(value)
+    for name in StepParameters._fields:
+        tangent = getattr(tangents[0], name)
+        tangent = tangent[data.animal] if name in _PER_ANIMAL else jnp.broadcast_to(tangent, value.shape)
+        product = getattr(slope, name) * tangent
+        change += product.reshape(*value.shape, -1).sum(1)
+    return value, change
+
+
+def _blocks(parameters: StepParameters, data: StepData) -> tuple[dict, dict]:
+    """What differs between blocks: the values of their animals, and their data."""
+    by_animal = {name: getattr(parameters, name)[data.animal] for name in _PER_ANIMAL}
+    return by_animal, {name: getattr(data, name) for name in _PER_BLOCK}
+
+
+def _of_block(parameters: StepParameters, data: StepData, block: tuple[dict, dict]) -> tuple[StepParameters, StepData]:
+    """Parameters and data of one block, from `_blocks`; without the leading axis."""
+    return parameters._replace(**block[0]), data._replace(**block[1])
 
 
 def step_log_ratio(

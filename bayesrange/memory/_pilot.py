@@ -19,7 +19,7 @@ FINEST = 4096
 """Nodes that stand in for the integral itself."""
 
 LARGEST_ERROR = 0.004
-"""Error per step [nats, root mean square] that a number of nodes may have; 64 nodes on smooth ground have half of it."""
+"""Error per step [nats, root mean square] that a number of nodes may have: twice that of 64 on smooth ground."""
 
 SAMPLE = 300
 """Most steps a pilot reads."""

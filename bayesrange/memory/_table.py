@@ -48,19 +48,17 @@ def tabulate(
         return table, exact
     columns = decay_columns(decay_basis) if n else None
     encode = _Encoding(range_basis)
-    farthest = FARTHEST * max([encode.longest, *(sigma for _, sigma in exact_at)])
-    near = _near(stays, time, x, y, farthest)
-    for step, past in enumerate(near):
-        if not len(past):
-            continue
+    by_range = {sigma: [i for i, pair in enumerate(exact_at) if pair[1] == sigma] for _, sigma in exact_at}
+    decays = np.array([decay for decay, _ in exact_at])
+    for step, past in enumerate(_near(stays, time, x, y, FARTHEST * max([encode.longest, *by_range]))):
         age, duration = time[step] - stays.time[past], stays.duration[past]
         square = _squares(x[step], y[step], stays.x[past], stays.y[past])
         if columns is not None:
             kept = columns(np.log(age)) * duration[:, None]
-            by_range = [weight @ kept for weight in encode(square)]
-            table[step] = np.stack(by_range, axis=-1).reshape(x.shape[1], -1)
-        for place, (decay, sigma) in enumerate(exact_at):
-            exact[step, :, place] = np.exp(square / (-2 * sigma**2)) @ (duration * np.exp(-age / decay))
+            table[step] = np.stack([weight @ kept for weight in encode(square)], axis=-1).reshape(x.shape[1], -1)
+        for sigma, which in by_range.items():
+            kept = np.exp(-age[:, None] / decays[None, which]) * duration[:, None]
+            exact[step][:, which] = np.exp(square / (-2 * sigma**2)) @ kept
     return table, exact
 
 
