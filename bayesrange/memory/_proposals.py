@@ -19,7 +19,7 @@ class Kernel(NamedTuple):
 
     Attributes:
         shape: of the gamma steps.
-        concentration: of the turns, >= 0.
+        concentration: of the turns; below 0 the animal turns round.
         reach: length at which the branch of long steps begins [scales].
         log_odds: log odds of a try of a long step against one of a near step, where both have the same ceiling.
     """
@@ -129,12 +129,12 @@ def _turns(
     With c = κ(s − cos), the ratio of the two densities is c e^{1 − c} for any s > 1: s decides only how many are valid.
     """
     z = jnp.cos(2.0 * jnp.pi * angle)
-    turning = heading_known & (concentration > 0)
-    kappa = jnp.where(turning, concentration, 1.0)
+    turning = heading_known & (concentration != 0)
+    kappa = jnp.where(turning, jnp.abs(concentration), 1.0)
     t = 1.0 + jnp.sqrt(1.0 + 4.0 * kappa**2)
     rho = (t - jnp.sqrt(2.0 * t)) / (2.0 * kappa)
     s = jnp.where(kappa > 1e-3, (1.0 + rho**2) / (2.0 * rho), 1.0 / kappa + kappa)
     cosine = (1.0 + s * z) / (s + z)
     c = kappa * (s - cosine)
     accepted = log_chance < jnp.log(c) + 1.0 - c
-    return jnp.where(turning, cosine, z), ~turning | accepted
+    return jnp.where(turning, jnp.sign(concentration) * cosine, z), ~turning | accepted

@@ -28,12 +28,12 @@ from bayesrange.memory._walk import (
 
 WALK_SENTENCES = {
     WALKED: "The track was drawn to its end.",
-    NO_STEP_FOUND: "No step was accepted within the allowed number of proposals: almost no habitable ground lies within "
-    "reach, or selection and memory are so strong that a step has hardly a chance; allow more with `most_tries`.",
-    CEILING_BROKEN: "A place attracted more than its bound allows: the simulator is wrong here, and the track is no draw "
-    "from the model.",
-    NOT_A_MODEL: "A parameter, time or place is not finite, or a step's shape or scale, a decay time, `recall_half` or "
-    "`encoding_range` is not positive, or the concentration or a duration is negative.",
+    NO_STEP_FOUND: "No step was accepted within the allowed number of proposals: almost no habitable ground lies "
+    "within reach, or selection and memory are so strong that a step has hardly a chance; allow more with `most_tries`.",
+    CEILING_BROKEN: "A place attracted more than its bound allows: the simulator is wrong here, and the track is no "
+    "draw from the model.",
+    NOT_A_MODEL: "A parameter, time or place is not finite, or a step's shape or scale, a decay time, `recall_half` "
+    "or `encoding_range` is not positive, or a duration is negative.",
     START_OFF_GROUND: "The start lies outside the study area or on no-go ground: choose a place on habitable ground.",
     PAST_TOO_LATE: "A stay of the past begins at or after the track's first time: give only stays before it.",
 }
@@ -79,7 +79,9 @@ def simulate(
     most_tries: int = 2**20,
     throw: bool = True,
 ) -> Walk:
-    """One animal's track from the model; `jax.vmap` and `jax.lax.map` go over animals or draws.
+    """One animal's track from the model; `jax.lax.map` and `jax.vmap` go over animals or draws.
+
+    On a CPU `lax.map` is the faster: under `vmap` every animal waits at each step for the one that tries longest.
 
     Args:
         parameters: of one animal: scalars, `selection` (layers,), `rhythm` (4,), `home` (2,). `encoding_range` is

@@ -218,9 +218,7 @@ def _log_attraction(
     return still + _recall(traces, p)
 
 
-def _recall(
-    traces: Float[Array, "2 *places"], parameters: StepParameters, bound: bool = False
-) -> Float[Array, "*places"]:
+def _recall(traces: Float[Array, "2 ..."], parameters: StepParameters, bound: bool = False) -> Float[Array, "..."]:
     """κ_R ρ(R) − κ_W ρ(W); as a bound, traces are the largest they can be, and what puts off may be nil."""
     strengths = [parameters.reference_strength, -parameters.working_strength]
     recall = traces / (traces + parameters.recall_half)
@@ -270,7 +268,7 @@ def _first_result(
     if remembers:
         positive += [p.reference_decay, p.working_decay, p.recall_half, p.encoding_range]
         finite += [p.reference_strength, p.working_strength, *past]
-    good = jnp.stack([jnp.isfinite(a) & (a > 0) for a in positive]).all() & (p.concentration >= 0)
+    good = jnp.stack([jnp.isfinite(a) & (a > 0) for a in positive]).all()
     good &= jnp.stack([jnp.isfinite(a).all() for a in finite]).all() & ~jnp.any(timeline.duration < 0)
     good &= (p.home_pull == 0) | (jnp.isfinite(p.home).all() & jnp.isfinite(p.home_eps))
     late = jnp.any((past.time >= timeline.time[:1]) & (past.duration > 0))
