@@ -43,6 +43,8 @@ def read_table(path: Path, name: str) -> pd.DataFrame:
     if start is None:
         raise StudyError(f"{name}: the file is empty; expected a header line and one line a row.")
     separator = told[1] if told else max(",;\t|", key=lines[start].count)
+    if (plain := _plain_table(lines, start, separator, name)) is not None:
+        return plain
     reader = csv.reader(io.StringIO("\n".join(lines[start:])), delimiter=separator, strict=True)
     try:
         return _table(reader, start, name)
@@ -53,13 +55,39 @@ def read_table(path: Path, name: str) -> pd.DataFrame:
         ) from None
 
 
-def _table(reader: Any, start: int, name: str) -> pd.DataFrame:
-    header = [cell.strip() for cell in next(reader)]
+def _plain_table(lines: list[str], start: int, separator: str, name: str) -> pd.DataFrame | None:
+    """The same table ten times as fast, or None where a cell is quoted or a line has another number of cells."""
+    rows = [number for number, line in enumerate(lines[start:], start + 1) if line.strip(" \t")]
+    text = "\n".join(lines[number - 1] for number in rows)
+    between = lines[start].count(separator)
+    if '"' in text or "\0" in text or not between or any(lines[n - 1].count(separator) != between for n in rows):
+        return None
+    header = _header(lines[start].split(separator), name)
+    if len(header) <= between:
+        return None
+    table = pd.read_csv(
+        io.StringIO(text), sep=separator, header=None, skiprows=1, names=header, dtype=str, na_filter=False,
+        quoting=csv.QUOTE_NONE, lineterminator="\n", skip_blank_lines=False, index_col=False,
+    )  # fmt: skip
+    table.index = pd.Index(rows[1:], name="line")
+    for column in header:
+        table[column] = table[column].str.strip()
+    filled = (table != "").any(axis=1)
+    return table if filled.all() else table[filled]
+
+
+def _header(cells: list[str], name: str) -> list[str]:
+    header = [cell.strip() for cell in cells]
     while header and not header[-1]:
         header.pop()
     twice = sorted({column for column in header if header.count(column) > 1})
     if twice:
         raise StudyError(f'{name}: the column "{shown(twice[0])}" stands twice in the header; rename one of them.')
+    return header
+
+
+def _table(reader: Any, start: int, name: str) -> pd.DataFrame:
+    header = _header(next(reader), name)
     rows, numbers = _cells(reader, len(header), start, name)
     return pd.DataFrame(rows, columns=header, index=pd.Index(numbers, name="line"), dtype=str)
 
