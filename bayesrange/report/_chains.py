@@ -7,16 +7,16 @@ from matplotlib.figure import Figure
 from numpy.typing import NDArray
 from scipy.stats import rankdata
 
+from bayesrange.report._contents import RunContents
 from bayesrange.report._drawing import HUES, INK, Picture, our_style, picture, short
 from bayesrange.report._format import listed
-from bayesrange.report._read import Contents
 
 AT_MOST = 10
-_NOT_MAIN = {"group", "home_group", "coefficient"}  # one group's, and correlations between coefficients
+_NOT_MAIN = {"group", "home_group", "animal", "coefficient"}  # one group's or animal's, and correlations
 _BINS = 20
 
 
-def main_draws(run: Contents) -> dict[str, Float[NDArray, "chain draw"]]:
+def main_draws(run: RunContents) -> dict[str, Float[NDArray, "chain draw"]]:
     """Draws of every parameter that is not one group's, under the name it has in the tables."""
     found = {}
     for variable, values in run.posterior.data_vars.items():
@@ -27,9 +27,26 @@ def main_draws(run: Contents) -> dict[str, Float[NDArray, "chain draw"]]:
     return found
 
 
-def chains_figure(run: Contents) -> Picture | None:
-    """Trace and rank histogram, a row a parameter, at most ten; None if there is no parameter of that kind."""
-    draws = main_draws(run)
+def lead_draws(run: RunContents) -> dict[str, Float[NDArray, "chain draw"]]:
+    """The same, population before spreads and effects; where no parameter is shared, all, the largest R-hat first."""
+    main = main_draws(run)
+    if main:
+        later = {label: label.endswith(" spread") + 2 * (":" in label) for label in main}
+        return {label: main[label] for label in sorted(main, key=later.__getitem__)}
+    every = {label: one for name, values in run.posterior.data_vars.items() for label, one in _flat(str(name), values)}
+    rhat = dict(zip(run.parameters["parameter"], run.parameters["rhat"].fillna(np.inf), strict=True))
+    worst = sorted((label for label in every if label in rhat), key=lambda label: -rhat[label])
+    return {label: np.asarray(every[label].transpose("chain", "draw").values, dtype=float) for label in worst}
+
+
+def chains_figure(run: RunContents, draws: dict[str, Float[NDArray, "chain draw"]] | None = None) -> Picture | None:
+    """Trace and rank histogram, a row a parameter, at most ten; None if there is no parameter of that kind.
+
+    Args:
+        run: what the run folder holds.
+        draws: by name, in the order to show; `main_draws` if not given.
+    """
+    draws = main_draws(run) if draws is None else draws
     shown = dict(list(draws.items())[:AT_MOST])
     if not shown:
         return None

@@ -11,6 +11,7 @@ from bayesrange.report._parameters import Gate, split_name
 
 # Betancourt 2016, arXiv:1604.00695.
 LEAST_BFMI = 0.3
+_OF_SOLVES = ("failed_solves", "two_states")
 _COUNTED = {
     "divergences": "divergent transitions",
     "failed_solves": "of these, where no steady state was found",
@@ -149,7 +150,7 @@ def checks(run: RunContents, gate: Gate, solves: bool = True) -> list[dict[str, 
         bfmi = found_number(found, "min_bfmi")
         rows.append(("smallest energy BFMI", fixed(bfmi, 2), f"at least {LEAST_BFMI}", bfmi >= LEAST_BFMI))
     for key, name in _COUNTED.items():
-        if key in found and (key != "failed_solves" or solves):
+        if key in found and (solves or key not in _OF_SOLVES):
             rows.append((name, whole(found_number(found, key)), "0", found_number(found, key) == 0))
     rows.append(("chains × draws kept", f"{gate.chains} × {run.posterior.sizes['draw']:,}", "", True))
     if "acceptance_rate" in run.sample_stats:

@@ -1,6 +1,6 @@
 """The parameters table: rows that lead, rows of single groups, and the notes that stand beside them."""
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from math import isfinite
 from typing import Any
 
@@ -74,6 +74,24 @@ def parameter_blocks(run: RunContents, gate: Gate, words: Words = RANGE_WORDS) -
     for of_what, records in single.items():
         blocks.append(_single_block(of_what, records, gate, words, told))
     return blocks
+
+
+def by_kind(blocks: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    """The leading block taken apart: the population first, then its spreads; effects of covariates after the animals.
+
+    What a spread or an effect is then stands once, above its rows.
+    """
+    kinds: dict[str, list[Row]] = {"Population": [], "Spread": [], "Effects of covariates": []}
+    for row in (row for block in blocks if not block["single"] for row in block["rows"]):
+        title = "Spread" if _is_spread(row.name) else "Effects of covariates" if ":" in row.name else "Population"
+        kinds[title].append(row)
+    made: dict[str, list[dict[str, Any]]] = {}
+    for title, rows in kinds.items():
+        meaning = rows[0].meaning if rows and title != "Population" else ""
+        rows = [replace(row, meaning="") for row in rows] if meaning else rows
+        made[title] = [{"title": title, "meaning": meaning, "rows": rows, "notes": [], "single": False}] if rows else []
+    single = [block for block in blocks if block["single"]]
+    return made["Population"] + made["Spread"] + single + made["Effects of covariates"]
 
 
 def raw_left_out(run: RunContents) -> bool:

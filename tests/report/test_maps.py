@@ -9,7 +9,8 @@ import shapely
 import xarray as xr
 
 from bayesrange.report import isopleth_outlines, read_contents, write
-from bayesrange.report._maps import density_files, safe_names
+from bayesrange.report._maps import density_files
+from bayesrange.report._raster import safe_names
 
 
 @pytest.fixture(scope="module")
