@@ -4,6 +4,8 @@ from bayesrange._errors import StudyError as StudyError
 from bayesrange.study._autocorrelation import Weights as Weights
 from bayesrange.study._autocorrelation import autocorrelation_weights as autocorrelation_weights
 from bayesrange.study._autocorrelation import interval_weights as interval_weights
+from bayesrange.study._bare import BareStudy as BareStudy
+from bayesrange.study._bare import read_bare as read_bare
 from bayesrange.study._daylight import solar_clock as solar_clock
 from bayesrange.study._flags import DROPPABLE as DROPPABLE
 from bayesrange.study._flags import FLAGS as FLAGS

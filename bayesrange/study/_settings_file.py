@@ -17,6 +17,16 @@ from bayesrange.study._layer_keys import layer_problems
 from bayesrange.study._period_keys import animal_problems, period_problems
 from bayesrange.study._settings import LayerSection, PeriodSection, Section, StudySettings
 
+NOT_GIVEN = "(not given)"
+"""Area and card of a study that is only looked at, where the study file names none."""
+
+_NOT_NEEDED: dict[str, Any] = {
+    "groups": None,
+    "layers": {},
+    "periods": {},
+    "model": {"card": NOT_GIVEN},
+    "sampling": {},
+}
 _NAMED_SECTIONS = {"layers": LayerSection, "periods": PeriodSection}
 
 
@@ -56,6 +66,44 @@ def read_settings(path: str | Path) -> StudySettings:
         verb = "are" if len(later) > 1 else "is"
         raise StudyError(f"{path.name}: {'; '.join(later)} {verb} not built yet; take it out to go on without it.")
     return settings
+
+
+def read_settings_to_screen(path: str | Path) -> tuple[StudySettings, list[str]]:
+    """Read the study file as far as a look at the fixes needs it, and what has to be said of the rest.
+
+    Area, cell size and model may be left out. Groups, layers, periods, model and sampling that are wrong are left out
+    and said; a fit would refuse them.
+
+    Raises:
+        StudyError: what `read_settings` says of the sections on fixes and animals; exact places must not be shown.
+    """
+    path = locate_study(path)
+    raw, said = _parse(path), []
+    study = raw.setdefault("study", {})
+    if isinstance(study, dict):
+        for key, value in {"name": path.resolve().parent.name, "cell_m": "auto", "area": NOT_GIVEN}.items():
+            study.setdefault(key, value)
+    raw.setdefault("model", {}).setdefault("card", NOT_GIVEN)
+    while True:
+        try:
+            settings = StudySettings.model_validate(raw)
+            break
+        except ValidationError as error:
+            wrong = {str(item["loc"][0]) for item in error.errors()}
+            if not wrong <= set(_NOT_NEEDED):
+                raise StudyError(_sentence(path.name, error)) from None
+            said.append(f"{_sentence(path.name, error)[:-1]}: left out of this look; a fit would refuse it.")
+            raw |= {name: _NOT_NEEDED[name] for name in wrong}
+    for problem in _contradictions(settings):
+        if problem.startswith(("[fixes", "[animals", "[bearings")):
+            raise StudyError(f"{path.name}, {problem}")
+        said.append(f"{path.name}, {problem}")
+    if settings.study.sensitive != "no":
+        raise StudyError(
+            f'{path.name}: [study] sensitive = "{settings.study.sensitive}", and a look at the fixes shows exact '
+            'places, coarsened ones being not built yet: set "no" if they may be shown on this machine.'
+        )
+    return settings, said
 
 
 def nearest(word: str, known: list[str]) -> str | None:
