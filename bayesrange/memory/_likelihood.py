@@ -215,7 +215,7 @@ def _log_weights(
     return used, at_nodes
 
 
-def _recall(traces: Float[Array, "memories *places"], p: StepParameters) -> Float[Array, "*places"]:
+def _recall(traces: Float[Array, "2 ..."], p: StepParameters) -> Float[Array, "..."]:
     """κ_R ρ(R) − κ_W ρ(W), in the traces' precision; a trace a rounding below 0 counts as 0."""
     kind = traces.dtype
     half = p.recall_half.astype(kind)
