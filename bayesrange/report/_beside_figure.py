@@ -54,7 +54,7 @@ def _how_to(run: MemoryContents) -> str:
     return (
         "No finished run without memory on the same files stands beside this one, so nothing can be compared here. Set "
         'card = "steps-resources" in the study file, fit again (the run goes beside this one), and write this report '
-        f"anew with `bayesrange report {run.folder.name}`."
+        f"anew: bayesrange report {run.folder.name}"
     )
 
 

@@ -24,6 +24,7 @@ from bayesrange.report._drawing import (
     short,
 )
 from bayesrange.report._read_memory import MemoryContents
+from bayesrange.report._recall import recall, surface
 
 RECALL = ListedColormap(colormaps["YlGnBu"](np.linspace(0.0, 0.62, 256)), name="recall")
 _WHEN = ListedColormap(colormaps["plasma"](np.linspace(0.0, 0.8, 256)), name="when")
@@ -55,15 +56,18 @@ def track_maps(run: MemoryContents) -> Picture:
 
 def recall_maps(run: MemoryContents) -> Picture | None:
     """One panel an animal: mean recall at its last fix, all to one scale and one colour bar; None without memory."""
-    if run.memory_use is None or "recall_mean" not in run.memory_use:
+    cells = surface(run)
+    if cells is None:
         return None
     norm = Normalize(0.0, 1.0)
     with our_style():
         figure, panels, used = _panels(run)
         for axes, name in zip(used, run.animals, strict=True):
             mine = run.fixes[run.fixes["animal"] == name]
-            mean = run.memory_use["recall_mean"].sel(animal=name).transpose("y", "x").values
-            image(axes, run, np.where(run.inside, mean, np.nan), cmap=RECALL, norm=norm, interpolation="nearest")
+            where = {"extent": cells.extent_km, "origin": "lower", "interpolation": "nearest", "zorder": 0.4}
+            frame = (*axes.get_xlim(), *axes.get_ylim())
+            axes.imshow(recall(run, cells, name, "recall_mean"), cmap=RECALL, norm=norm, **where)
+            axes.axis(frame)
             axes.plot(
                 mine["x_km"], mine["y_km"], ".", color=INK, markersize=1.9, alpha=0.4, markeredgewidth=0, zorder=4
             )
@@ -121,7 +125,7 @@ def _panels(run: MemoryContents) -> tuple[Figure, np.ndarray, list[Axes]]:
     columns = min(4, len(run.animals))
     rows = -(-len(run.animals) // columns)
     width = _WIDTH_IN if columns > 2 else 4.4 * columns
-    tall = min(max((width / columns - 0.45) * (north - south) / (east - west), 1.4), 7.0) + 0.42
+    tall = min(max((width / columns - 0.75) * (north - south) / (east - west), 1.4), 7.0) + 0.42
     figure = Figure(figsize=(width, tall * rows + 1.2), layout="constrained")
     panels = figure.subplots(rows, columns, squeeze=False)
     for at, (axes, name) in enumerate(zip(panels.ravel(), run.animals, strict=False)):

@@ -39,7 +39,8 @@ LEAST_SHOWN = 0.005
 
 def memory_page(run: MemoryContents, decay: pd.DataFrame, today: date) -> str:
     """The page as HTML that needs no other file, no network and no script."""
-    gate = Gate(int(run.posterior.sizes["chain"]))
+    chains = int(run.posterior.sizes["chain"])
+    gate = Gate(chains) if run.hierarchical else Gate(chains, rhat_of_group=Gate.rhat)
     return render(
         "memory.html",
         head=head(run, today),
@@ -141,7 +142,7 @@ def _beyond_words(run: MemoryContents) -> list[str]:
     for memory, name in MEMORIES.items():
         named = [animal or "the population" for base, animal in beyond if base == name]
         if named:
-            said.append(f"Decay of the {memory} memory: {beyond_several(named, run.animals)}")
+            said.append(f"Decay of the {memory} memory. {beyond_several(named, run.animals)}")
     return said
 
 

@@ -1,5 +1,7 @@
 """The words of a memory report: what a term is, and what its estimate cannot tell."""
 
+from typing import Any
+
 from bayesrange.report._format import listed, number, whole
 from bayesrange.report._read_memory import MemoryContents
 from bayesrange.report._sentences import Words
@@ -22,15 +24,9 @@ MEANINGS = {
 }
 
 TERMS = {
-    "steps": "step lengths from a gamma law",
-    "turns": "turns from a von Mises law",
-    "kernel": "step lengths from a gamma law, turns from a von Mises law",
-    "movement": "step lengths from a gamma law, turns from a von Mises law",
-    "selection": "the next place is chosen by the layers there",
+    "steps": "step lengths from a gamma law, turns from a von Mises law",
     "resources": "the next place is chosen by the layers there",
-    "memory": "a long memory that draws the animal back to places it knows, and a short one that puts it off",
-    "reference": "a long memory that draws the animal back to places it knows",
-    "working": "a short memory that puts the animal off places it has just left",
+    "memory": "a long (reference) memory draws the animal back to places it knows, a short (working) one puts it off",
     "home": "a pull towards one estimated centre",
 }
 
@@ -88,9 +84,9 @@ def question(run: MemoryContents) -> str:
         against = ", as against the resources themselves," if chosen else ""
         return f"How strongly does memory{against} hold an animal to places it knows, and over what time does it fade?"
     if "home_pull" in run.posterior:
-        what = "what ground does it choose at each step, and " if chosen else ""
-        return f"If an animal had no memory: {what}how strongly is it held to one centre?"
-    return "If an animal had no memory: what ground does it choose at each step?"
+        what = "what ground does an animal choose at each step, and " if chosen else ""
+        return f"Without memory: {what}how strongly is it held to one centre?"
+    return "Without memory: what ground does an animal choose at each step?"
 
 
 def counted_steps(run: MemoryContents) -> str:
@@ -119,15 +115,21 @@ def beyond_several(names: list[str], animals: list[str]) -> str:
     others = [name for name in names if name not in animals]
     every = len(animals) > 1 and len(names) - len(others) == len(animals)
     named = ["every animal"] if every else [name for name in names if name in animals]
-    return f"Of {listed(named + others)} the interval is longer than the record: its upper end is the prior speaking."
+    return f"The interval passes the record for {listed(named + others)}: its upper end is the prior speaking."
 
 
-def together_sentence(pairs: list[list[str]], weighted: bool) -> str:
-    """Which animals travel together, and what was done about it."""
-    named = listed([f"{first} with {second}" for first, second in pairs])
-    how = (
-        "They count together in population intervals: each weighs less than one animal (weights above)."
-        if weighted
-        else "Each still counts as one animal, so that population intervals may be too narrow."
-    )
+def together_sentence(pairs: list[list[Any]], pooled: bool, weighted: bool) -> str:
+    """Which animals travel together, with the share of simultaneous fixes, and what was done about it."""
+    named = listed([_pair(*pair) for pair in pairs])
+    if not pooled:
+        how = "Each is fitted alone, so that neither widens nor narrows the other’s intervals."
+    elif weighted:
+        how = "They count together in population intervals: each weighs less than one animal (weights above)."
+    else:
+        how = "Each still counts as one animal, so that population intervals may be too narrow."
     return f"Animals that travelled together: {named}. {how}"
+
+
+def _pair(first: str, second: str, share: float | None = None) -> str:
+    near = f" ({100 * float(share):.0f} % of simultaneous fixes)" if share is not None else ""
+    return f"{first} with {second}{near}"

@@ -93,11 +93,12 @@ def priors(run: RunContents, spreads: bool = False) -> list[tuple[str, str, str]
 
     Args:
         run: what the run folder holds.
-        spreads: list the priors of the spreads between animals too.
+        spreads: list the priors of the spreads and of the effects of covariates too.
     """
     card = run.facts["card"]
     fitted = {split_name(str(name))[0] for name in run.parameters["parameter"]}
-    fitted |= {f"{name} spread" for name in fitted} if spreads and card.get("pooling") == "hierarchical" else set()
+    if spreads:
+        fitted |= set(run.parameters["parameter"]) | {"covariate"}
     reasons, changed = card.get("prior_reasons") or {}, card.get("changed_priors") or []
     rows = []
     for name, words in (card.get("priors") or {}).items():

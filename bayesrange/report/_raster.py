@@ -7,6 +7,7 @@ from collections.abc import Sequence
 from pathlib import Path
 
 import rasterio
+from affine import Affine
 from jaxtyping import Float
 from numpy.typing import NDArray
 
@@ -40,6 +41,7 @@ def write_raster(
     names: Sequence[str],
     unit: str,
     tags: dict[str, str],
+    north_up: Affine | None = None,
 ) -> None:
     """Write bands (row 0 in the south) as a north-up GeoTIFF, whole or not at all.
 
@@ -50,6 +52,7 @@ def write_raster(
         names: what each band holds.
         unit: of all bands.
         tags: written into the file beside study and card.
+        north_up: transform of the raster, where it is not the run's grid [m].
     """
     file.parent.mkdir(parents=True, exist_ok=True)
     part = file.with_name(file.name + ".part")
@@ -63,7 +66,7 @@ def write_raster(
         count=count,
         dtype="float32",
         crs=run.crs.to_wkt(),
-        transform=run.north_up,
+        transform=run.north_up if north_up is None else north_up,
         nodata=float("nan"),
         compress="deflate",
         predictor=3,

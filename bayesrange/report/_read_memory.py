@@ -36,6 +36,11 @@ class MemoryContents(RunContents):
         """What selection is estimated for: the layers, or each layer by part of the day ("forage, night")."""
         return [str(name) for name in self.posterior["layer"].values] if "selection" in self.posterior else []
 
+    @cached_property
+    def harmonics(self) -> list[str]:
+        """Waves of the daily rhythm of step length, if it has one."""
+        return [str(name) for name in self.posterior["harmonic"].values] if "harmonic" in self.posterior else []
+
     @property
     def numerics(self) -> dict[str, Any]:
         """What run.json says of steps, quadrature and traces."""
@@ -70,12 +75,13 @@ class MemoryContents(RunContents):
 
         Names of layers and animals are looked up, not split at the comma, which may be part of a name.
         """
-        if not inner or (base == "selection" and inner in self.responses):
+        parts = {"selection": self.responses, "step_rhythm": self.harmonics}.get(base, [])
+        if not inner or inner in parts:
             return base, None
-        for layer in self.responses if base == "selection" else ():
-            one = inner.removeprefix(layer + ", ")
+        for part in parts:
+            one = inner.removeprefix(part + ", ")
             if one != inner and self._is_animal(one):
-                return f"{base}[{layer}]", one
+                return f"{base}[{part}]", one
         return (base, inner) if self._is_animal(inner) else (base, None)
 
     def _is_animal(self, name: str) -> bool:

@@ -11,13 +11,15 @@ from bayesrange.report._page_parts import found_number
 from bayesrange.report._read_memory import MemoryContents
 
 WANTED_SHIFT = 0.1
-MUCH_AUTOCORRELATION = 0.2
+MUCH_AUTOCORRELATION = 0.1
+SHIFTS_SHOWN = 10
 _COUNTS = {
     "not_nominal": "not nominal",
     "turn_unknown": "turn unknown",
     "short": "short",
     "off_ground": "off the ground",
     "learning": "learning",
+    "without_nodes": "no ground near",
 }
 _ALWAYS = ("not_nominal", "turn_unknown", "short")
 
@@ -69,11 +71,12 @@ def _median_step(run: MemoryContents, name: str) -> float:
 def _words(run: MemoryContents, shown: list[str]) -> list[str]:
     """What each column counts, for the columns that are there."""
     numerics = run.numerics
-    interval, tolerance = hours(float(numerics["interval_h"])), 100 * float(numerics["tolerance"])
+    interval, tolerance = hours(float(numerics["interval_h"])), numerics.get("tolerance")
+    more = f" by more than {100 * float(tolerance):g} %" if tolerance is not None else ""
     said = {
         "not_nominal": (
-            f"not nominal: intervals that differ from {interval} by more than {tolerance:g} %, mostly gaps; they give "
-            "no step, their time still counts in memory"
+            f"not nominal: intervals that differ from {interval}{more}, mostly gaps; they give no step, their time "
+            "still counts in memory"
         ),
         "turn_unknown": "turn unknown: the step before is missing or short; such a step keeps its length",
         "short": (
@@ -82,6 +85,7 @@ def _words(run: MemoryContents, shown: list[str]) -> list[str]:
         ),
         "off_ground": "off the ground: steps that start or end outside the habitable area; left out",
         "learning": "learning: steps of the first days, which only build memory",
+        "without_nodes": "no ground near: steps with hardly any habitable ground within reach; left out",
     }
     return [said[key] for key in shown]
 
@@ -90,14 +94,16 @@ def numerics(run: MemoryContents) -> dict[str, Any]:
     """What was approximated, how well, and what in the data may make intervals too narrow."""
     shifts = run.numerics.get("quadrature_shift") or {}
     largest = max((abs(float(value)) for value in shifts.values() if value is not None), default=math.nan)
-    together = [[str(name) for name in pair] for pair in run.numerics.get("together") or []]
+    together = [list(pair) for pair in run.numerics.get("together") or []]
+    order = sorted(shifts, key=lambda name: -abs(shifts[name]) if shifts[name] is not None else -math.inf)
     weighted = any(weight < 1 for weight in _weights(run).values())
     return {
         "rows": _accuracy(run, largest),
-        "shifts": [(str(name), *_shift(value)) for name, value in shifts.items()],
+        "shifts": [(str(name), *_shift(shifts[name])) for name in order[:SHIFTS_SHOWN]],
+        "other_shifts": len(order[SHIFTS_SHOWN:]),
         "autocorrelation": _autocorrelation(run),
         "autocorrelation_note": _autocorrelation_note(run),
-        "together": together_sentence(together, weighted) if together else "",
+        "together": together_sentence(together, run.hierarchical, weighted) if together else "",
     }
 
 
@@ -125,7 +131,7 @@ def _autocorrelation(run: MemoryContents) -> list[dict[str, Any]]:
     for name, found in (run.numerics.get("step_autocorrelation") or {}).items():
         lag, day = found_number(found, "lag_1"), found_number(found, "day")
         wide = f"{too_narrow(lag):.2f}" if math.isfinite(lag) else "–"
-        much = max(lag, day) > MUCH_AUTOCORRELATION
+        much = any(value > MUCH_AUTOCORRELATION for value in (lag, day))
         rows.append({"animal": str(name), "lag": fixed(lag, 2), "day": fixed(day, 2), "wide": wide, "much": much})
     return rows
 
@@ -143,16 +149,21 @@ def too_narrow(correlation: float) -> float:
 
 
 def _autocorrelation_note(run: MemoryContents) -> str:
-    """What the autocorrelation that is there means, in a sentence."""
-    much = [row["animal"] for row in _autocorrelation(run) if row["much"]]
-    if not much:
+    """What the autocorrelation that is there means, in a sentence or two."""
+    rows = _autocorrelation(run)
+    if not any(row["much"] for row in rows):
         return (
             f"None is above {MUCH_AUTOCORRELATION:g}: steps follow one another nearly as the model has it, and the "
             "intervals need no widening on this account."
         )
+    memory = ", for those of memory by an amount not known" if run.has_memory else ""
+    rhythm = (
+        ""
+        if run.harmonics
+        else ' Letting step length follow the hour (vary = ["step_length"]) takes the daily part away.'
+    )
     return (
         f"Above {MUCH_AUTOCORRELATION:g} (▲): long and short steps come in runs, by bouts of rest or by the hour, "
-        "which the model does not have. Its intervals are then too narrow: for step lengths by about the factor given, "
-        'for memory by an amount not known. Letting step length follow the hour (vary = ["step_length"]) takes the '
-        "daily part away."
+        "which the model takes as independent. Intervals are then too narrow: for those that rest on step lengths by "
+        f"about the factor given{memory}.{rhythm}"
     )

@@ -13,11 +13,8 @@ import numpy as np
 import pandas as pd
 import xarray as xr
 from arviz_stats import ess, rhat
+from fake_tracks import CELL_M, RANGE_M, RECORD_H, SHORTEST_M, SOUTH_M, WEST_M, place, steps_of, tracks
 
-CELL_M = 100.0
-WEST_M, SOUTH_M = 418_000.0, 6_120_000.0
-NX, NY = 70, 56
-RANGE_M, SHORTEST_M, RECORD_H = 150.0, 10.0, 700
 NAMES = [
     "Hind <b>1</b>", "Hind 2 $x$", "Stag/3", "Stag & 4", "Hind 5", "Stag 6, late", "Hind 7", "Stag 8 of the long name",
 ]  # fmt: skip
@@ -52,6 +49,7 @@ class Recipe:
     chains: int = 4
     draws: int = 50
     selection: float = 0.5
+    thin: int = 1
     card: str = "memory-resources"
     data: str = "one"
     seed: int = 3
@@ -65,37 +63,6 @@ class Recipe:
         return (
             [f"{name}, {part}" for name in self.layers for part in ("day", "night")] if self.daily else [*self.layers]
         )
-
-
-def place() -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-    """Cell centres x, y [m], the habitable share with a lake, and a layer in raw units."""
-    x, y = WEST_M + CELL_M * (np.arange(NX) + 0.5), SOUTH_M + CELL_M * (np.arange(NY) + 0.5)
-    column, row = np.meshgrid(np.arange(NX), np.arange(NY))
-    habitable = np.ones((NY, NX))
-    habitable[(column - 38) ** 2 + 2 * (row - 30) ** 2 < 22] = 0.0
-    habitable[column + row > NX + NY - 14] = 0.0
-    layer = 40 + 25 * np.sin(column / 7.0) * np.cos(row / 6.0 + 0.4)
-    return x, y, habitable, np.where(habitable > 0, layer, np.nan)
-
-
-def walk(recipe: Recipe, at: int, rng, x, y, habitable, layer) -> np.ndarray:
-    """Hourly positions [m] of one animal; each step is picked from candidates by forage and what is remembered."""
-    east, north = np.meshgrid(x, y)
-    forage = np.nan_to_num((layer - np.nanmean(layer)) / np.nanstd(layer), nan=-50.0)
-    here = np.array([WEST_M + 2200 + 600 * (at % 5), SOUTH_M + 1500 + 900 * (at // 3)], dtype=float)
-    trace, track = np.zeros(layer.shape), [here]
-    for _ in range(RECORD_H):
-        length = rng.gamma(1.2, 130.0, size=24) * (rng.random() > 0.05)
-        angle = rng.uniform(0, 2 * np.pi, size=24)
-        end = here + length[:, None] * np.column_stack([np.cos(angle), np.sin(angle)])
-        column = np.clip(((end[:, 0] - WEST_M) / CELL_M).astype(int), 0, NX - 1)
-        row = np.clip(((end[:, 1] - SOUTH_M) / CELL_M).astype(int), 0, NY - 1)
-        score = 0.5 * forage[row, column] + 3 * trace[row, column] / (trace[row, column] + 5.0)
-        weight = np.exp(score - score.max()) * (habitable[row, column] > 0)
-        trace = trace * np.exp(-1 / 520) + np.exp(-((east - here[0]) ** 2 + (north - here[1]) ** 2) / 2 / RANGE_M**2)
-        here = end[rng.choice(24, p=weight / weight.sum())]
-        track.append(here)
-    return np.array(track)
 
 
 def parameter_draws(recipe: Recipe, rng) -> dict[str, tuple[tuple[str, ...], np.ndarray]]:
@@ -143,42 +110,7 @@ def recall(recipe: Recipe, made, at: int, name: str, track: pd.DataFrame, x, y) 
     half = made["recall_half"][1]
     half = half.ravel() if recipe.hierarchical else half[..., at].ravel()
     trace = near @ (spent[:, None] * np.exp(-age[:, None] / decay))
-    return (trace / (trace + half)).T.reshape(-1, NY, NX)
-
-
-def tracks(recipe: Recipe, x, y, habitable, layer) -> pd.DataFrame:
-    """All fixes: animal, hour, x, y, heard; 3 % of the hours are missing."""
-    rng, parts = np.random.default_rng(7), []
-    for at, name in enumerate(recipe.names):
-        xy = walk(recipe, at, rng, x, y, habitable, layer)
-        table = pd.DataFrame({"animal": name, "hour": np.arange(len(xy)), "x": xy[:, 0], "y": xy[:, 1]})
-        keep = rng.random(len(table)) > 0.03
-        keep[[0, -1]] = True
-        parts.append(table[keep])
-    return pd.concat(parts, ignore_index=True)
-
-
-def steps_of(track: pd.DataFrame) -> tuple[pd.DataFrame, dict[str, int]]:
-    """Steps of one animal that count, with their kinds, and the counts of run.json."""
-    xy, hours = track[["x", "y"]].to_numpy(), np.diff(track["hour"])
-    move = np.diff(xy, axis=0)
-    length, heading = np.hypot(*move.T), np.arctan2(move[:, 1], move[:, 0])
-    nominal, short = hours == 1, np.hypot(*move.T) < SHORTEST_M
-    known = np.r_[False, nominal[:-1] & ~short[:-1]]
-    kind = np.where(short, "short", np.where(known, "full", "turn unknown"))
-    turn = np.where(kind == "full", np.angle(np.exp(1j * np.r_[0, np.diff(heading)])), np.nan)
-    table = pd.DataFrame(
-        {
-            "animal": track["animal"].iloc[0], "time": track["time"].to_numpy()[:-1], "length_m": length, "turn": turn,
-            "kind": kind, "start_x": xy[:-1, 0], "start_y": xy[:-1, 1], "x": xy[1:, 0], "y": xy[1:, 1],
-        }
-    )[nominal]  # fmt: skip
-    counts = {
-        "fixes": len(track), "steps": len(table), "not_nominal": int((~nominal).sum()),
-        "turn_unknown": int((table["kind"] == "turn unknown").sum()), "short": int((table["kind"] == "short").sum()),
-        "off_ground": 0, "learning": 0,
-    }  # fmt: skip
-    return table, counts
+    return (trace / (trace + half)).T.reshape(-1, y.size, x.size)
 
 
 def summary(recipe: Recipe, made) -> pd.DataFrame:
@@ -229,9 +161,9 @@ def facts(recipe: Recipe, table: pd.DataFrame, counts: dict) -> dict:
     """run.json."""
     digest = hashlib.sha256(recipe.data.encode()).hexdigest()
     other = hashlib.sha256(f"{recipe.card}{recipe.selection}".encode()).hexdigest()
-    shifts = {name: 0.02 + 0.005 * at for at, name in enumerate(table["parameter"][:8])}
+    shifts = {name: 0.02 + 0.005 * at for at, name in enumerate(table["parameter"][:14])}
     layers = {name: {"mean": 40.0, "sd": 17.0, "unit": "kg/ha", "reference": ""} for name in recipe.layers}
-    terms = ["steps"] + (["selection"] if recipe.layers else []) + (["memory"] if recipe.memory else [])
+    terms = ["steps"] + (["resources"] if recipe.layers else []) + (["memory"] if recipe.memory else [])
     return {
         "format": 1,
         "name": "Fell <i>of</i> Nowhere",
@@ -250,7 +182,7 @@ def facts(recipe: Recipe, table: pd.DataFrame, counts: dict) -> dict:
             "says": "At each step an animal weighs ground by <resources> and by what it remembers.",
             "not_when": "A place is good for a reason that no layer shows.",
             "pooling": "hierarchical" if recipe.hierarchical else "individual",
-            "priors": {"step_shape": "log-normal (median 1, spread 0.5)", "reference_decay": "log-normal (median 500 h)"},
+            "priors": {"step_shape": "log-normal (median 1, spread 0.5)", "reference_decay": "log-normal (500 h)"},
             "prior_reasons": {"reference_decay": "From days to a season."},
             "changed_priors": [],
             "references": ["Nobody, A. (2031). An invented paper."],
@@ -266,8 +198,8 @@ def facts(recipe: Recipe, table: pd.DataFrame, counts: dict) -> dict:
             "interval_h": 1.0, "tolerance": 0.1, "shortest_step_m": SHORTEST_M,
             "encoding_range_m": None if recipe.estimate_range else RANGE_M, "nodes": 64, "columns": 18,
             "trace_error": 2.4e-4, "trace_error_limit": 1e-3, "quadrature_shift": shifts,
-            "step_autocorrelation": {name: {"lag_1": 0.04 + 0.05 * at, "day": 0.02} for at, name in enumerate(counts)},
-            "together": [recipe.names[:2]] if recipe.animals > 1 else [],
+            "step_autocorrelation": {name: {"lag_1": 0.02 + 0.03 * at, "day": 0.02} for at, name in enumerate(counts)},
+            "together": [[*recipe.names[:2], 0.83]] if recipe.animals > 1 else [],
             "record_h": {name: float(RECORD_H) for name in counts}, "steps": counts,
         },
         "diagnostics": {
@@ -286,8 +218,7 @@ def build_run(folder: Path, recipe: Recipe = Recipe()) -> Path:
     """Write a run folder without a report."""
     rng = np.random.default_rng(recipe.seed)
     x, y, habitable, layer = place()
-    fixes = tracks(recipe, x, y, habitable, layer)
-    fixes["time"] = pd.Timestamp("2031-04-02 06:00") + pd.to_timedelta(fixes["hour"], unit="h")
+    fixes = tracks(recipe.names, x, y, habitable, layer)
     by_animal = {name: steps_of(fixes[fixes["animal"] == name]) for name in recipe.names}
     steps = pd.concat([table for table, _ in by_animal.values()], ignore_index=True)
     made = parameter_draws(recipe, rng)
@@ -314,7 +245,7 @@ def build_run(folder: Path, recipe: Recipe = Recipe()) -> Path:
         "constant_data": xr.Dataset(constant, coords=coords),
     }  # fmt: skip
     if recipe.memory:
-        groups["memory_use"] = memory_use(recipe, made, fixes, x, y, habitable)
+        groups["memory_use"] = memory_use(recipe, made, fixes, x, y)
     (folder / "tables").mkdir(parents=True)
     xr.DataTree.from_dict(groups).to_netcdf(folder / "posterior.nc", engine="h5netcdf")
     table = summary(recipe, made)
@@ -329,14 +260,15 @@ def weights(recipe: Recipe) -> np.ndarray:
     return np.array([0.5 if recipe.hierarchical and at < 2 else 1.0 for at in range(recipe.animals)])
 
 
-def memory_use(recipe: Recipe, made, fixes, x, y, habitable) -> xr.Dataset:
-    """Recall at the end of each record, over the draws."""
-    hidden, parts = np.where(habitable > 0, 1.0, np.nan), []
+def memory_use(recipe: Recipe, made, fixes, x, y) -> xr.Dataset:
+    """Recall at the end of each record, over the draws; a thinned surface keeps every so many cells."""
+    parts = []
+    x, y = (axis[recipe.thin // 2 :: recipe.thin] for axis in (x, y))
     for at, name in enumerate(recipe.names):
         mine = fixes[fixes["animal"] == name]
         reference = recall(recipe, made, at, "reference_decay", mine, x, y)
         working = recall(recipe, made, at, "working_decay", mine, x, y)
-        parts.append([reference.mean(0) * hidden, reference.std(0) * hidden, working.mean(0) * hidden])
+        parts.append([reference.mean(0), reference.std(0), working.mean(0)])
     stacked = np.array(parts)
     dims = ("animal", "y", "x")
     return xr.Dataset(
@@ -347,6 +279,6 @@ def memory_use(recipe: Recipe, made, fixes, x, y, habitable) -> xr.Dataset:
 
 RECIPES = {
     "hierarchical": Recipe(),
-    "individual": Recipe(animals=3, hierarchical=False, layers=("forage", "cover"), draws=25, seed=5),
+    "individual": Recipe(animals=3, hierarchical=False, layers=("forage", "cover"), draws=25, seed=5, thin=2),
     "null": Recipe(animals=3, memory=False, card="steps-home", home=True, draws=25, converged=False),
 }

@@ -7,10 +7,18 @@ from pathlib import Path
 
 import pytest
 
-# Test files are imported by path, so that a helper beside them is no importable module.
-_spec = importlib.util.spec_from_file_location("fake_run", Path(__file__).with_name("_fake_run.py"))
-fake_run = sys.modules["fake_run"] = importlib.util.module_from_spec(_spec)
-_spec.loader.exec_module(fake_run)
+
+def _beside(name: str):
+    """A helper file: test files are imported by path, so that a file beside them is no importable module."""
+    spec = importlib.util.spec_from_file_location(name, Path(__file__).with_name(f"_{name}.py"))
+    module = sys.modules[name] = importlib.util.module_from_spec(spec)
+    spec.loader.exec_module(module)
+    return module
+
+
+fake_run = _beside("fake_run")
+_beside("fake_tracks")
+fake_memory_run = _beside("fake_memory_run")
 
 
 @dataclass(frozen=True)
