@@ -12,11 +12,13 @@ import numpy as np
 import pandas as pd
 
 from bayesrange._errors import StudyError
+from bayesrange.study._bearing_fixes import bearing_fixes
 from bayesrange.study._crs import parse_crs
-from bayesrange.study._darwin_core import SD_PER_RADIUS, UNCERTAINTY, with_darwin_core
+from bayesrange.study._darwin_core import with_darwin_core
 from bayesrange.study._deployments import assign_animals, read_deployments
 from bayesrange.study._keep import by_column
-from bayesrange.study._settings import AnimalsSection, FixesSection
+from bayesrange.study._location_error import location_error
+from bayesrange.study._settings import AnimalsSection, BearingsSection, FixesSection
 from bayesrange.study._sources import ENDINGS, read_source
 from bayesrange.study._tables import (
     column_or_error,
@@ -45,7 +47,11 @@ class RawFixes:
 
 
 def read_fixes(
-    folder: Path, section: FixesSection, animals: AnimalsSection | None = None, study_crs: str | None = None
+    folder: Path,
+    section: FixesSection,
+    animals: AnimalsSection | None = None,
+    study_crs: str | None = None,
+    bearings: BearingsSection | None = None,
 ) -> RawFixes:
     """All fixes of the study, sorted by animal and time; those outside any deployment are set aside.
 
@@ -54,33 +60,47 @@ def read_fixes(
         section: `[fixes]`.
         animals: `[animals]`.
         study_crs: reference system of files that name none.
+        bearings: `[bearings]`, whose places are put to the fixes.
 
     Raises:
         StudyError: names file, line and column of what is wrong.
     """
-    files = _files(folder, [section.file] if isinstance(section.file, str) else section.file)
+    files = _files(folder, section.file, "[fixes] file")
     parts, failed, counts, warnings, systems = [], [], {"rows": 0, "failed": 0}, [], set()
     for name, path in files.items():
         table, crs = read_source(path, name, section)
         own = with_darwin_core(_own_system(section, crs, name), table, name)
-        part, said = _fixes_of(table, own, name)
+        part, said = _fixes_of(table, own, name, folder)
         systems.add(own.crs)
         counts["rows"] += len(table)
         counts["failed"] += len(table) - len(part)
         warnings += said
         parts.append(part)
         failed.append(_failed_of(table, own, name))
-    fixes = pd.concat(parts, ignore_index=True)
-    if fixes.empty:
-        raise StudyError(f"{first_few(files)}: there is no fix with coordinates ({counts['rows']} rows).")
+    if section.error_table is not None:
+        files[section.error_table] = folder / section.error_table
     if len(systems) > 1 and systems <= {None, study_crs}:
         systems = {None}
     if len(systems) > 1:
         raise StudyError("[fixes] file: the files are in more than one reference system; read them as one study each.")
-    one_name_each(fixes["animal"].unique(), "tags" if section.tag else "animals", first_few(files))
+    if bearings is not None:
+        sources = _files(folder, bearings.file, "[bearings] file")
+        found = bearing_fixes(folder, bearings, sources, section.zone, study_crs)
+        parts.append(found.in_system(next(iter(systems))) if systems else found.table)
+        systems = systems or {found.crs}
+        counts |= found.counts
+        warnings += found.warnings
+        files |= found.files
+    fixes = pd.concat(parts, ignore_index=True)
+    if "flag" in fixes:
+        fixes["flag"] = fixes["flag"].fillna("").astype("str")
+    if fixes.empty:
+        raise StudyError(f"{first_few(files)}: there is no fix with coordinates ({counts['rows']} rows).")
+    by_tag = (section.tag or (bearings.tag if bearings else None)) is not None
+    one_name_each(fixes["animal"].unique(), "tags" if by_tag else "animals", first_few(files))
     deployments = None
     if animals is not None and animals.file is not None:
-        deployments = read_deployments(folder, animals, section.zone, section.tag is not None)
+        deployments = read_deployments(folder, animals, section.zone, by_tag)
         fixes, set_aside, said = assign_animals(fixes, deployments, animals.file)
         counts |= set_aside
         warnings += said
@@ -94,9 +114,9 @@ def read_fixes(
     return RawFixes(fixes, counts, warnings, files, systems.pop(), deployments, left_out)
 
 
-def _files(folder: Path, given: list[str]) -> dict[str, Path]:
+def _files(folder: Path, given: str | list[str] | None, key: str) -> dict[str, Path]:
     found: dict[str, Path] = {}
-    for entry in given:
+    for entry in [given] if isinstance(given, str) else given or []:
         path = folder / entry
         if path.is_dir():
             names = sorted(str(Path(entry) / p.name) for p in path.iterdir() if p.suffix.lower() in ENDINGS)
@@ -105,12 +125,12 @@ def _files(folder: Path, given: list[str]) -> dict[str, Path]:
         else:
             names = [entry]
         if not names:
-            raise StudyError(f'[fixes] file: no file matches "{entry}" beside the study file.')
+            raise StudyError(f'{key}: no file matches "{entry}" beside the study file.')
         found |= {Path(name).as_posix(): folder / name for name in names}
     return found
 
 
-def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd.DataFrame, list[str]]:
+def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str, folder: Path) -> tuple[pd.DataFrame, list[str]]:
     x = column_or_error(table, section.x, name, "[fixes] x names")
     y = column_or_error(table, section.y, name, "[fixes] y names")
     half = ((x == "") != (y == "")).to_numpy()
@@ -125,7 +145,7 @@ def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd
         raise StudyError(f"{name}, line {table.index[animal == ''][0]}: the {key} is blank; name it.")
     texts = _time_texts(table, section, name)
     times, said = read_times(texts, section.zone, name)
-    error, said_of_error = _errors(table, section, name)
+    error = location_error(table, section, name, folder)
     if has_decimal_commas(table[section.x]) or has_decimal_commas(table[section.y]):
         said.append(f"{name}: {section.x} and {section.y} are written with decimal commas and were read so.")
     part = pd.DataFrame(
@@ -135,14 +155,14 @@ def _fixes_of(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[pd
             "x": numbers(table[section.x], name),
             "y": numbers(table[section.y], name),
             "group": _groups(table, section, name),
-            "error_m": error,
+            **error.columns,
             "file": name,
             "row": table.index.to_numpy(dtype=np.int64),
             "minutes": clock_minutes(texts, times, section.zone) if section.keep and section.keep.hours else 0,
             "kept_by_column": by_column(table, section.keep, name),
         }
     ).astype({"animal": "str", "group": "str", "file": "str"})
-    return part, said + said_of_error
+    return part, said + error.said
 
 
 def _failed_of(table: pd.DataFrame, section: FixesSection, name: str) -> pd.DataFrame:
@@ -179,25 +199,6 @@ def _groups(table: pd.DataFrame, section: FixesSection, name: str) -> np.ndarray
     if section.group not in table.columns and "group" not in section.model_fields_set:
         return np.full(len(table), "")
     return column_or_error(table, section.group, name, "[fixes] group names").to_numpy()
-
-
-def _errors(table: pd.DataFrame, section: FixesSection, name: str) -> tuple[np.ndarray, list[str]]:
-    """Standard deviation per axis [m]; 0 where none is known."""
-    if isinstance(section.error, float | int):
-        return np.full(len(table), float(section.error)), []
-    if section.error not in table.columns and "error" not in section.model_fields_set:
-        return np.zeros(len(table)), []
-    texts = column_or_error(table, section.error, name, "[fixes] error names")
-    error = numbers(texts, name, blank=0.0)
-    if (error < 0).any():
-        line = table.index[error < 0][0]
-        raise StudyError(f'{name}, line {line}: the error is "{texts[line]}"; expected at least 0 m (sd per axis).')
-    blank, remarks = int((texts == "").sum()), []
-    if section.error == UNCERTAINTY:
-        error = error * SD_PER_RADIUS
-        remarks.append(f"{name}: {UNCERTAINTY} was read as the radius of a 95 % circle, sd per axis = radius / 2.4477.")
-    said = f"{name}: {counted(blank, 'fix has', 'fixes have')} no error given, taken as exact."
-    return error, [*remarks, said] if blank else remarks
 
 
 def _refuse_repeats(fixes: pd.DataFrame) -> None:

@@ -8,6 +8,7 @@ import pyproj
 
 from bayesrange._errors import StudyError
 from bayesrange.study._crs import carry, crs_text, look_like_degrees, metric_crs, parse_crs, utm_for
+from bayesrange.study._ellipses import place_ellipses
 from bayesrange.study._fixes import RawFixes
 from bayesrange.study._groups import groups_of_fixes, match_groups, read_groups
 from bayesrange.study._periods import Span
@@ -52,7 +53,7 @@ def placed(table: pd.DataFrame, source: pyproj.CRS, target: pyproj.CRS) -> pd.Da
             f"{row['file']}, line {row['row']}: x = {row['x']:.10g}, y = {row['y']:.10g} lies where [study] crs "
             "does not reach; check [fixes] crs and the order of x and y."
         )
-    return table.assign(x=x, y=y)
+    return place_ellipses(table, x, y, source, target).assign(x=x, y=y)
 
 
 def placed_groups(

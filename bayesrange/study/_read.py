@@ -43,7 +43,10 @@ class Study:
         area: the study area's polygon in `crs`.
         grid: the cells over it.
         fixes: sorted by animal and time; animal, time (UTC), x, y [m], group ("" if none), error_m (standard deviation
-            per axis, 0 if none), file and row (line number).
+            per axis, 0 if none), file and row (line number). Where some error is an ellipse also error_major_m and
+            error_minor_m (semi-axes as standard deviations) and error_bearing_deg (of the long one, clockwise from grid
+            north); error_m is then the root of their mean variance. Where places come from bearings also flag (what is
+            doubtful about the place, "" if nothing).
         groups: group, x, y [m; NaN: to be estimated], animals (at least 1), then the covariates.
         layers: by name, no-go layers left out.
         counts: what was read and set aside.
@@ -89,7 +92,7 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     path = locate_study(path)
     settings, folder = read_settings(path), path.parent
     settings, span = for_period(settings, period, path.name)
-    raw = read_fixes(folder, settings.fixes, settings.animals, settings.study.crs)
+    raw = read_fixes(folder, settings.fixes, settings.animals, settings.study.crs, settings.bearings)
     crs, fixes_crs, said_of_crs = reference_systems(settings, raw)
     area = read_area(folder / settings.study.area, settings.study.area, crs)
     said_of_crs += scale_warnings(crs, area.representative_point().x, area.representative_point().y)

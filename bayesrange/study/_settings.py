@@ -56,8 +56,8 @@ class DropSection(Section):
 class FixesSection(Section):
     """`[fixes]`: files and columns of the relocations."""
 
-    file: Name | list[Name] = Field(
-        description='a file, a pattern such as "collars/*.csv", a folder, or a list of them'
+    file: Name | list[Name] | None = Field(
+        None, description='a file, a pattern such as "collars/*.csv", a folder, or a list of them'
     )
     animal: Name = Field("animal", description=A_COLUMN)
     tag: Name | None = Field(None, description=A_COLUMN)
@@ -68,6 +68,14 @@ class FixesSection(Section):
     error: Name | Annotated[float, Field(ge=0, allow_inf_nan=False)] = Field(
         "error_m", description="a column, or a number of metres of at least 0 (standard deviation per axis)"
     )
+    hdop: Name | None = Field(None, description=A_COLUMN)
+    uere_m: Metres | None = Field(None, description=METRES)
+    error_class: Name | None = Field(None, description=A_COLUMN)
+    error_table: Name | None = Field(None, description=A_FILE)
+    error_major: Name | None = Field(None, description=A_COLUMN)
+    error_minor: Name | None = Field(None, description=A_COLUMN)
+    error_bearing: Name | None = Field(None, description=A_COLUMN)
+    error_level: Share | None = Field(None, description="a share between 0 and 1 such as 0.95")
     zone: Name | None = Field(None, description='a time zone such as "Europe/Oslo"')
     crs: Name | None = Field(None, description='the reference system of x and y, such as "EPSG:4326"')
     max_speed_kmh: float | None = Field(
@@ -75,6 +83,35 @@ class FixesSection(Section):
     )
     keep: KeepSection | None = Field(None, description="the keys sun, hours or column")
     drop: DropSection | None = Field(None, description='the key flags, such as flags = ["duplicate", "speed"]')
+
+
+class BearingsSection(Section):
+    """`[bearings]`: directions to the animal, taken from stations, from which its places are computed."""
+
+    file: Name | list[Name] = Field(description='a file, a pattern such as "vhf/*.csv", a folder, or a list of them')
+    animal: Name = Field("animal", description=A_COLUMN)
+    tag: Name | None = Field(None, description=A_COLUMN)
+    time: Name = Field("time", description=A_COLUMN)
+    station: Name = Field("station", description=A_COLUMN)
+    bearing: Name = Field("bearing", description=A_COLUMN)
+    set: Name = Field("set", description=A_COLUMN)
+    observer: Name = Field("observer", description=A_COLUMN)
+    group: Name = Field("group", description=A_COLUMN)
+    stations: Name | None = Field(None, description="the file with the stations (station,x,y) in quotes")
+    station_x: Name = Field("station_x", description=A_COLUMN)
+    station_y: Name = Field("station_y", description=A_COLUMN)
+    crs: Name | None = Field(None, description='the reference system of the stations, such as "EPSG:4326"')
+    zone: Name | None = Field(None, description='a time zone such as "Europe/Oslo"')
+    north: Literal["magnetic", "true", "grid"] = Field(description='"magnetic", "true" or "grid"')
+    declination: Name | Annotated[float, Field(ge=-180, le=180)] | None = Field(
+        None, description="a number of degrees, east positive, or a column"
+    )
+    window_min: Annotated[float, Field(gt=0, allow_inf_nan=False)] | None = Field(
+        None, description="a number of minutes above 0"
+    )
+    sd_deg: Annotated[float, Field(gt=0, lt=90)] | dict[str, float] | None = Field(
+        None, description="a number of degrees above 0 and below 90, or one an observer such as { KL = 4, MM = 6 }"
+    )
 
 
 class AnimalsSection(Section):
@@ -166,7 +203,8 @@ class StudySettings(Section):
     """The whole study file."""
 
     study: StudySection = Field(description="the section [study]")
-    fixes: FixesSection = Field(description="the section [fixes]")
+    fixes: FixesSection = Field(FixesSection(), description="the section [fixes]")
+    bearings: BearingsSection | None = Field(None, description="the section [bearings]")
     animals: AnimalsSection | None = Field(None, description="the section [animals]")
     groups: GroupsSection | None = Field(None, description="the section [groups]")
     periods: dict[str, PeriodSection] = Field({}, description="periods such as before = { from = …, until = … }")

@@ -13,6 +13,7 @@ from typing import Any, NamedTuple, get_args
 from pydantic import BaseModel, ValidationError
 
 from bayesrange._errors import StudyError
+from bayesrange.study._fix_keys import fix_problems
 from bayesrange.study._layer_keys import layer_problems
 from bayesrange.study._period_keys import animal_problems, period_problems
 from bayesrange.study._settings import LayerSection, PeriodSection, Section, StudySettings
@@ -212,6 +213,7 @@ def _as_toml(value: Any) -> str:
 
 def _contradictions(s: StudySettings) -> Iterator[str]:
     """Values that are each well-formed but do not go together."""
+    yield from fix_problems(s)
     for name, layer in s.layers.items():
         yield from layer_problems(name, layer)
     yield from period_problems(s)
