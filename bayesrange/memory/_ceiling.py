@@ -87,7 +87,9 @@ def tile_of(tiles: Tiles, x: Float[Array, " places"], y: Float[Array, " places"]
     return (row * columns + column).astype(jnp.int32)
 
 
-def _distances(edges: Float[Array, " n+1"], at: Float[Array, ""]) -> tuple[Float[Array, " n"], Float[Array, " n"]]:
+def _distances(
+    edges: Float[Array, " edges"], at: Float[Array, ""]
+) -> tuple[Float[Array, " edges-1"], Float[Array, " edges-1"]]:
     """Smallest and largest distance along one axis from a place to each interval between edges [km]."""
     low, high = edges[:-1] - at, at - edges[1:]
     return jnp.maximum(jnp.maximum(low, high), 0.0), jnp.maximum(jnp.abs(low), jnp.abs(high))

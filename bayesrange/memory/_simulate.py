@@ -29,7 +29,7 @@ from bayesrange.memory._walk import (
 WALK_SENTENCES = {
     WALKED: "The track was drawn to its end.",
     NO_STEP_FOUND: "No step was accepted within the allowed number of proposals: almost no habitable ground lies "
-    "within reach, or selection and memory are so strong that a step has hardly a chance; allow more with `most_tries`.",
+    "within reach, or selection and memory are so strong that a step hardly has a chance; raise `most_tries`.",
     CEILING_BROKEN: "A place attracted more than its bound allows: the simulator is wrong here, and the track is no "
     "draw from the model.",
     NOT_A_MODEL: "A parameter, time or place is not finite, or a step's shape or scale, a decay time, `recall_half` "

@@ -16,9 +16,9 @@ from bayesrange.memory._landscape import Landscape, allowed, read_layers
 from bayesrange.memory._likelihood import StepParameters
 from bayesrange.memory._proposals import Kernel, make_kernel, propose
 
-TRIES = 64
+TRIES = 16
 """Proposals drawn at a time."""
-CANDIDATES = 2
+CANDIDATES = 4
 """Proposals of a batch whose traces are summed; those behind them are dropped unseen."""
 CHUNK = 256
 """Stays summed at a time."""
