@@ -1,7 +1,9 @@
 """Which cells a fix reads, and with what weights: location error as a fixed quadrature.
 
 The error is integrated by Gauss–Hermite on the bilinear density: 1 node below 0.1 cell, 3 per axis to 1 cell, 5 to 2;
-beyond that by the Gaussian mass of each cell. None of it depends on the parameters, so it is done once.
+beyond that by the Gaussian mass of each cell. An ellipse has nodes along its own axes, as many as each axis asks for;
+beyond 2 cells the Gaussian mass of strips half a cell wide across the axis. None of it depends on the parameters, so
+it is done once.
 """
 
 from collections.abc import Iterator
@@ -19,8 +21,14 @@ REACH = 5.0
 """Error sds beyond which cell masses are left out (less than 1e-6 of the mass)."""
 
 
+STRIP = 0.5
+"""Width of the strips across a long axis of an ellipse, in cells."""
+
+_CIRCLE = 1e-6  # an ellipse whose axes differ by less than this share is a circle
+
+
 def fix_entries(
-    grid: Grid, x: np.ndarray, y: np.ndarray, error_m: np.ndarray, reading: str
+    grid: Grid, x: np.ndarray, y: np.ndarray, error_m: np.ndarray, reading: str, ellipse: np.ndarray | None = None
 ) -> tuple[np.ndarray, np.ndarray]:
     """Cells and log weights of each fix, padded to the longest.
 
@@ -30,6 +38,8 @@ def fix_entries(
         y: northing [m].
         error_m: error sd per axis [m]; 0 where the place is known.
         reading: "bilinear" or "cell".
+        ellipse: where some error is one: sd along the long axis and across it [m] and the azimuth of the long axis
+            [degrees clockwise from grid north] of each fix (fixes, 3); with equal axes `error_m` counts.
 
     Returns:
         Flat cell index (fixes, entries) and log weight, −inf for padding.
@@ -39,6 +49,10 @@ def fix_entries(
     """
     order = np.digitize(error_m / grid.cell_m, [limit for limit, _ in ORDERS])
     pieces: list[tuple[np.ndarray, np.ndarray, np.ndarray]] = []
+    if ellipse is not None:
+        oblong = ellipse[:, 0] > ellipse[:, 1] * (1 + _CIRCLE)
+        order[oblong] = -1
+        pieces.extend(_oblong(grid, np.flatnonzero(oblong), x, y, ellipse, reading))
     for level, (_, nodes) in enumerate(ORDERS):
         chosen = np.flatnonzero(order == level)
         pieces.append(_hermite(grid, chosen, x, y, error_m, nodes, reading))
@@ -63,6 +77,13 @@ def _hermite(
     mass = np.tile(node_weight, chosen.size)
     if nodes > 1:  # a single node is the fix itself, which the study reader has found on habitable ground
         mass = mass * grid.habitable_at(node_x, node_y)
+    return _read_nodes(grid, fix, node_x, node_y, mass, reading)
+
+
+def _read_nodes(
+    grid: Grid, fix: np.ndarray, node_x: np.ndarray, node_y: np.ndarray, mass: np.ndarray, reading: str
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Entries of places with a mass each."""
     if reading == "cell":
         rows, columns = grid.cell_of(node_x, node_y)
         within = (rows >= 0) & (rows < grid.shape[0]) & (columns >= 0) & (columns < grid.shape[1])
@@ -72,6 +93,39 @@ def _hermite(
     rows, columns, corner = grid.bilinear(node_x, node_y)
     flat = rows * grid.shape[1] + columns
     return np.repeat(fix, 4), flat.ravel(), (corner * mass[:, None]).ravel()
+
+
+def _oblong(
+    grid: Grid, chosen: np.ndarray, x: np.ndarray, y: np.ndarray, ellipse: np.ndarray, reading: str
+) -> Iterator[tuple[np.ndarray, np.ndarray, np.ndarray]]:
+    """Entries of elliptical errors, merged within each fix as a long axis has many nodes."""
+    cells = grid.shape[0] * grid.shape[1]
+    corner_x, corner_y = np.meshgrid(grid.x_m[[0, -1]], grid.y_m[[0, -1]])
+    for k in chosen:
+        furthest = np.hypot(corner_x - x[k], corner_y - y[k]).max() + grid.cell_m
+        (along, mass_along), (across, mass_across) = (_axis_nodes(sd, grid.cell_m, furthest) for sd in ellipse[k, :2])
+        s, c = np.sin(np.radians(ellipse[k, 2])), np.cos(np.radians(ellipse[k, 2]))
+        node_x = (x[k] + s * along[:, None] + c * across).ravel()
+        node_y = (y[k] + c * along[:, None] - s * across).ravel()
+        mass = np.outer(mass_along, mass_across).ravel()
+        if mass.size > 1:
+            ground = grid.habitable_at(node_x, node_y)
+            node_x, node_y, mass = node_x[ground], node_y[ground], mass[ground]
+        _, cell, share = _read_nodes(grid, np.full(mass.size, k), node_x, node_y, mass, reading)
+        total = np.bincount(cell, share, minlength=cells)
+        used = np.flatnonzero(total)
+        yield np.full(used.size, k), used, total[used]
+
+
+def _axis_nodes(sd: float, cell_m: float, furthest_m: float) -> tuple[np.ndarray, np.ndarray]:
+    """Offsets along one axis of an ellipse [m] and the Gaussian mass of each."""
+    level = int(np.digitize(sd / cell_m, [limit for limit, _ in ORDERS]))
+    if level < len(ORDERS):
+        at, weight = np.polynomial.hermite_e.hermegauss(ORDERS[level][1])
+        return sd * at, weight / weight.sum()
+    reach = min(REACH * sd, furthest_m)
+    edges = np.linspace(-reach, reach, int(np.ceil(2 * reach / (STRIP * cell_m))) + 1)
+    return (edges[:-1] + edges[1:]) / 2, np.diff(ndtr(edges / sd))
 
 
 def _cell_masses(
