@@ -21,6 +21,9 @@ REACH = 5.0
 """Error sds beyond which cell masses are left out (less than 1e-6 of the mass)."""
 
 
+ELLIPSE = ["error_major_m", "error_minor_m", "error_bearing_deg"]
+"""Columns of a study's fixes where some error is an ellipse."""
+
 STRIP = 0.5
 """Width of the strips across a long axis of an ellipse, in cells."""
 

@@ -4,7 +4,7 @@ import numpy as np
 
 from bayesrange._errors import StudyError
 from bayesrange.inference._cards import VARYING, Card
-from bayesrange.inference._fix_entries import fix_entries
+from bayesrange.inference._fix_entries import ELLIPSE, fix_entries
 from bayesrange.inference._range_data import RangeData, RangeSpec
 from bayesrange.inference._scales import Scales
 from bayesrange.spaceuse import Reading, Setting, make_domain
@@ -143,7 +143,8 @@ def make_data(study: Study, card: Card, spec: RangeSpec, scales: Scales, weight:
     """
     grid, fixes, groups = study.grid, study.fixes, study.groups
     x, y = fixes["x"].to_numpy(float), fixes["y"].to_numpy(float)
-    cell, log_share = fix_entries(grid, x, y, fixes["error_m"].to_numpy(float), study.settings.model.reading)
+    ellipse = fixes[ELLIPSE].to_numpy(float) if ELLIPSE[0] in fixes else None
+    cell, log_share = fix_entries(grid, x, y, fixes["error_m"].to_numpy(float), study.settings.model.reading, ellipse)
     owner = fixes["group"].map({name: i for i, name in enumerate(groups["group"])}).to_numpy(np.int32)
     share = grid.basis_share if study.settings.model.reading == "bilinear" else grid.habitable
     padding = -len(fixes) % BUCKET

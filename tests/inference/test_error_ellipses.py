@@ -2,10 +2,11 @@
 
 import numpy as np
 import pytest
-from inference._tiny_study import SOUTH, WEST
+from inference._tiny_study import SOUTH, WEST, fixes_table, write_study
 from scipy import interpolate, stats
 
-from bayesrange.inference import fix_entries
+from bayesrange.inference import find_card, fix_entries, make_data, make_scales, make_spec, read_card
+from bayesrange.study import read_study
 
 
 def read(grid, values, x, y, ellipse, reading="bilinear"):
@@ -119,3 +120,26 @@ def test_an_ellipse_wider_than_the_area_is_read_within_it(study):
     # A ribbon of sd 900 m across an area of 2.4 km: along the ribbon its density is 1/(√(2π) 40 km)
     assert mass[0] == pytest.approx(2400 * 2400 / (2 * np.pi * 40_000 * 900), rel=0.25)
     assert mass[0] < 2400 * 2400 / (2 * np.pi * 40_000 * 900)
+
+
+def test_a_range_model_reads_the_ellipses_of_its_study(tmp_path):
+    fixes = fixes_table().assign(major="", minor="", turn="")
+    middle = fixes["x"].between(WEST + 600, WEST + 1500) & fixes["y"].between(SOUTH + 600, SOUTH + 1800)
+    fixes.loc[middle, ["major", "minor", "turn"]] = ["180", "60", "35"]
+    path = write_study(tmp_path, fixes, model={"card": "localising", "layers": []})
+    keys = 'error_major = "major"\nerror_minor = "minor"\nerror_bearing = "turn"\n'
+    path.write_text(path.read_text().replace("[fixes]\n", "[fixes]\n" + keys))
+    study, card = read_study(path), read_card(find_card("localising"))
+    spec, scales = make_spec(study, card), make_scales(study, [])
+    reading = make_data(study, card, spec, scales, np.ones(len(study.fixes))).reading
+    table = study.fixes
+    oblong = (table["error_major_m"] == 180).to_numpy()
+    assert oblong.sum() == middle.sum() > 20
+    expected = fix_entries(
+        study.grid,
+        *(table[c].to_numpy(float) for c in ("x", "y", "error_m")),
+        "bilinear",
+        np.column_stack([180.0 * oblong, 60.0 * oblong, 35.0 * oblong]),
+    )
+    for part, wanted in zip((reading.cell, reading.log_share), expected, strict=True):
+        np.testing.assert_array_equal(part[: len(table)], wanted)
