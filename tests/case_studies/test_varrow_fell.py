@@ -79,8 +79,8 @@ def past(fell):
     return track, near[fell.habitable(near)][:2000]
 
 
-def remembered(place, track, node_m=walking.NODE_M):
-    weight = walking.Weight(place, cats.POPULATION, node_m)
+def remembered(place, track, node_m=walking.NODE_M, cat=cats.POPULATION):
+    weight = walking.Weight(place, cat, node_m)
     for xy in track[:-1]:
         weight.spend(xy, 1.0)
     return weight
@@ -97,6 +97,34 @@ def test_memory_is_the_sum_of_fading_marks(fell, past):
         # a series in closed form, and the bound that rejection relies on
         assert memory.most == pytest.approx(hours, rel=1e-12)
         assert exact.max() < memory.most
+
+
+def test_a_walk_remembers_every_hour_but_the_one_that_starts_now(fell, monkeypatch):
+    seen, draw = [], walking.end_point
+
+    def watched(place, cat, weight, xy, heading, rng):
+        if seen:
+            at = np.array([xy for xy, _ in seen] + [xy])
+            # 1e-3 of an hour per hour: the reading between the nodes
+            close = {"rtol": 0.0, "atol": 1.2e-3 * len(at)}
+            np.testing.assert_allclose(weight.working(at), sum_of_marks(at, cat.working_decay, at), **close)
+            np.testing.assert_allclose(weight.reference(at), sum_of_marks(at, cat.reference_decay, at), **close)
+        else:
+            assert weight.reference.most == 0.0 and weight.working(xy[None]) == 0.0
+        assert np.isnan(heading) == (len(seen) == 0)
+        if seen:
+            step = seen[-1][1] - seen[-1][0]
+            assert np.exp(1j * heading) == pytest.approx(complex(*step) / np.hypot(*step))
+        end, direction = draw(place, cat, weight, xy, heading, rng)
+        seen.append((xy.copy(), end))
+        return end, direction
+
+    monkeypatch.setattr(walking, "end_point", watched)
+    start = np.add((8500.0, 9300.0), place_module.ORIGIN_M)
+    track = walking.walk(fell, cats.POPULATION, start, 30, np.random.default_rng(7))
+    assert len(seen) == 30
+    np.testing.assert_array_equal(track[1:], [end for _, end in seen])
+    np.testing.assert_array_equal(track[:-1], [xy for xy, _ in seen])
 
 
 def test_reading_between_the_nodes_is_of_second_order(fell, past):
@@ -125,6 +153,20 @@ def test_weight_is_that_of_brute_force_sums(fell, past):
     # the grid's error as the README states it
     assert error.max() < 1.5e-3
     assert np.sqrt(np.mean(error**2)) < 2e-4
+
+
+def test_bound_of_rejection_is_above_the_weight_of_any_place(fell, past):
+    track, xy = past
+    inside, (mean, sd) = fell.share > 0, fell.cover_mean_sd
+    best, worst = ((edge(fell.cover[inside]) - mean) / sd for edge in (np.max, np.min))
+    hours = {decay_h: np.exp(-np.arange(1.0, len(track)) / decay_h).sum() for decay_h in (700.0, 8.0)}
+    recalled, put_off = (hours[decay_h] / (hours[decay_h] + 6.0) for decay_h in (700.0, 8.0))
+    # whoever spent all its past in one place of the best cover; then one who likes the open and where it has just been
+    bound = remembered(fell, track).log_bound()
+    assert bound >= 0.5 * best + 2.5 * recalled - 1e-12
+    assert bound > weigh(fell, track, xy).max()
+    contrary = dataclasses.replace(cats.POPULATION, selection=-0.5, reference_strength=-2.0, working_strength=-1.2)
+    assert remembered(fell, track, cat=contrary).log_bound() >= -0.5 * worst + 1.2 * put_off - 1e-12
 
 
 def test_an_end_point_follows_the_law_of_its_step(fell, past):
