@@ -12,7 +12,7 @@ from bayesrange._errors import StudyError
 from bayesrange.study._grid import SUB, Grid
 from bayesrange.study._tables import counted, first_few
 
-_SDS = 3.0  # a fix may lie outside by this many standard deviations of its error
+_SDS = 3.0  # a fix may lie outside by this many standard deviations of its error, of an ellipse along its long axis
 
 
 class Ground:
@@ -69,7 +69,8 @@ def check_fixes(fixes: pd.DataFrame, ground: Ground, swapped: tuple[NDArray, NDA
         ground: where animals can be.
         swapped: easting and northing [m] that the fixes would have if the file's x and y were exchanged.
     """
-    x, y, error = (fixes[c].to_numpy(dtype=float) for c in ("x", "y", "error_m"))
+    widest = "error_major_m" if "error_major_m" in fixes else "error_m"
+    x, y, error = (fixes[c].to_numpy(dtype=float) for c in ("x", "y", widest))
     out = np.flatnonzero(~ground.habitable(x, y))
     if out.size == 0:
         return 0

@@ -101,6 +101,16 @@ def test_ellipses_of_longitude_and_latitude_lie_to_true_north(folder):
     assert np.abs(expected - 30).max() > 0.001
 
 
+def test_a_fix_may_be_outside_by_3_sd_of_the_long_axis(folder):
+    with_ellipses(folder)
+    folder.fixes.loc[7, ["x", "y"]] = [folder.west - 590, folder.south + 2000]
+    folder.fixes.loc[7, "dir"] = "90"
+    study = folder.read()
+    assert study.counts["outside_within_error"] == 1
+    folder.fixes.loc[7, "x"] = folder.west - 615
+    refused(folder, "1 fix outside the study area (fixes.csv line 9), by more than 3 standard deviations")
+
+
 def test_a_column_that_is_passed_over_is_named(folder):
     folder.fixes["hdop"], folder.fixes["error_m"] = 1.5, 20.0
     set_fixes(folder, hdop="hdop", uere_m=4)
