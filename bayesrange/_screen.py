@@ -43,9 +43,9 @@ class FitView:
 
     def __init__(self, console: Console) -> None:
         self.console = console
-        self._bars: dict[int, TaskID] = {}
-        self._begun: dict[int, tuple[float, int]] = {}
-        self._said: dict[int, int] = {}
+        self._bars: dict[str, TaskID] = {}
+        self._begun: dict[str, tuple[float, int]] = {}
+        self._said: dict[str, int] = {}
         self._progress: Progress | None = None
 
     def __call__(self, message: dict[str, Any]) -> None:
@@ -67,9 +67,11 @@ class FitView:
         self.console.print(
             f"[bold]{escape(study.settings.study.name)}[/bold]: {escape(prepared.card.title)} ({prepared.card.name})"
         )
+        animals = study.fixes["animal"].nunique()
+        of = f"{animals} animal{'s' if animals > 1 else ''}"
+        groups = f" in {len(study.groups)} groups" if prepared.card.kind == "range" else ""
         self.console.print(
-            f"{len(study.fixes):,} fixes of {study.fixes['animal'].nunique()} animals in {len(study.groups)} "
-            f"groups{failed}; "
+            f"{len(study.fixes):,} fixes of {of}{groups}{failed}; "
             f"{nx} × {ny} cells of {study.grid.cell_m:g} m, {study.grid.habitable_km2:.1f} km²; "
             f"{escape(study.crs.to_string())}"
         )
@@ -78,6 +80,10 @@ class FitView:
         for warning in prepared.warnings:
             self.console.print(f"[yellow]Note:[/yellow] {escape(warning)}")
         self.console.print(f"Run folder: {escape(message['folder'])}", soft_wrap=True)
+
+    def _on_tables(self, message: dict[str, Any]) -> None:
+        if message["kind"] == "memory":
+            self.console.print("Tabulating each animal's past …")
 
     def _on_compiling(self, message: dict[str, Any]) -> None:
         self.console.print("Compiling the model (the first time takes about half a minute; later runs find it ready) …")
@@ -92,16 +98,17 @@ class FitView:
         )
 
     def _on_warmup(self, message: dict[str, Any]) -> None:
-        chain, done, of = message["chain"], message["done"], message["of"]
+        label = f"{escape(message['label'])}, " if message.get("label") else ""
+        chain, done, of = f"{label}chain {message['chain']}", message["done"], message["of"]
         words = f"divergences {message['divergences']}, step size {message['step_size']:.2g}, {message['stage']}"
         if not self.console.is_terminal:
             if done * 5 // of > self._said.get(chain, 0):
                 self._said[chain] = done * 5 // of
-                self.console.print(f"chain {chain}: {done} of {of}, {words}{self._left(chain, done, of)}")
+                self.console.print(f"{chain}: {done} of {of}, {words}{self._left(chain, done, of)}")
             return
         if self._progress is None:
             columns = (
-                TextColumn("chain {task.fields[chain]}"),
+                TextColumn("{task.fields[chain]}"),
                 BarColumn(),
                 TextColumn("{task.completed:.0f}/{task.total:.0f} {task.fields[words]}"),
             )
@@ -109,11 +116,13 @@ class FitView:
             self._progress.start()
         if chain not in self._bars:
             self._bars[chain] = self._progress.add_task("", total=of, chain=chain, words=words)
-        self._progress.update(self._bars[chain], completed=done, words=words + self._left(chain, done, of))
+        finished = bool(message.get("label")) and done == of  # many animals: only those under way have a bar
+        left = words + self._left(chain, done, of)
+        self._progress.update(self._bars[chain], completed=done, words=left, visible=not finished)
 
     _on_sampling = _on_warmup
 
-    def _left(self, chain: int, done: int, of: int) -> str:
+    def _left(self, chain: str, done: int, of: int) -> str:
         """Time left of a chain, from its pace since it was first heard of."""
         begun, first = self._begun.setdefault(chain, (time.monotonic(), done))
         if done == first or done >= of:
@@ -176,8 +185,8 @@ def show_cards(name: str | None, study: Path | None) -> None:
     card = read_card(find_card(name, folder))
     console.print(f"[bold]{escape(card.name)}[/bold]: {escape(card.title)}\n{escape(card.says)}")
     console.print(
-        f"Use when: {escape(card.use_when)}\nNot when: {escape(card.not_when)}\nTerms: {', '.join(card.terms)}; "
-        f"solver: {card.solver}"
+        f"Use when: {escape(card.use_when)}\nNot when: {escape(card.not_when)}\nTerms: {', '.join(card.terms)}"
+        + (f"; solver: {card.solver}" if card.solver else "")
     )
     for parameter, prior in card.priors.items():
         console.print(

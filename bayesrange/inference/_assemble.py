@@ -1,19 +1,15 @@
-"""From the workers' arrays to posterior.nc: an ArviZ DataTree with names, units and coordinates.
+"""From the workers' arrays to posterior.nc of a range card: an ArviZ DataTree with names, units and coordinates.
 
 Files hold metres; the numerics hold kilometres: the only place where home centres are converted.
 """
-
-from dataclasses import dataclass
-from pathlib import Path
 
 import numpy as np
 import xarray as xr
 
 from bayesrange.inference._cards import SIGNED
 from bayesrange.inference._derived import ISOPLETHS
-from bayesrange.inference._program import Recorded
+from bayesrange.inference._gather import Derived, Sites, numbered, sampler_dataset
 from bayesrange.inference._range_data import RangeSpec
-from bayesrange.inference._task import chain_folder
 from bayesrange.study import Study
 
 UNITS = {
@@ -26,57 +22,6 @@ UNITS = {
     "home_y": "m",
 }
 """Unit of each parameter in posterior.nc and the tables."""
-
-Sites = dict[str, np.ndarray]
-
-
-@dataclass(frozen=True)
-class Derived:
-    """What all chains of a run derived from their draws; `sites` and `stats` lead with (chain, draw)."""
-
-    sites: Sites
-    stats: dict[str, np.ndarray]
-    log_likelihood: np.ndarray
-    area_km2: np.ndarray
-    overlap: np.ndarray
-    solved: np.ndarray
-    density_mean: np.ndarray
-    density_sd: np.ndarray
-    inside: np.ndarray
-    failed_solves: int
-    two_states: int
-    states_checked: int
-    seconds: list[float]
-
-
-def gather(folder: Path, chains: int) -> Derived:
-    """Read what every chain left in the checkpoint folder.
-
-    Args:
-        folder: checkpoint folder.
-        chains: number of chains.
-    """
-    parts = []
-    for chain in range(1, chains + 1):
-        with np.load(chain_folder(folder, chain) / "derived.npz") as file:
-            parts.append({name: file[name] for name in file.files})
-
-    def stacked(name: str) -> np.ndarray:
-        return np.stack([part[name] for part in parts])
-
-    def named(prefix: str) -> dict[str, np.ndarray]:
-        return {name.removeprefix(prefix): stacked(name) for name in parts[0] if name.startswith(prefix)}
-
-    count = sum(len(part["solved"]) for part in parts)
-    mean, square, inside = (
-        sum(part[f"sum_{name}"] for part in parts) / count for name in ("density", "density_squared", "inside")
-    )
-    return Derived(
-        named("site_"), named("stat_"), stacked("log_likelihood"), stacked("area_km2"), stacked("overlap"),
-        stacked("solved"), mean, np.sqrt(np.maximum(square - mean**2, 0.0)), inside,
-        *(int(sum(part[name] for part in parts)) for name in ("failed_solves", "two_states", "states_checked")),
-        [float(part["seconds"]) for part in parts],
-    )  # fmt: skip
 
 
 def parameter_dataset(spec: RangeSpec, sites: Sites) -> xr.Dataset:
@@ -134,24 +79,7 @@ def _coefficients(spec: RangeSpec) -> list[str]:
     return rows
 
 
-def sampler_dataset(stats: dict[str, np.ndarray]) -> xr.Dataset:
-    """ArviZ's sample statistics from what the sampler recorded."""
-    names = dict(
-        zip(
-            Recorded._fields,
-            ("", "", "", "diverging", "energy", "", "n_steps", "acceptance_rate", "step_size"),
-            strict=True,
-        )
-    )
-    columns = {names[name]: value for name, value in stats.items() if names.get(name)}
-    columns["lp"] = -stats["potential"]
-    columns["tree_depth"] = np.ceil(np.log2(stats["gradients"] + 1)).astype(int)
-    return xr.Dataset({name: (("chain", "draw"), value) for name, value in columns.items()})
-
-
-def build_tree(
-    study: Study, spec: RangeSpec, derived: Derived, prior: Sites, weight: np.ndarray, attrs: dict[str, str]
-) -> xr.DataTree:
+def build_tree(study: Study, spec: RangeSpec, derived: Derived, prior: Sites, weight: np.ndarray) -> xr.DataTree:
     """Everything that posterior.nc holds.
 
     Args:
@@ -160,7 +88,6 @@ def build_tree(
         derived: from `gather`.
         prior: prior draws by site, leading (draw).
         weight: weight of each fix.
-        attrs: global attributes.
     """
     fixes, groups, grid = study.fixes, study.groups, study.grid
     known = [i not in spec.estimated for i in range(len(groups))]
@@ -183,15 +110,15 @@ def build_tree(
     chain_draw = ("chain", "draw")
     use = xr.Dataset(
         {
-            "density_mean": (("group", "y", "x"), derived.density_mean, {"units": "1/km²"}),
-            "density_sd": (("group", "y", "x"), derived.density_sd, {"units": "1/km²"}),
-            "inside_probability": (("isopleth", "group", "y", "x"), derived.inside, {"units": "1"}),
-            "area_km2": ((*chain_draw, "isopleth", "group"), derived.area_km2, {"units": "km²"}),
-            "overlap": ((*chain_draw, "group", "neighbour"), derived.overlap, {"units": "1"}),
+            "density_mean": (("group", "y", "x"), derived.means["density"], {"units": "1/km²"}),
+            "density_sd": (("group", "y", "x"), derived.spread("density"), {"units": "1/km²"}),
+            "inside_probability": (("isopleth", "group", "y", "x"), derived.means["inside"], {"units": "1"}),
+            "area_km2": ((*chain_draw, "isopleth", "group"), derived.kept["area_km2"], {"units": "km²"}),
+            "overlap": ((*chain_draw, "group", "neighbour"), derived.kept["overlap"], {"units": "1"}),
         },
         {"group": list(spec.groups), "neighbour": list(spec.groups), "isopleth": list(ISOPLETHS), **places},
     )
-    likelihood = xr.Dataset({"fixes": ((*chain_draw, "fix"), derived.log_likelihood[:, :, : len(fixes)])})
+    likelihood = xr.Dataset({"fixes": ((*chain_draw, "fix"), derived.kept["log_likelihood"][:, :, : len(fixes)])})
     observed = xr.Dataset({"x": ("fix", fixes["x"].to_numpy(float)), "y": ("fix", fixes["y"].to_numpy(float))})
     groups_of_tree = {
         "posterior": parameter_dataset(spec, derived.sites),
@@ -199,12 +126,4 @@ def build_tree(
         "sample_stats": sampler_dataset(derived.stats), "log_likelihood": likelihood, "observed_data": observed,
         "constant_data": constant, "space_use": use,
     }  # fmt: skip
-    numbered = {name: _numbered(dataset) for name, dataset in groups_of_tree.items()}
-    tree = xr.DataTree.from_dict(numbered)
-    tree.attrs.update(attrs)
-    return tree
-
-
-def _numbered(dataset: xr.Dataset) -> xr.Dataset:
-    counted = {dim: np.arange(dataset.sizes[dim]) for dim in ("chain", "draw", "fix") if dim in dataset.dims}
-    return dataset.assign_coords(counted)
+    return xr.DataTree.from_dict({name: numbered(dataset) for name, dataset in groups_of_tree.items()})

@@ -14,21 +14,40 @@ from bayesrange._errors import StudyError
 from bayesrange._resources import models_folder
 from bayesrange.inference._priors import Prior, read_prior
 
-TERMS = {"localising": "localising", "avoidance": "avoidance", "retreat": "retreat", "resources": "resource"}
-"""Term → the parameter it brings."""
+TERMS: dict[str, dict[str, tuple[str, ...]]] = {
+    "range": {
+        "localising": ("localising",),
+        "avoidance": ("avoidance",),
+        "retreat": ("retreat",),
+        "resources": ("resource",),
+    },
+    "memory": {
+        "steps": ("step_shape", "step_scale", "turn_concentration"),
+        "resources": ("selection",),
+        "home": ("home_pull",),
+        "memory": ("reference_strength", "reference_decay", "working_strength", "working_decay", "recall_half"),
+    },
+}
+"""Kind of card → term → the parameters it brings."""
 
 SCENT_TERMS = ("avoidance", "retreat")
-SIGNED = ("resource",)
+SIGNED = ("resource", "selection", "reference_strength", "working_strength", "step_rhythm")
 """Parameters that may be negative; all others are at least 0."""
 
 VARYING = ("localising", "avoidance", "resource")
-"""Parameters that may differ between groups under `pooling = "hierarchical"`."""
+"""Parameters of range cards that may differ between groups under `pooling = "hierarchical"`."""
 
-PER_LENGTH = ("localising", "retreat")
-"""Parameters in 1/km: only their priors may be `scaled_by` the home length."""
+COMMON = ("recall_half", "encoding_range", "step_rhythm")
+"""Parameters of memory cards that pooled animals share; all others may differ between them."""
 
-_KEYS = {"name", "kind", "title", "terms", "solver", "says", "use_when", "not_when", "priors", "between_groups"} | {
-    "covariate_effect", "references"
+SCALED = {
+    "localising": "1/home_length", "retreat": "1/home_length", "home_pull": "1/area_length",
+    "step_scale": "median_step", "encoding_range": "median_step",
+}  # fmt: skip
+"""Parameters with a unit of length, and the scale that their priors may be `scaled_by`."""
+
+_KEYS = {"name", "kind", "title", "terms", "solver", "says", "use_when", "not_when", "priors"} | {
+    "between_groups", "between_animals", "covariate_effect", "references"
 }  # fmt: skip
 
 
@@ -44,7 +63,7 @@ class Card:
     use_when: str
     not_when: str
     priors: dict[str, Prior]
-    between_groups: dict[str, Prior]
+    between: dict[str, Prior]
     covariate_effect: Prior
     references: tuple[str, ...]
     file: Path
@@ -59,7 +78,7 @@ class Card:
     @property
     def parameters(self) -> tuple[str, ...]:
         """Parameters of the card's terms, in the order of the terms."""
-        return tuple(TERMS[term] for term in self.terms)
+        return tuple(name for term in self.terms for name in TERMS[self.kind][term])
 
     def with_priors(self, overrides: dict[str, dict[str, Any]], where: str) -> "Card":
         """The card with priors of the study file in place of its own.
@@ -116,34 +135,48 @@ def read_card(file: Path) -> Card:
         near = get_close_matches(unknown[0], _KEYS, 1)
         hint = f" Did you mean {near[0]}?" if near else ""
         raise StudyError(f"{file.name}, {unknown[0]}: a model card has no such key.{hint}")
-    terms, solver = _terms_and_solver(table, file)
-    wanted = [TERMS[term] for term in terms] + (["over_marking"] if set(terms) & set(SCENT_TERMS) else [])
+    kind = table.get("kind", "range")
+    if kind not in TERMS:
+        raise StudyError(f"{file.name}, kind: expected {' or '.join(TERMS)}, got {kind!r}.")
+    terms, solver = _terms_and_solver(table, file, kind)
+    wanted = [name for term in terms for name in TERMS[kind][term]]
+    optional = ["encoding_range", "step_rhythm"] if kind == "memory" else []
+    if set(terms) & set(SCENT_TERMS):
+        wanted.append("over_marking")
     priors = _read_priors(table.get("priors", {}), file, "priors")
-    _only(priors, wanted, file, "priors")
+    _only(priors, wanted + optional, file, "priors")
     missing = [name for name in wanted if name not in priors]
     if missing:
         raise StudyError(
             f"{file.name}: no prior for {', '.join(missing)}; write [priors.{missing[0]}] with family and numbers."
         )
+    between, other = ("between_groups", "between_animals")[:: 1 if kind == "range" else -1]
+    if other in table:
+        raise StudyError(f"{file.name}, [{other}]: a card of kind {kind!r} has [{between}] in its place.")
+    may_differ = [name for name in wanted if (name in VARYING if kind == "range" else name not in COMMON)]
     words = {key: " ".join(str(table.get(key, "")).split()) for key in ("title", "says", "use_when", "not_when")}
     references = table.get("references", [])
     if not isinstance(references, list) or any(not isinstance(entry, dict) for entry in references):
         raise StudyError(f"{file.name}, references: expected tables [[references]] with a text each.")
     return Card(
         name=file.stem, terms=terms, solver=solver, priors=priors,
-        between_groups=_read_between(table.get("between_groups", {}), file, [n for n in wanted if n in VARYING]),
+        between=_read_between(table.get(between, {}), file, between, may_differ),
         covariate_effect=_read_effect(table, file),
         references=tuple(str(entry.get("text", "")) for entry in references),
-        file=file, kind=str(table.get("kind", "range")), **words,
+        file=file, kind=kind, **words,
     )  # fmt: skip
 
 
-def _terms_and_solver(table: dict[str, Any], file: Path) -> tuple[tuple[str, ...], str]:
-    terms = table.get("terms")
-    if not isinstance(terms, list) or not terms or any(term not in TERMS for term in terms):
-        raise StudyError(f"{file.name}, terms: expected a list with some of {', '.join(TERMS)}, got {terms!r}.")
+def _terms_and_solver(table: dict[str, Any], file: Path, kind: str) -> tuple[tuple[str, ...], str]:
+    terms, known = table.get("terms"), TERMS[kind]
+    if not isinstance(terms, list) or not terms or any(term not in known for term in terms):
+        raise StudyError(f"{file.name}, terms: expected a list with some of {', '.join(known)}, got {terms!r}.")
     if len(set(terms)) < len(terms):
         raise StudyError(f"{file.name}, terms: each term once, got {terms!r}.")
+    if kind == "memory":
+        if "steps" not in terms or "solver" in table:
+            raise StudyError(f'{file.name}: a memory card needs the term "steps", and has no solver.')
+        return tuple(terms), ""
     solver = table.get("solver", "gibbs")
     if solver not in ("gibbs", "flux") or (solver == "gibbs" and "retreat" in terms):
         raise StudyError(
@@ -178,8 +211,10 @@ def _read_priors(table: Any, file: Path, section: str, positive: bool = False) -
     for name, value in table.items():
         where = f"{file.name}, [{section}.{name}]"
         priors[name] = read_prior(value, where, positive or name not in SIGNED)
-        if priors[name].scaled_by and (name not in PER_LENGTH or section != "priors"):
-            raise StudyError(f"{where}: `scaled_by` is for priors of {' and '.join(PER_LENGTH)}; take it out here.")
+        scaled_by, allowed = priors[name].scaled_by, SCALED.get(name) if section == "priors" else None
+        if scaled_by and scaled_by != allowed:
+            hint = f"it may be {allowed!r} here" if allowed else "take it out here"
+            raise StudyError(f"{where}: `scaled_by` is {scaled_by!r}, but {hint}.")
     return priors
 
 
@@ -192,14 +227,14 @@ def _only(priors: dict[str, Prior], wanted: list[str], file: Path, section: str)
             )
 
 
-def _read_between(table: Any, file: Path, wanted: list[str]) -> dict[str, Prior]:
-    """Priors of the spread between groups: half-normal, on the unconstrained scale."""
-    between = _read_priors(table, file, "between_groups", positive=True)
-    _only(between, wanted, file, "between_groups")
+def _read_between(table: Any, file: Path, section: str, wanted: list[str]) -> dict[str, Prior]:
+    """Priors of the spread between groups or animals: half-normal, on the unconstrained scale."""
+    between = _read_priors(table, file, section, positive=True)
+    _only(between, wanted, file, section)
     for name, prior in between.items():
         if prior.family != "half-normal":
             raise StudyError(
-                f"{file.name}, [between_groups.{name}]: the spread between groups takes a half-normal, got "
+                f"{file.name}, [{section}.{name}]: the spread {section.replace('_', ' ')} takes a half-normal, got "
                 f"{prior.family}."
             )
     return between

@@ -44,35 +44,40 @@ class Diagnostics:
 
 
 def diagnose(
-    table: pd.DataFrame, found: list[Row], stats: dict[str, np.ndarray], failed: int, two_states: int
+    table: pd.DataFrame,
+    found: list[Row],
+    stats: dict[str, np.ndarray] | list[dict[str, np.ndarray]],
+    failed: int,
+    two_states: int,
 ) -> Diagnostics:
     """Read the gates.
 
     Args:
         table: parameters.csv.
         found: the rows it was made from, in the same order.
-        stats: sampler records, leading (chain, draw).
+        stats: sampler records, leading (chain, draw); one set a posterior, where animals are fitted alone.
         failed: divergent transitions that ended at a steady state that was not found.
         two_states: draws at which another start led to another steady state.
     """
-    chains = stats["potential"].shape[0]
+    sets = stats if isinstance(stats, list) else [stats]
+    chains = sets[0]["potential"].shape[0]
     individual = np.array([row.individual for row in found])
-    lp = -stats["potential"]
     axes = {"chain_axis": 0, "draw_axis": 1}
-    rhat_lp = float(array_stats.rhat(lp, **axes))
+    lps = [-one["potential"] for one in sets]
     # A figure that cannot be computed (NaN) must not be passed over: np.max and np.min keep it.
-    rhat = float(np.max([*table["rhat"][~individual], rhat_lp]))
-    bulk = float(np.min([*table["ess_bulk"], float(array_stats.ess(lp, **axes))]))
+    rhat = float(np.max([*table["rhat"][~individual], *(float(array_stats.rhat(lp, **axes)) for lp in lps)]))
+    bulk = float(np.min([*table["ess_bulk"], *(float(array_stats.ess(lp, **axes)) for lp in lps)]))
     tail = float(np.min(table["ess_tail"]))
-    bfmi = float(np.min(array_stats.bfmi(stats["energy"], **axes)))
-    divergences = int(stats["diverging"].sum())
-    deepest = int((stats["gradients"] >= 2**MAX_TREE_DEPTH - 1).sum())
+    bfmi = float(np.min([np.min(array_stats.bfmi(one["energy"], **axes)) for one in sets]))
+    divergences = int(sum(one["diverging"].sum() for one in sets))
+    deepest = int(sum((one["gradients"] >= 2**MAX_TREE_DEPTH - 1).sum() for one in sets))
     problems = list(
         _problems(table, individual, rhat, bulk, tail, chains, divergences, bfmi, deepest, failed, two_states)
     )
     return Diagnostics(
-        divergences, failed, two_states, rhat, bulk, tail, bfmi, deepest, int(stats["gradients"].sum()),
-        [float(value) for value in stats["step_size"][:, -1]], problems,
+        divergences, failed, two_states, rhat, bulk, tail, bfmi, deepest,
+        int(sum(one["gradients"].sum() for one in sets)),
+        [float(value) for one in sets for value in one["step_size"][:, -1]], problems,
     )  # fmt: skip
 
 
@@ -91,7 +96,9 @@ def _problems(
         )
     of_groups = float(np.max([0.0, *table["rhat"][individual]]))
     if not of_groups < RHAT_INDIVIDUAL and chains > 1:
-        said.append(f"R-hat of a single group reaches {of_groups:.3f} (wanted below {RHAT_INDIVIDUAL}); raise draws.")
+        said.append(
+            f"R-hat of a single group or animal reaches {of_groups:.3f} (wanted below {RHAT_INDIVIDUAL}); raise draws."
+        )
     wanted = ESS_PER_CHAIN * chains
     if not min(bulk, tail) >= wanted:
         said.append(

@@ -16,14 +16,14 @@ FAMILIES: dict[str, tuple[str, ...]] = {
 the normal that is folded."""
 
 POSITIVE = ("half-normal", "log-normal", "exponential")
-SCALINGS = ("1/home_length",)
+SCALINGS = ("1/home_length", "1/area_length", "median_step")
 _ABOVE_ZERO = {"sd", "scale", "median", "spread"}
 _NOTES = {"reason", "unit", "scaled_by"}
 
 
 @dataclass(frozen=True)
 class Prior:
-    """A prior in the units of the numerics (km), or in units of a study's scale where `scaled_by` says so.
+    """A prior in the units of its card, or in units of a study's scale where `scaled_by` says so.
 
     Attributes:
         family: a key of `FAMILIES`.
@@ -39,12 +39,11 @@ class Prior:
 
     def scaled(self, home_length_km: float) -> "Prior":
         """The same prior in the units of the numerics; spreads of logarithms have no unit and stay."""
-        if not self.scaled_by:
-            return self
-        keep = {"spread"}
-        numbers = (
-            n if k in keep else n / home_length_km for k, n in zip(FAMILIES[self.family], self.numbers, strict=True)
-        )
+        return self.times(1 / home_length_km) if self.scaled_by else self
+
+    def times(self, factor: float) -> "Prior":
+        """The prior of the same parameter in another unit; spreads of logarithms have no unit and stay."""
+        numbers = (n if k == "spread" else n * factor for k, n in zip(FAMILIES[self.family], self.numbers, strict=True))
         return Prior(self.family, tuple(numbers), "", self.reason)
 
     def in_words(self, unit: str = "") -> str:

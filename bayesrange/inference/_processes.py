@@ -50,12 +50,11 @@ def cores() -> int:
     return len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
 
 
-def run_workers(folder: Path, jobs: list[list[str]], at_once: int, tell: Callable[[Message], None], log: Path) -> None:
+def run_workers(jobs: list[list[str]], at_once: int, tell: Callable[[Message], None], log: Path) -> None:
     """Run worker processes, at most `at_once` at a time, and pass on what they say.
 
     Args:
-        folder: checkpoint folder.
-        jobs: arguments of each worker after the folder.
+        jobs: arguments of each worker: its checkpoint folder, and what to do.
         at_once: number of processes that may run together.
         tell: called with each message, in this thread.
         log: file that collects what workers write on standard error.
@@ -71,7 +70,7 @@ def run_workers(folder: Path, jobs: list[list[str]], at_once: int, tell: Callabl
             while waiting or running:
                 while waiting and len(running) < at_once:
                     number, arguments = waiting.pop(0)
-                    running[number] = _launch(folder, arguments, errors)
+                    running[number] = _launch(arguments, errors)
                     threading.Thread(target=_listen, args=(number, running[number], heard), daemon=True).start()
                 number, message = heard.get()
                 if message is not None:
@@ -80,7 +79,7 @@ def run_workers(folder: Path, jobs: list[list[str]], at_once: int, tell: Callabl
                 status = running.pop(number).wait()
                 if status != 0:
                     raise WorkerError(
-                        f"worker `{' '.join(jobs[number])}` ended with status {status}: {_last_words(log)}"
+                        f"worker `{' '.join(jobs[number][1:])}` ended with status {status}: {_last_words(log)}"
                     )
         finally:
             for process in running.values():
@@ -89,9 +88,9 @@ def run_workers(folder: Path, jobs: list[list[str]], at_once: int, tell: Callabl
                 process.wait()
 
 
-def _launch(folder: Path, arguments: list[str], errors: Any) -> subprocess.Popen[str]:
+def _launch(arguments: list[str], errors: Any) -> subprocess.Popen[str]:
     # -P: a file of the user's called resource.py or numpy.py, where they work, must not be taken for the module
-    command = [sys.executable, "-P", "-m", "bayesrange.inference._worker", str(folder), *arguments]
+    command = [sys.executable, "-P", "-m", "bayesrange.inference._worker", *arguments]
     return subprocess.Popen(
         command, env=worker_environment(), stdin=subprocess.DEVNULL, stdout=subprocess.PIPE, stderr=errors, text=True
     )

@@ -19,24 +19,11 @@ from numpyro.infer.hmc import hmc
 from numpyro.infer.util import constrain_fn, potential_energy, unconstrain_fn
 
 from bayesrange.inference._centring import typical
-from bayesrange.inference._derived import ISOPLETHS, isopleth_levels, overlaps, rank_mass
+from bayesrange.inference._hierarchy import Hierarchy, place_units, sample_hierarchy, walk_coefficients
+from bayesrange.inference._models import Data, Spec, model_of
 from bayesrange.inference._priors import POSITIVE
-from bayesrange.inference._range_data import RangeData, RangeSpec
-from bayesrange.inference._range_model import (
-    Hierarchy,
-    coefficient_rows,
-    log_likelihood,
-    place_groups,
-    range_model,
-    sample_hierarchy,
-    sample_parameters,
-    walk_coefficients,
-)
-from bayesrange.spaceuse import SOLVED, Parameters, arrival_scent, gibbs
 
 MAX_TREE_DEPTH = 10
-MODEST_MARKING = 0.01
-"""Over-marking from which the search for the mode begins at the most: steady where summed scent is below some 100."""
 
 
 class Whitening(NamedTuple):
@@ -75,30 +62,25 @@ class Program:
         chunk: most transitions in one call of `advance`.
     """
 
-    def __init__(self, spec: RangeSpec, data: RangeData, warmup: int, target_accept: float, chunk: int) -> None:
+    def __init__(self, spec: Spec, data: Data, warmup: int, target_accept: float, chunk: int) -> None:
         self.spec, self.warmup, self.target_accept, self.chunk = spec, warmup, target_accept, chunk
-        self.model = partial(range_model, spec)
-        self.prior = partial(sample_parameters, spec)
+        self.kind = model_of(spec)
+        self.model, self.prior, self.layout = self.kind.joint, self.kind.prior, self.kind.layout
         guess = self.first_guess(data)
         flat, self._unravel = ravel_pytree(guess)
         self._layout = {name: value.shape for name, value in guess.items()}
         self.dimension = flat.size
         self._init_kernel, self._sample_kernel = hmc(potential_fn_gen=self.potential_in_w, algo="NUTS")
 
-    def first_guess(self, data: RangeData) -> dict[str, Array]:
-        """Unconstrained parameters at prior centres and first homes; no differences between groups."""
+    def first_guess(self, data: Data) -> dict[str, Array]:
+        """Unconstrained parameters at prior centres and first homes; no differences between groups or animals."""
         trace = numpyro.handlers.trace(numpyro.handlers.seed(self.prior, 0)).get_trace(data)
         sites = {name: site["value"] for name, site in trace.items() if site["type"] == "sample"}
-        guess = {name: self._centre(name, value, data) for name, value in sites.items()}
+        guess = {name: self.kind.centre(name, self._centre(name, value, data), data) for name, value in sites.items()}
         return unconstrain_fn(self.prior, (data,), {}, guess)
 
-    def _centre(self, name: str, value: Array, data: RangeData) -> Array:
-        if name in ("home_x", "home_y"):
-            axis = ("home_x", "home_y").index(name)
-            low, high = data.box[axis], data.box[axis + 2]
-            margin = 1e-3 * (high - low)
-            return jnp.clip(jnp.asarray(data.home)[jnp.array(self.spec.estimated), axis], low + margin, high - margin)
-        if name == "group_correlation":
+    def _centre(self, name: str, value: Array, data: Data) -> Array:
+        if self.layout is not None and name == self.layout.correlation:
             return jnp.eye(value.shape[0])
         if name.endswith("_spread"):
             return jnp.full_like(value, 0.2)
@@ -106,24 +88,21 @@ class Program:
         if parameter in data.priors:
             family, numbers = self.spec.family(parameter), data.priors[parameter]
             if family in POSITIVE:
-                centre = numbers[0] * (1.0 if family == "log-normal" else 0.3)
-                if parameter == "over_marking":  # a wide prior has its centre where marks grow without bound
-                    centre = jnp.minimum(centre, MODEST_MARKING)
-                return jnp.full_like(value, centre)
+                return jnp.full_like(value, numbers[0] * (1.0 if family == "log-normal" else 0.3))
             return jnp.full_like(value, numbers.mean() if family == "uniform" else numbers[0])
         return jnp.zeros_like(value)
 
     # --- log-density -------------------------------------------------------------------------------------------
 
-    def potential(self, z: Float[Array, " d"], data: RangeData) -> Float[Array, ""]:
+    def potential(self, z: Float[Array, " d"], data: Data) -> Float[Array, ""]:
         """Negative log posterior density on the unconstrained space."""
         return potential_energy(self.model, (data,), {}, self._unravel(z))
 
-    def potential_in_w(self, data: RangeData, whitening: Whitening) -> Callable[[dict[str, Array]], Array]:
+    def potential_in_w(self, data: Data, whitening: Whitening) -> Callable[[dict[str, Array]], Array]:
         """Log-density in the sampler's coordinates, as NumPyro's kernel wants it."""
         return lambda w: self.potential(whitening.mode + whitening.scale @ w["w"], data)
 
-    def value_and_gradient(self, z: Float[Array, " d"], data: RangeData) -> tuple[Array, Array]:
+    def value_and_gradient(self, z: Float[Array, " d"], data: Data) -> tuple[Array, Array]:
         """Potential and its gradient; the same compiled program as `begin`, to spare a compilation."""
         plain = Whitening(jnp.zeros(self.dimension), jnp.eye(self.dimension))
         state = self.begin(z, jax.random.key_data(jax.random.key(0)), data, plain)
@@ -131,25 +110,27 @@ class Program:
 
     def apart(self) -> np.ndarray:
         """Which coordinates are spreads and correlations of a hierarchy."""
-        marks = {name: name.endswith("_spread") or name == "group_correlation" for name in self._layout}
+        correlation = self.layout.correlation if self.layout is not None else ""
+        marks = {name: name.endswith("_spread") or name == correlation for name in self._layout}
         filled = {name: jnp.full(shape, marks[name], float) for name, shape in self._layout.items()}
         return np.asarray(ravel_pytree(filled)[0]) > 0
 
-    def centred(self, z: np.ndarray, curvature: np.ndarray, data: RangeData) -> tuple[np.ndarray, RangeData]:
-        """A typical point near the mode, in the coordinates that suit how much each group's fixes say.
+    def centred(self, z: np.ndarray, curvature: np.ndarray, data: Data) -> tuple[np.ndarray, Data]:
+        """A typical point near the mode, in the coordinates that suit how much each unit's fixes say.
 
         Args:
             z: mode with `centring` 0.
-            curvature: curvature there. For a group's coefficient it is 1 (prior) + s² × information of the fixes.
+            curvature: curvature there. For a unit's coefficient it is 1 (prior) + s² × information of the fixes.
             data: with `centring` 0.
 
         Returns:
             The point in the new coordinates, and the data with its `centring` (see `walk_coefficients`).
         """
+        layout = self.layout
+        assert layout is not None
         values = constrain_fn(self.prior, (data,), {}, self._unravel(z))
-        hierarchy = numpyro.handlers.substitute(partial(sample_hierarchy, self.spec), values)(data)
-        count = hierarchy.spread.size
-        sites = [f"group_place_{k}" for k in range(count)]
+        hierarchy = numpyro.handlers.substitute(partial(sample_hierarchy, layout), values)(data)
+        sites = [layout.place(k) for k in range(layout.size)]
         eta = walk_coefficients(hierarchy, jnp.asarray(data.centring), lambda k, centre, width: values[sites[k]])
         diagonal = self._unravel(jnp.diag(jnp.asarray(curvature)))
         found = []
@@ -159,11 +140,11 @@ class Program:
             found.append(typical(*(np.asarray(v)[:, k] for v in (eta, hierarchy.expected)), sd, information, scale))
         new = data._replace(centring=jnp.stack([jnp.asarray(one.centring) for one in found], axis=1))
         spread = jnp.array([one.spread for one in found])
-        at = Hierarchy(hierarchy.expected, spread, jnp.eye(count))
-        values |= place_groups(jnp.stack([jnp.asarray(one.values) for one in found], axis=1), at, new.centring)
-        values |= {f"{name}_spread": spread[own] for name, own in coefficient_rows(self.spec).items()}
-        if count > 1:
-            values["group_correlation"] = jnp.eye(count)
+        at = Hierarchy(hierarchy.expected, spread, jnp.eye(layout.size))
+        values |= place_units(jnp.stack([jnp.asarray(one.values) for one in found], axis=1), at, new.centring, layout)
+        values |= {f"{name}_spread": spread[own] for name, own in layout.rows.items()}
+        if layout.correlated:
+            values[layout.correlation] = jnp.eye(layout.correlated)
         return np.asarray(ravel_pytree(unconstrain_fn(self.prior, (new,), {}, values))[0]), new
 
     # --- sampler -----------------------------------------------------------------------------------------------
@@ -172,7 +153,7 @@ class Program:
     def begin(self) -> Callable[..., Any]:
         """(w, key, data, whitening) → sampler state before the first transition."""
 
-        def begin(w: Array, key: Array, data: RangeData, whitening: Whitening) -> Any:
+        def begin(w: Array, key: Array, data: Data, whitening: Whitening) -> Any:
             return self._init_kernel(
                 {"w": w}, self.warmup, step_size=0.5, inverse_mass_matrix=jnp.ones(self.dimension), dense_mass=False,
                 target_accept_prob=self.target_accept, max_tree_depth=MAX_TREE_DEPTH,
@@ -185,7 +166,7 @@ class Program:
     def advance(self) -> Callable[..., tuple[Any, Recorded]]:
         """(state, count, data, whitening) → state after `count` ≤ chunk transitions, and their record."""
 
-        def advance(state: Any, count: Array, data: RangeData, whitening: Whitening) -> tuple[Any, Recorded]:
+        def advance(state: Any, count: Array, data: Data, whitening: Whitening) -> tuple[Any, Recorded]:
             places = jnp.zeros((self.chunk, self.dimension))
             empty = Recorded(
                 places, jnp.zeros((self.chunk, 2), jnp.uint32), places, jnp.zeros(self.chunk, bool),
@@ -207,7 +188,7 @@ class Program:
 
         return jax.jit(advance)
 
-    def ready(self, data: RangeData, whitening: Whitening) -> None:
+    def ready(self, data: Data, whitening: Whitening) -> None:
         """Trace `begin`: NumPyro's transition kernel learns its adaptation schedule there. Needed before `advance`."""
         jax.eval_shape(self.begin, jnp.zeros(self.dimension), jax.random.key_data(jax.random.key(0)), data, whitening)
 
@@ -217,7 +198,7 @@ class Program:
     def constrain(self) -> Callable[..., dict[str, Array]]:
         """(z draws, data) → constrained parameters by site, deterministic sites included."""
 
-        def one(z: Array, data: RangeData) -> dict[str, Array]:
+        def one(z: Array, data: Data) -> dict[str, Array]:
             return constrain_fn(self.prior, (data,), {}, self._unravel(z), return_deterministic=True)
 
         return jax.jit(jax.vmap(one, in_axes=(0, None)))
@@ -226,7 +207,7 @@ class Program:
     def prior_draws(self) -> Callable[..., dict[str, Array]]:
         """(keys, data) → draws from the prior by site."""
 
-        def one(key: Array, data: RangeData) -> dict[str, Array]:
+        def one(key: Array, data: Data) -> dict[str, Array]:
             trace = numpyro.handlers.trace(numpyro.handlers.seed(self.prior, key)).get_trace(data)
             return {name: site["value"] for name, site in trace.items() if site["type"] in ("sample", "deterministic")}
 
@@ -234,46 +215,21 @@ class Program:
 
     @cached_property
     def other_state(self) -> Callable[..., Array]:
-        """(z, data) → whether groups that arrive one by one, in either order, settle in another steady state."""
+        """(z, data) → whether another start of the solver leads to another solution; for models that can have some."""
+        return jax.jit(lambda z, data: self.kind.other_state(self.parameters(z, data), data))
 
-        def other_state(z: Array, data: RangeData) -> Array:
-            parameters = self.parameters(z, data)
-            usual = gibbs(parameters, data.setting)
-            order = range(len(self.spec.groups))
-            differs = jnp.zeros((), bool)
-            for arrival in (order, order[::-1]):
-                other = gibbs(parameters, data.setting, start=arrival_scent(parameters, data.setting, arrival))
-                gap = jnp.max(jnp.abs(other.density - usual.density)) / jnp.max(usual.density)
-                differs = differs | ((other.result == SOLVED) & (gap > 1e-5))
-            return differs
-
-        return jax.jit(other_state)
-
-    def parameters(self, z: Float[Array, " d"], data: RangeData) -> Parameters:
-        """Solver parameters of one unconstrained position."""
+    def parameters(self, z: Float[Array, " d"], data: Data) -> Any:
+        """Parameters of the numerics at one unconstrained position."""
         values = constrain_fn(self.prior, (data,), {}, self._unravel(z))
         return numpyro.handlers.substitute(self.prior, values)(data)
 
     @cached_property
-    def derive(self) -> Callable[..., dict[str, Array]]:
-        """(z, data) → what the run folder keeps of one draw: log-likelihood per fix, density, isopleths, overlaps."""
-
-        def derive(z: Array, data: RangeData) -> dict[str, Array]:
-            parameters = self.parameters(z, data)
-            terms, solution = log_likelihood(self.spec, data, parameters)
-            area = data.setting.domain.area
-            density = solution.density
-            denser, own = rank_mass(density, area)
-            inside, areas = isopleth_levels(denser, own, area, jnp.array(ISOPLETHS) / 100)
-            return {
-                "log_likelihood": terms.astype(jnp.float32), "density": density, "inside": inside, "area_km2": areas,
-                "overlap": overlaps(density, area), "solved": solution.result == SOLVED,
-            }  # fmt: skip
-
-        return jax.jit(derive)
+    def derive(self) -> Callable[..., tuple[dict[str, Array], dict[str, Array]]]:
+        """(z, data) → what the run folder keeps of one draw, and what it only sums over draws."""
+        return jax.jit(lambda z, data: self.kind.derive(self.parameters(z, data), data))
 
 
-def as_arrays(data: RangeData) -> RangeData:
+def as_arrays(data: Data) -> Data:
     """The same data on the device, once, so that calls don't copy."""
     return jax.tree.map(jnp.asarray, data)
 

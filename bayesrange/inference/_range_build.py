@@ -4,6 +4,7 @@ import numpy as np
 
 from bayesrange._errors import StudyError
 from bayesrange.inference._cards import VARYING, Card
+from bayesrange.inference._covariates import code_columns
 from bayesrange.inference._fix_entries import ELLIPSE, fix_entries
 from bayesrange.inference._range_data import RangeData, RangeSpec
 from bayesrange.inference._scales import Scales
@@ -53,12 +54,19 @@ def make_spec(study: Study, card: Card) -> RangeSpec:
 
 def _check_card(study: Study, card: Card) -> None:
     model, where = study.settings.model, study.path.name
-    if card.kind != "range":
-        raise StudyError(f'{where}, [model] card: {card.name} is a card of kind "{card.kind}", which is not built yet.')
     if model.pooling == "individual":
         raise StudyError(
             f'{where}, [model] pooling: range cards take "shared" or "hierarchical"; "individual" is for memory cards.'
         )
+    for key, given in (
+        ("memory_start", model.memory_start != "naive"),
+        ("interval_h", model.interval_h is not None),
+        ("encoding_range_m", model.encoding_range_m is not None),
+        ("shortest_step_m", model.shortest_step_m is not None),
+        ("vary", bool(model.vary)),
+    ):
+        if given:
+            raise StudyError(f"{where}, [model] {key}: it is for memory cards, and {card.name} is none; take it out.")
     if not len(study.groups):
         raise StudyError(f"{where}: range cards need groups; add a [groups] table, or a group column to the fixes.")
     if "resources" in card.terms and not model.layers:
@@ -93,29 +101,12 @@ def code_covariates(study: Study) -> list[tuple[str, np.ndarray]]:
     Raises:
         StudyError: a column that is missing, empty in places, or constant.
     """
-    coded: list[tuple[str, np.ndarray]] = []
+    where, columns = f"{study.path.name}, [model] covariates", {}
     for name in study.settings.model.covariates:
-        where = f"{study.path.name}, [model] covariates"
         if name not in study.groups.columns or name in ("group", "x", "y"):
             raise StudyError(f"{where}: the groups table has no column {name!r} that could be a covariate.")
-        column = study.groups[name]
-        if column.isna().any():
-            raise StudyError(
-                f"{where}: column {name!r} of the groups table is empty for group "
-                f"{study.groups['group'][column.isna().idxmax()]!r}."
-            )
-        if column.nunique() < 2:
-            raise StudyError(f"{where}: column {name!r} of the groups table has the same value for every group.")
-        if column.dtype.kind in "iuf":
-            values = column.to_numpy(float)
-            if not np.isfinite(values).all():
-                raise StudyError(f"{where}: column {name!r} of the groups table holds a number that is not finite.")
-            coded.append((name, (values - values.mean()) / values.std()))
-            continue
-        for level in sorted(column.astype(str).unique())[1:]:
-            indicator = (column.astype(str) == level).to_numpy(float)
-            coded.append((f"{name}={level}", indicator - indicator.mean()))
-    return coded
+        columns[name] = study.groups[name]
+    return code_columns(columns, list(study.groups["group"]), "group", where)
 
 
 def make_setting(study: Study, scales: Scales, spec: RangeSpec) -> Setting:
@@ -193,9 +184,9 @@ def _copies(name: str, spec: RangeSpec) -> int:
 
 
 def _spread(card: Card, name: str) -> float:
-    if name not in card.between_groups:
+    if name not in card.between:
         raise StudyError(
             f'{card.file.name}: pooling = "hierarchical" needs a prior of the spread between groups; write '
             f'[between_groups.{name}] with family = "half-normal" and a scale.'
         )
-    return card.between_groups[name].numbers[0]
+    return card.between[name].numbers[0]

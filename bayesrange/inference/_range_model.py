@@ -1,52 +1,46 @@
-"""NumPyro model of the range cards: priors, then one tested likelihood.
+"""NumPyro model of the range cards: priors, then one tested likelihood; and what is derived from a draw.
 
-Site names are the parameter names of the cards; units are those of the numerics (km). With hierarchical pooling the
-unconstrained values of group a are η_a = μ + C z_a + s L ξ_a, ξ_a ~ N(0, 1), sampled in the coordinates of
-`walk_coefficients`; positive parameters are exp(η). `X_population` is then the value of the median group at covariates
-of mean 0, `X_spread` the sd on the unconstrained scale, `X_effect` the coefficients of the covariates, `X` the groups'
-own values.
+Site names are the parameter names of the cards; units are those of the numerics (km). With hierarchical pooling see
+`_hierarchy.py`; `X` then holds the groups' own values.
 """
 
-from collections.abc import Callable
-from typing import NamedTuple
+from typing import Any
 
-import jax
 import jax.numpy as jnp
+import numpy as np
 import numpyro
 import numpyro.distributions as dist
-from jaxtyping import Array, Float
+from jaxtyping import Array, Bool, Float
 
 from bayesrange.inference._cards import SIGNED
+from bayesrange.inference._derived import ISOPLETHS, isopleth_levels, overlaps, rank_mass
+from bayesrange.inference._hierarchy import Layout, distribution, sample_units
 from bayesrange.inference._range_data import RangeData, RangeSpec
-from bayesrange.spaceuse import SOLVED, Parameters, Solution, log_fix_density, steady_state
+from bayesrange.spaceuse import (
+    SOLVED,
+    Parameters,
+    Solution,
+    arrival_scent,
+    gibbs,
+    log_fix_density,
+    steady_state,
+)
 
-CORRELATION = 2.0
-"""Concentration of the LKJ prior on correlations between a group's coefficients: mildly towards none."""
-
-
-def distribution(family: str, numbers: Float[Array, " numbers"]) -> dist.Distribution:
-    """NumPyro distribution of a prior family."""
-    if family == "normal":
-        return dist.Normal(numbers[0], numbers[1])
-    if family == "half-normal":
-        return dist.HalfNormal(numbers[0])
-    if family == "log-normal":
-        return dist.LogNormal(jnp.log(numbers[0]), numbers[1])
-    if family == "exponential":
-        return dist.Exponential(1 / numbers[0])
-    return dist.Uniform(numbers[0], numbers[1])
+MODEST_MARKING = 0.01
+"""Over-marking from which the search for the mode begins at the most: steady where summed scent is below some 100."""
 
 
 def sample_parameters(spec: RangeSpec, data: RangeData) -> Parameters:
     """Draw every parameter from its prior and lay them out one value per group."""
     groups = len(spec.groups)
-    if spec.varying:
-        values = _by_group(spec, data)
+    layout = group_layout(spec)
+    if layout is not None:
+        values = _by_group(layout, data)
     else:
-        values = {name: _population(spec, data, name, name) for name in spec.parameters if name != "retreat"}
+        values = {name: _population(spec, data, name) for name in spec.parameters if name != "retreat"}
     if "retreat" in spec.parameters:
-        values["retreat"] = _population(spec, data, "retreat", "retreat")
-    over_marking = _population(spec, data, "over_marking", "over_marking") if spec.over_marking else jnp.zeros(())
+        values["retreat"] = _population(spec, data, "retreat")
+    over_marking = _population(spec, data, "over_marking") if spec.over_marking else jnp.zeros(())
     resource = values.get("resource", jnp.zeros((0,)))
     return Parameters(
         localising=jnp.broadcast_to(values.get("localising", 0.0), (groups,)),
@@ -72,11 +66,76 @@ def range_model(spec: RangeSpec, data: RangeData) -> None:
     numpyro.factor("fixes", jnp.where(solution.result == SOLVED, terms.sum(), -jnp.inf))
 
 
-def _population(spec: RangeSpec, data: RangeData, name: str, site: str) -> Array:
+def group_layout(spec: RangeSpec) -> Layout | None:
+    """The hierarchy of groups; None where they share everything."""
+    if not spec.varying:
+        return None
+    copies = {"resource": len(spec.layers)}
+    coefficients = tuple((name, spec.family(name), copies.get(name, 1)) for name in spec.varying)
+    return Layout("group", len(spec.groups), coefficients, spec.covariates)
+
+
+class RangeModel:
+    """The range cards as `Program` sees a model."""
+
+    def __init__(self, spec: RangeSpec) -> None:
+        self.spec = spec
+        self.layout = group_layout(spec)
+        self.has_other_states = spec.coupled and spec.solver == "gibbs"
+
+    def prior(self, data: RangeData) -> Parameters:
+        """Parameters from their priors."""
+        return sample_parameters(self.spec, data)
+
+    def joint(self, data: RangeData) -> None:
+        """Priors and likelihood."""
+        range_model(self.spec, data)
+
+    def centre(self, name: str, usual: Array, data: RangeData) -> Array:
+        """Where the search for the mode begins, for sites whose prior alone does not say."""
+        if name in ("home_x", "home_y"):
+            axis = ("home_x", "home_y").index(name)
+            low, high = data.box[axis], data.box[axis + 2]
+            margin = 1e-3 * (high - low)
+            return jnp.clip(jnp.asarray(data.home)[jnp.array(self.spec.estimated), axis], low + margin, high - margin)
+        if name == "over_marking":  # a wide prior has its centre where marks grow without bound
+            return jnp.minimum(usual, MODEST_MARKING)
+        return usual
+
+    def derive(self, parameters: Parameters, data: RangeData) -> tuple[dict[str, Array], dict[str, Array]]:
+        """Of a draw, what is kept (log-likelihood, areas, overlaps) and what is only summed (densities, isopleths)."""
+        terms, solution = log_likelihood(self.spec, data, parameters)
+        area = data.setting.domain.area
+        density = solution.density
+        denser, own = rank_mass(density, area)
+        inside, areas = isopleth_levels(denser, own, area, jnp.array(ISOPLETHS) / 100)
+        kept = {
+            "log_likelihood": terms.astype(jnp.float32), "area_km2": areas, "overlap": overlaps(density, area),
+            "solved": solution.result == SOLVED,
+        }  # fmt: skip
+        return kept, {"density": density, "density_squared": density**2, "inside": inside}
+
+    def extras(self, program: Any, positions: np.ndarray, data: RangeData, extra: Any) -> dict[str, np.ndarray]:
+        """Nothing more at the end of a chain."""
+        return {}
+
+    def other_state(self, parameters: Parameters, data: RangeData) -> Bool[Array, ""]:
+        """Whether groups that arrive one by one, in either order, settle in another steady state."""
+        usual = gibbs(parameters, data.setting)
+        order = range(len(self.spec.groups))
+        differs = jnp.zeros((), bool)
+        for arrival in (order, order[::-1]):
+            other = gibbs(parameters, data.setting, start=arrival_scent(parameters, data.setting, arrival))
+            gap = jnp.max(jnp.abs(other.density - usual.density)) / jnp.max(usual.density)
+            differs = differs | ((other.result == SOLVED) & (gap > 1e-5))
+        return differs
+
+
+def _population(spec: RangeSpec, data: RangeData, name: str) -> Array:
     prior = distribution(spec.family(name), data.priors[name])
     if name == "resource":
         prior = prior.expand([len(spec.layers)]).to_event(1)
-    return numpyro.sample(site, prior)
+    return numpyro.sample(name, prior)
 
 
 def _homes(spec: RangeSpec, data: RangeData) -> Float[Array, "groups 2"]:
@@ -89,100 +148,10 @@ def _homes(spec: RangeSpec, data: RangeData) -> Float[Array, "groups 2"]:
     return jnp.asarray(data.home).at[index].set(jnp.stack([x, y], axis=1))
 
 
-class Hierarchy(NamedTuple):
-    """Where groups' coefficients are expected and how far they spread, on the unconstrained scale.
-
-    Attributes:
-        expected: μ_g of each coefficient and group: the population value and the covariates' share.
-        spread: sd between groups of each coefficient.
-        factor: Cholesky factor of the correlation between a group's coefficients.
-    """
-
-    expected: Float[Array, "groups coefficients"]
-    spread: Float[Array, " coefficients"]
-    factor: Float[Array, "coefficients coefficients"]
-
-
-def sample_hierarchy(spec: RangeSpec, data: RangeData) -> Hierarchy:
-    """Draw what groups have in common from its prior."""
-    expected, spreads = [], []
-    for name, own in coefficient_rows(spec).items():
-        count = own.stop - own.start
-        centre = _population(spec, data, name, f"{name}_population")
-        centre = jnp.broadcast_to(centre if name in SIGNED else jnp.log(centre), (count,))
-        scale = jnp.asarray(data.spread_scale)[own]
-        spreads.append(numpyro.sample(f"{name}_spread", dist.HalfNormal(scale).to_event(1)))
-        mean = jnp.broadcast_to(centre, (len(spec.groups), count))
-        if spec.covariates:
-            prior = dist.Normal(0.0, data.effect_sd).expand([count, len(spec.covariates)]).to_event(2)
-            mean = mean + jnp.asarray(data.covariates) @ numpyro.sample(f"{name}_effect", prior).T
-        expected.append(mean)
-    mean, spread = jnp.concatenate(expected, axis=1), jnp.concatenate(spreads)
-    if spread.size == 1:
-        return Hierarchy(mean, spread, jnp.ones((1, 1)))
-    return Hierarchy(mean, spread, numpyro.sample("group_correlation", dist.LKJCholesky(spread.size, CORRELATION)))
-
-
-def coefficient_rows(spec: RangeSpec) -> dict[str, slice]:
-    """Which coefficients of the hierarchy belong to each varying parameter: one, or one a layer for `resource`."""
-    rows, first = {}, 0
-    for name in spec.varying:
-        count = len(spec.layers) if name == "resource" else 1
-        rows[name] = slice(first, first + count)
-        first += count
-    return rows
-
-
-def walk_coefficients(
-    hierarchy: Hierarchy,
-    centring: Float[Array, "groups coefficients"],
-    place: Callable[[int, Float[Array, " groups"], Float[Array, " groups"]], Float[Array, " groups"]],
-) -> Float[Array, "groups coefficients"]:
-    """Groups' coefficients η, one after another, each given those before it.
-
-    Coefficient k has mean m = μ_k + s_k Σ_{j<k} L_kj ξ_j and sd σ = s_k L_kk given the earlier ones, ξ_j their
-    innovations. It is sampled as ζ ~ N(c m, σ^c), η = m + σ^(1−c) (ζ − c m). c = 0 is the non-centred form, c = 1 the
-    centred one. Where the fixes of a group say more about its coefficient than the population does, the centred form
-    has the simpler geometry, and the other way round (Papaspiliopoulos, Roberts & Sköld 2007, Statistical Science
-    22:59). The posterior is the same for every c.
-
-    Args:
-        hierarchy: what groups have in common.
-        centring: c.
-        place: (k, c m, σ^c) → ζ of coefficient k.
-    """
-    etas: list[Array] = []
-    noise: list[Array] = []
-    for k in range(hierarchy.spread.size):
-        earlier = sum((hierarchy.factor[k, j] * noise[j] for j in range(k)), jnp.zeros(centring.shape[0]))
-        mean = hierarchy.expected[:, k] + hierarchy.spread[k] * earlier
-        sd = hierarchy.spread[k] * hierarchy.factor[k, k]
-        c = centring[:, k]
-        etas.append(mean + sd ** (1 - c) * (place(k, c * mean, sd**c) - c * mean))
-        noise.append((etas[-1] - mean) / sd)
-    return jnp.stack(etas, axis=1)
-
-
-def place_groups(
-    eta: Float[Array, "groups coefficients"], hierarchy: Hierarchy, centring: Float[Array, "groups coefficients"]
-) -> dict[str, Array]:
-    """Sites ζ that `walk_coefficients` turns into given coefficients η."""
-    scaled = (eta - hierarchy.expected) / hierarchy.spread
-    noise = jax.scipy.linalg.solve_triangular(hierarchy.factor, scaled.T, lower=True).T
-    sd = hierarchy.spread * jnp.diag(hierarchy.factor)
-    mean = eta - sd * noise
-    place = centring * mean + sd**centring * noise
-    return {f"group_place_{k}": place[:, k] for k in range(sd.size)}
-
-
-def _by_group(spec: RangeSpec, data: RangeData) -> dict[str, Array]:
+def _by_group(layout: Layout, data: RangeData) -> dict[str, Array]:
     """Values of each group for the varying parameters: (groups,), or (layers, groups) for `resource`."""
-
-    def place(k: int, centre: Array, width: Array) -> Array:
-        return numpyro.sample(f"group_place_{k}", dist.Normal(centre, width).to_event(1))
-
-    eta = walk_coefficients(sample_hierarchy(spec, data), jnp.asarray(data.centring), place)
+    eta = sample_units(layout, data)
     values: dict[str, Array] = {}
-    for name, own in coefficient_rows(spec).items():
+    for name, own in layout.rows.items():
         values[name] = numpyro.deterministic(name, eta[:, own].T if name in SIGNED else jnp.exp(eta[:, own.start]))
     return values

@@ -11,16 +11,14 @@ import jax.numpy as jnp
 import numpy as np
 from numpyro.infer.hmc import hmc
 
+from bayesrange.inference._models import Data
 from bayesrange.inference._program import MAX_TREE_DEPTH, Program, Whitening
-from bayesrange.inference._range_data import RangeData
 
 MOST = 50
 """Divergent transitions that are replayed at the most, the first of the chain; beyond that the run is lost anyway."""
 
 
-def failed_solves(
-    program: Program, data: RangeData, whitening: Whitening, state: Any, record: dict[str, np.ndarray]
-) -> int:
+def failed_solves(program: Program, data: Data, whitening: Whitening, state: Any, record: dict[str, np.ndarray]) -> int:
     """Number of divergent transitions that met a point without a steady state.
 
     Args:
@@ -36,7 +34,7 @@ def failed_solves(
         return 0
     infinite: list[bool] = []
 
-    def watched(data: RangeData, whitening: Whitening) -> Any:
+    def watched(data: Data, whitening: Whitening) -> Any:
         inner = program.potential_in_w(data, whitening)
 
         def potential(w: dict[str, jax.Array]) -> jax.Array:

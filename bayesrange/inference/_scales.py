@@ -63,9 +63,19 @@ def make_scales(study: Study, layers: list[str]) -> Scales:
         StudyError: a layer that the study lacks, or one without variation.
     """
     grid = study.grid
-    area = grid.habitable_km2
-    animals = float(study.groups["animals"].sum())
-    scales = {}
+    area, animals = grid.habitable_km2, float(study.groups["animals"].sum())
+    perception = study.settings.model.perception_m or 2 * grid.cell_m
+    home_length = float(np.sqrt(area / len(study.groups)))
+    return Scales(area / animals, home_length, perception, grid.cell_m / 2, layer_scales(study, layers))
+
+
+def layer_scales(study: Study, layers: list[str]) -> dict[str, LayerScale]:
+    """Mean and sd of layers over the habitable area.
+
+    Raises:
+        StudyError: a layer that the study lacks, or one without variation.
+    """
+    grid, scales = study.grid, {}
     for name in layers:
         if name not in study.layers:
             known = ", ".join(study.layers) or "none"
@@ -82,5 +92,4 @@ def make_scales(study: Study, layers: list[str]) -> Scales:
             )
         as_it_is = LayerScale(0.0, 1.0, "", layer.reference)
         scales[name] = as_it_is if layer.reference else LayerScale(mean, sd, layer.unit)
-    perception = study.settings.model.perception_m or 2 * grid.cell_m
-    return Scales(area / animals, float(np.sqrt(area / len(study.groups))), perception, grid.cell_m / 2, scales)
+    return scales

@@ -11,7 +11,7 @@ from arviz_stats.base import array_stats
 from bayesrange.inference._assemble import UNITS
 from bayesrange.inference._cards import SIGNED
 from bayesrange.inference._range_data import RangeSpec
-from bayesrange.inference._scales import Scales
+from bayesrange.inference._scales import LayerScale, Scales
 
 PROB = 0.9
 """Share of the posterior between `lower` and `upper`, equal tails."""
@@ -19,13 +19,17 @@ PROB = 0.9
 
 @dataclass(frozen=True)
 class Row:
-    """One reported quantity: its draws and the same quantity under the prior."""
+    """One reported quantity: its draws and the same quantity under the prior.
+
+    `individual` marks values of single groups or animals of a population, `animal` whose own posterior it is from.
+    """
 
     name: str
     unit: str
     draws: np.ndarray
     prior: np.ndarray
     individual: bool = False
+    animal: str = ""
 
 
 def rows(spec: RangeSpec, scales: Scales, posterior: xr.Dataset, prior: xr.Dataset, seed: int) -> list[Row]:
@@ -100,13 +104,17 @@ def _unit(name: str, layer: str | None, scales: Scales) -> str:
 def _raw(name: str, layer: str | None, scales: Scales) -> tuple[float | None, str]:
     """Factor and unit that turn a scaled parameter into raw units, where it is scaled."""
     if layer is not None:
-        scale = scales.layers[layer]
-        if scale.reference:
-            return None, ""
-        unit = scale.unit if scale.unit.isalnum() or not scale.unit else f"({scale.unit})"
-        return 1 / scale.sd, f"1/{unit}" if unit else "per unit of the layer"
+        return raw_layer_unit(scales.layers[layer])
     raw_units = {"avoidance": "km² per animal", "retreat": "km per animal", "over_marking": "km² per animal"}
     return (scales.a0_km2, raw_units[name]) if name in raw_units else (None, "")
+
+
+def raw_layer_unit(scale: LayerScale) -> tuple[float | None, str]:
+    """Factor and unit from per sd to per unit of a layer; none for a contrast of classes."""
+    if scale.reference:
+        return None, ""
+    unit = scale.unit if scale.unit.isalnum() or not scale.unit else f"({scale.unit})"
+    return 1 / scale.sd, f"1/{unit}" if unit else "per unit of the layer"
 
 
 def _values(array: xr.DataArray) -> np.ndarray:

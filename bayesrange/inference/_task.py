@@ -1,5 +1,6 @@
 """What a worker process needs to know, and the files through which it answers.
 
+    checkpoints/animal-N/           the following once for each animal, where each is fitted alone
     checkpoints/task.pkl            the model and its data, written once by the parent
     checkpoints/start.npz           mode, curvature and cost, written by the first worker
     checkpoints/chain-K/part-N.pkl  one chunk: draws so far of that chunk and the sampler's state after it
@@ -17,7 +18,7 @@ from typing import Any
 import numpy as np
 
 from bayesrange.inference._folder import write_atomically
-from bayesrange.inference._range_data import RangeData, RangeSpec
+from bayesrange.inference._models import Data, Spec
 
 CHUNK = 50
 """Most transitions between two checkpoints."""
@@ -36,16 +37,27 @@ class Task:
         seed: seed of the run; chain k uses (seed, k).
         target_accept: target of the step size adaptation.
         fingerprint: hash of everything that decides the draws.
+        label: what this task fits, where a run has several: the name of an animal.
+        extra: what the model's kind needs at the end of a chain.
     """
 
-    spec: RangeSpec
-    data: RangeData
+    spec: Spec
+    data: Data
     chains: int
     warmup: int
     draws: int
     seed: int
     target_accept: float
     fingerprint: str
+    label: str = ""
+    extra: Any = None
+
+
+def task_folders(checkpoints: Path, labels: list[str]) -> list[Path]:
+    """Folder of each task: the checkpoint folder itself, or one an animal in it."""
+    if labels == [""]:
+        return [checkpoints]
+    return [checkpoints / f"animal-{k + 1}" for k in range(len(labels))]
 
 
 def save_task(folder: Path, task: Task) -> None:

@@ -53,7 +53,7 @@ def _start(folder: Path) -> None:
         return program.value_and_gradient(jnp.asarray(z), data)
 
     start = find_start(density, guess)
-    if task.spec.varying:
+    if program.layout is not None:
         mode, data = program.centred(start.mode, start.curvature, data)
         start = start._replace(mode=mode, curvature=curvature_at(density, mode))
     scale = whitening_scale(start.curvature, program.apart())
@@ -66,14 +66,18 @@ def _start(folder: Path) -> None:
     state = program.begin(jnp.zeros(program.dimension), _key(task.seed, 0), data, whitening)
     program.advance.lower(state, 1, data, whitening).compile()
     program.derive.lower(whitening.mode, data).compile()
-    if task.spec.coupled and task.spec.solver == "gibbs":
+    if program.kind.has_other_states:
         program.other_state.lower(whitening.mode, data).compile()
     program.constrain.lower(jnp.zeros((task.draws, program.dimension)), data).compile()
     arrays = {"mode": start.mode, "scale": scale, "centring": np.asarray(data.centring), "potential": start.potential}
     arrays |= {"seconds_per_gradient": np.median(times), "peak_gib": _peak_gib()}
     save_arrays(folder / "start.npz", **{name: np.asarray(value) for name, value in arrays.items()})
     _say(
-        stage="started", seconds_per_gradient=float(np.median(times)), peak_gib=_peak_gib(), dimension=program.dimension
+        stage="started",
+        label=task.label,
+        seconds_per_gradient=float(np.median(times)),
+        peak_gib=_peak_gib(),
+        dimension=program.dimension,
     )
 
 
@@ -113,7 +117,8 @@ def _chain(folder: Path, chain: int) -> int:
         parts.append(part)
         done += count
         _say(
-            stage="warmup" if done <= task.warmup else "sampling", chain=chain, done=done, of=task.warmup + task.draws,
+            stage="warmup" if done <= task.warmup else "sampling", chain=chain, label=task.label, done=done,
+            of=task.warmup + task.draws,
             divergences=int(sum(part["record"]["diverging"].sum() for part in parts if not part["warmup"])),
             gradients=int(record["gradients"].sum()), step_size=float(record["step_size"][-1]),
         )  # fmt: skip
@@ -160,31 +165,30 @@ def _derive(
     positions = stats.pop("position")
     del stats["before"], stats["key"]
     parameters = {name: np.asarray(value) for name, value in program.constrain(jnp.asarray(positions), data).items()}
-    rows: dict[str, list[np.ndarray]] = {"log_likelihood": [], "area_km2": [], "overlap": [], "solved": []}
+    rows: dict[str, list[np.ndarray]] = {}
     sums: dict[str, np.ndarray] = {}
     for i, z in enumerate(positions):
-        derived = {name: np.asarray(value) for name, value in program.derive(jnp.asarray(z), data).items()}
-        for name, column in rows.items():
-            column.append(derived[name])
-        density = derived["density"]
-        for name, value in (("density", density), ("density_squared", density**2), ("inside", derived["inside"])):
-            sums[name] = sums.get(name, 0.0) + value
+        kept_of_draw, summed = program.derive(jnp.asarray(z), data)
+        for name, value in kept_of_draw.items():
+            rows.setdefault(name, []).append(np.asarray(value))
+        for name, value in summed.items():
+            sums[name] = sums.get(name, 0.0) + np.asarray(value)
         if (i + 1) % 50 == 0:
-            _say(stage="deriving", chain=chain, done=i + 1, of=len(positions))
-    checked = (
-        positions[:: max(1, len(positions) // CHECKED)][:CHECKED]
-        if task.spec.coupled and task.spec.solver == "gibbs"
-        else []
-    )
+            _say(stage="deriving", chain=chain, label=task.label, done=i + 1, of=len(positions))
+    every = max(1, len(positions) // CHECKED)
+    checked = positions[::every][:CHECKED] if program.kind.has_other_states else []
     two_states = sum(bool(program.other_state(jnp.asarray(z), data)) for z in checked)
     arrays = {f"sum_{name}": value for name, value in sums.items()}
-    arrays |= {name: np.stack(column) for name, column in rows.items()}
+    arrays |= {f"kept_{name}": np.stack(column) for name, column in rows.items()}
+    arrays |= {
+        f"extra_{name}": value for name, value in program.kind.extras(program, positions, data, task.extra).items()
+    }
     arrays |= {f"stat_{name}": value for name, value in stats.items()}
     arrays |= {f"site_{name}": value for name, value in parameters.items()}
     counts = {"failed_solves": failed, "two_states": two_states, "states_checked": len(checked)}
     counts["seconds"] = sum(part["seconds"] for part in parts)
     save_arrays(own / "derived.npz", **arrays, **{name: np.array(value) for name, value in counts.items()})
-    _say(stage="finished", chain=chain, peak_gib=_peak_gib())
+    _say(stage="finished", chain=chain, label=task.label, peak_gib=_peak_gib())
 
 
 def _peak_gib() -> float:

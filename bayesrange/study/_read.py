@@ -103,7 +103,8 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
 
     cell_m, said_of_cells = _cell(settings, fixes, area)
     frame = frame_of(area, cell_m)
-    said_of_cells += check_size(frame, len(groups), settings.sampling)
+    of_ranges = card_kind(settings.model.card, folder) == "range"
+    said_of_cells += check_size(frame, len(groups), settings.sampling) if of_ranges else []
     no_go = _no_go(settings, folder, frame, crs)
     habitable, said_of_scraps = without_scraps(area_sub_cells(area, frame) & ~no_go, frame)
     grid = build_grid(frame, crs, habitable)
@@ -115,7 +116,7 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     counts = raw.counts | {"fixes": len(fixes), "animals": fixes["animal"].nunique(), "groups": len(groups)}
     counts |= {"outside_within_error": outside} | ({"cells_filled": filled} if filled else {})
     warnings = said_of_crs + raw.warnings + said_of_groups + said_of_cells + said_of_scraps
-    if card_kind(settings.model.card, folder) == "range":
+    if of_ranges:
         warnings += check_resolution(fixes, grid)
     warnings += said_of_layers
     hashes = _hashes(path, settings, raw.files)

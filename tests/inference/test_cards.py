@@ -8,7 +8,7 @@ import pytest
 from bayesrange import StudyError
 from bayesrange._resources import models_folder
 from bayesrange.inference import cards, find_card, read_card
-from bayesrange.inference._cards import SCENT_TERMS, TERMS, VARYING
+from bayesrange.inference._cards import COMMON, SCENT_TERMS, TERMS, VARYING
 
 SHIPPED = {  # terms and solver of each card: the design of the models
     "localising": (("localising",), "gibbs"),
@@ -16,6 +16,10 @@ SHIPPED = {  # terms and solver of each card: the design of the models
     "avoidance": (("localising", "avoidance"), "gibbs"),
     "avoidance-resources": (("localising", "avoidance", "resources"), "gibbs"),
     "retreat-resources": (("localising", "retreat", "resources"), "flux"),
+    "steps-resources": (("steps", "resources"), ""),
+    "steps-home": (("steps", "resources", "home"), ""),
+    "memory": (("steps", "memory"), ""),
+    "memory-resources": (("steps", "resources", "memory"), ""),
 }
 
 GOOD = """
@@ -55,19 +59,23 @@ def test_shipped_card_says_what_it_assumes_and_why(name):
     assert card.file == models_folder() / f"{name}.toml" and card.name == name
     assert min(len(text) for text in (card.title, card.says, card.use_when, card.not_when)) > 15
     assert card.references and all(re.search(r"\(\d{4}\)", text) for text in card.references)
-    wanted = set(card.parameters) | ({"over_marking"} if set(card.terms) & set(SCENT_TERMS) else set())
-    assert set(card.priors) == wanted
-    assert all(len(prior.reason) > 30 for prior in [*card.priors.values(), *card.between_groups.values()])
-    assert set(card.between_groups) == set(card.parameters) & set(VARYING)
+    optional = {"over_marking"} if set(card.terms) & set(SCENT_TERMS) else set()
+    if card.kind == "memory":
+        optional = {"step_rhythm"} | ({"encoding_range"} if "memory" in card.terms else set())
+    assert set(card.priors) == set(card.parameters) | optional
+    assert all(len(prior.reason) > 30 for prior in [*card.priors.values(), *card.between.values()])
+    may_differ = set(VARYING) if card.kind == "range" else set(card.parameters) - set(COMMON)
+    assert set(card.between) == set(card.parameters) & may_differ
     assert card.covariate_effect.family == "normal" and card.covariate_effect.reason
 
 
 @pytest.mark.parametrize("name", SHIPPED)
 def test_priors_with_a_unit_scale_with_the_study_and_the_others_do_not(name):
-    # localising and retreat are in 1/km: only they may refer to the home length, and they must.
-    card = read_card(find_card(name))
-    for parameter, prior in card.priors.items():
-        assert prior.scaled_by == ("1/home_length" if parameter in ("localising", "retreat") else "")
+    # Parameters with a length in their unit refer to a length of the study, and only they.
+    with_length = {"localising": "1/home_length", "retreat": "1/home_length", "home_pull": "1/area_length"}
+    with_length |= {"step_scale": "median_step", "encoding_range": "median_step"}
+    for parameter, prior in read_card(find_card(name)).priors.items():
+        assert prior.scaled_by == with_length.get(parameter, "")
 
 
 def test_card_in_the_study_folder_goes_first(card, tmp_path):
@@ -141,7 +149,21 @@ BROKEN = {
         GOOD.replace("scale = 1.0", "scale = 1.0\nmean = 2"),
         "half-normal takes scale, not mean",
     ),
-    "scale unknown": (GOOD.replace("1/home_length", "1/cell"), "`scaled_by` must be 1/home_length, got '1/cell'"),
+    "kind unknown": ('kind = "steps"\n' + GOOD, "own.toml, kind: expected range or memory, got 'steps'"),
+    "memory without steps": ('kind = "memory"\nterms = ["memory"]\n', 'own.toml: a memory card needs the term "steps"'),
+    "memory with a solver": (
+        'kind = "memory"\nterms = ["steps"]\nsolver = "gibbs"\n',
+        'needs the term "steps", and has no solver',
+    ),
+    "spread of the other kind": (
+        GOOD + '[between_animals.localising]\nfamily = "half-normal"\nscale = 1.0\n',
+        r"\[between_animals\]: a card of kind 'range' has \[between_groups\]",
+    ),
+    "scale of another parameter": (
+        GOOD.replace("1/home_length", "median_step"),
+        r"\[priors.localising\]: `scaled_by` is 'median_step', but it may be",
+    ),
+    "scale unknown": (GOOD.replace("1/home_length", "1/cell"), "`scaled_by` must be 1/home_length or .*, got '1/cell'"),
     "negative allowed": (
         GOOD.replace('family = "half-normal"\nscale = 1.0', 'family = "normal"\nmean = 1\nsd = 1'),
         "own.toml, .priors.avoidance.: this parameter cannot be below 0",
@@ -222,4 +244,6 @@ def test_wrong_priors_of_the_study_name_the_study_file(card, override, sentence)
 
 
 def test_every_term_brings_a_parameter_of_its_own():
-    assert len(set(TERMS.values())) == len(TERMS)
+    for terms in TERMS.values():
+        brought = [name for names in terms.values() for name in names]
+        assert all(terms.values()) and len(set(brought)) == len(brought)

@@ -15,9 +15,10 @@ def workers(monkeypatch, tmp_path):
     """`run_workers` on small scripts in place of the worker module."""
     begun = []
 
-    def launch(folder, arguments, errors):
+    def launch(arguments, errors):
+        folder, script = arguments
         process = subprocess.Popen(
-            [sys.executable, "-c", *arguments], stdout=subprocess.PIPE, stderr=errors, text=True, cwd=folder
+            [sys.executable, "-c", script], stdout=subprocess.PIPE, stderr=errors, text=True, cwd=folder
         )
         begun.append(process)
         return process
@@ -26,7 +27,7 @@ def workers(monkeypatch, tmp_path):
 
     def run(scripts, at_once=2, tell=None):
         heard = []
-        run_workers(tmp_path, [[script] for script in scripts], at_once, tell or heard.append, tmp_path / "log")
+        run_workers([[str(tmp_path), script] for script in scripts], at_once, tell or heard.append, tmp_path / "log")
         return heard
 
     run.begun, run.folder = begun, tmp_path
@@ -87,7 +88,7 @@ def test_worker_takes_no_module_from_the_folder_where_the_user_works(tmp_path, m
         (tmp_path / name).write_text("raise SystemExit('a file of the user ran inside the worker')")
     monkeypatch.chdir(tmp_path)
     with (tmp_path / "log").open("ab") as errors:
-        with _processes._launch(tmp_path / "nowhere", ["start"], errors) as process:
+        with _processes._launch([str(tmp_path / "nowhere"), "start"], errors) as process:
             assert process.wait() == 1
     said = (tmp_path / "log").read_text()
     assert "of the user" not in said

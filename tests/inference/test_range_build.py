@@ -35,7 +35,10 @@ median = 8.0
 spread = 0.8
 """
 WRONG = {
-    "kind": ({"own_card": 'kind = "steps"\n' + OWN, "layers": []}, 'own is a card of kind "steps", which is not built'),
+    "a key of memory cards": (
+        {"card": "resources", "interval_h": 1.0},
+        r"interval_h: it is for memory cards, and resources is none",
+    ),
     "layers missing": ({"card": "resources", "layers": []}, r"layers: the card resources responds to layers; list at"),
     "layers too many": ({"card": "avoidance"}, r"layers: the card avoidance has no resource term; take the list out"),
     "over-marking": ({"card": "resources", "over_marking": True}, "over_marking: the card resources has no term that"),

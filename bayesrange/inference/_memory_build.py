@@ -1,0 +1,398 @@
+"""From a study and a memory card to specification, scales and arrays."""
+
+from dataclasses import asdict, dataclass, replace
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from bayesrange._errors import StudyError
+from bayesrange.inference._cards import Card
+from bayesrange.inference._covariates import code_columns
+from bayesrange.inference._memory_data import EXCESS, MemoryData, MemorySpec
+from bayesrange.inference._memory_model import animal_layout
+from bayesrange.inference._memory_study import Tracks, animal_column, make_tracks
+from bayesrange.inference._memory_tables import (
+    Proof,
+    TableInput,
+    make_proved,
+    split_animals,
+    surface_table,
+)
+from bayesrange.inference._priors import Prior
+from bayesrange.inference._scales import LayerScale, layer_scales
+from bayesrange.memory import Landscape, Steps, choose_count, quadrature_error, wide_reference
+from bayesrange.study import Study
+
+TAIL = 3.3
+"""Prior sds (of the logarithm) that the table of decay times covers: 99.9 % of the prior."""
+RANGE_TAIL = 2.0
+"""The same for an estimated encoding range, whose prior is cut off there."""
+MOST_CELLS = 10_000
+"""Cells of the recall surfaces, at the most; finer grids are thinned."""
+FEWEST_POOLED = 3
+
+
+@dataclass(frozen=True)
+class MemoryScales:
+    """The frozen scales of a fit of steps.
+
+    Attributes:
+        median_step_m: median step [m]; the unit of some priors.
+        encoding_range_m: encoding range, or the middle of its prior where it is estimated [m].
+        area_length_km: root of the habitable area [km].
+        shortest_step_m: steps below it count as rest [m].
+        interval_h: nominal sampling interval [h].
+        home_eps_m: softening of the distance to a centre, half a cell [m].
+        layers: scale of each layer, in the model's order.
+    """
+
+    median_step_m: float
+    encoding_range_m: float
+    area_length_km: float
+    shortest_step_m: float
+    interval_h: float
+    home_eps_m: float
+    layers: dict[str, LayerScale]
+
+    def as_json(self) -> dict[str, Any]:
+        """Plain numbers for run.json."""
+        return asdict(self)
+
+    @classmethod
+    def from_json(cls, table: dict[str, Any]) -> "MemoryScales":
+        """The scales that a run.json holds."""
+        layers = {name: LayerScale(**scale) for name, scale in table["layers"].items()}
+        return cls(**{**table, "layers": layers})
+
+
+@dataclass(frozen=True)
+class MemoryPlan:
+    """A memory fit before its tables are made.
+
+    Attributes:
+        spec: the static part; of all animals, also where each is fitted alone.
+        scales: frozen scales.
+        tracks: the animals' records.
+        landscape: ground and standardised layers.
+        priors: of each coordinate, in the units of the numerics.
+        spread_scale: of each coefficient of the hierarchy.
+        covariates: coded, of each unit.
+        effect_sd: prior sd of a covariate's coefficient.
+        seed: of the nodes.
+        nodes: nodes a step, as asked for; None: by a pilot.
+    """
+
+    spec: MemorySpec
+    scales: MemoryScales
+    tracks: Tracks
+    landscape: Landscape
+    priors: dict[str, Prior]
+    spread_scale: np.ndarray
+    covariates: np.ndarray
+    effect_sd: float
+    seed: int
+    nodes: int | None
+
+
+@dataclass(frozen=True)
+class MemoryTables:
+    """What was made for the sampler: one set of arrays, or one an animal where each is fitted alone."""
+
+    data: list[MemoryData]
+    inputs: list[TableInput]
+    proof: Proof
+    nodes: int
+    pilot: dict[int, float]
+
+
+def make_plan(study: Study, card: Card) -> MemoryPlan:
+    """Check a study against a memory card and lay out its fit.
+
+    Raises:
+        StudyError: the two do not fit together.
+    """
+    _check_card(study, card)
+    model = study.settings.model
+    tracks = make_tracks(study)
+    pooled = _pooled(study, tracks)
+    layers = study.model_layers if "resources" in card.terms else ()
+    scales = _scales(study, tracks, layer_scales(study, list(layers)))
+    optional = (("encoding_range",) if _estimates_range(study, card) else ()) + (
+        ("step_rhythm",) if "step_length" in model.vary else ()
+    )
+    for name in optional:
+        if name not in card.priors:
+            raise StudyError(f"{card.file.name}: no prior for {name}; write [priors.{name}] with family and numbers.")
+    names = card.parameters + optional
+    priors = {EXCESS.get(name, name): _prior(card.priors[name], name, scales) for name in names}
+    by_day = "selection" in model.vary
+    named = tuple(f"{layer}, {part}" for layer in layers for part in ("day", "night")) if by_day else layers
+    covariates = _covariates(study, tracks, pooled)
+    spec = MemorySpec(
+        parameters=names,
+        families=tuple((name, prior.family) for name, prior in priors.items()),
+        pooled=pooled,
+        layers=named,
+        animals=tuple(one.name for one in tracks.animals),
+        units=tuple(" + ".join(tracks.animals[i].name for i in unit) for unit in tracks.units),
+        covariates=tuple(name for name, _ in covariates),
+        rhythm="step_rhythm" in optional,
+        estimated_range="encoding_range" in optional,
+        range_limits=_range_limits(priors, scales),
+    )
+    layout = animal_layout(spec)
+    spreads = [_spread(card, name) for name, _, count in layout.coefficients for _ in range(count)] if layout else []
+    coded = [values for _, values in covariates]
+    return MemoryPlan(
+        spec, scales, tracks, _landscape(study, scales, list(layers)), priors, np.array(spreads),
+        np.stack(coded, axis=1) if coded else np.zeros((len(spec.units), 0)), card.covariate_effect.numbers[1],
+        study.settings.sampling.seed, None if model.nodes == "auto" else int(model.nodes),
+    )  # fmt: skip
+
+
+def make_tables(plan: MemoryPlan, study: Study) -> MemoryTables:
+    """Choose nodes and columns, and tabulate every animal's past."""
+    inputs, spec = _table_input(plan, study), plan.spec
+    pilot: dict[int, float] = {}
+    if plan.nodes is None:
+        pilot = quadrature_error(_sample(plan.tracks), plan.landscape, inputs.reference, seed=plan.seed)
+    count = plan.nodes or choose_count(pilot)
+    cells = _surface_cells(study, spec.remembers)
+    inputs, steps, proof = make_proved(inputs, count)
+    if spec.pooled:
+        return MemoryTables([_memory_data(plan, study, inputs, steps, cells)], [inputs], proof, count, pilot)
+    alone = replace(plan, covariates=np.zeros((1, 0)))
+    data, own = [], [inputs.only(k) for k in range(len(spec.animals))]
+    for one, blocks in zip(own, split_animals(steps), strict=True):
+        data.append(_memory_data(alone, study, one, blocks, cells))
+    return MemoryTables(data, own, proof, count, pilot)
+
+
+def specs_of(plan: MemoryPlan) -> list[MemorySpec]:
+    """One specification, or one an animal where each is fitted alone."""
+    if plan.spec.pooled:
+        return [plan.spec]
+    return [replace(plan.spec, animals=(name,), units=(name,)) for name in plan.spec.animals]
+
+
+def surface_axes(study: Study) -> tuple[np.ndarray, np.ndarray]:
+    """Cell centres of the recall surfaces [m]: the grid's, thinned where it is finer than needed."""
+    every = max(1, int(np.ceil(np.sqrt(study.grid.inside.sum() / MOST_CELLS))))
+    return study.grid.x_m[every // 2 :: every], study.grid.y_m[every // 2 :: every]
+
+
+def _surface_cells(study: Study, remembers: bool) -> np.ndarray:
+    x, y = surface_axes(study)
+    places = np.stack([np.tile(x, y.size), np.repeat(y, x.size)], axis=1) / 1000
+    return places if remembers else places[:0]
+
+
+def _memory_data(plan: MemoryPlan, study: Study, inputs: TableInput, steps: Any, cells: np.ndarray) -> MemoryData:
+    grid, animals = study.grid, inputs.animals
+    decay, reach = steps.decay_basis, steps.range_basis
+    unit = np.zeros(len(animals), np.int32)
+    if plan.spec.pooled:
+        for k, members in enumerate(plan.tracks.units):
+            unit[members] = k
+    rows, columns = np.nonzero(grid.inside)
+    half = grid.cell_m / 2
+    box = [
+        grid.x_m[columns.min()] - half, grid.y_m[rows.min()] - half, grid.x_m[columns.max()] + half,
+        grid.y_m[rows.max()] + half,
+    ]  # fmt: skip
+    surface = surface_table(inputs, *cells.T, decay, reach) if len(cells) else np.zeros((len(animals), 0, 0))
+    units = plan.covariates.shape[0]
+    return MemoryData(
+        steps=steps,
+        surface=surface.astype(np.float32),
+        home=np.array([[one.track.x.mean(), one.track.y.mean()] for one in animals]),
+        box=np.array(box) / 1000,
+        home_eps=np.asarray(plan.scales.home_eps_m / 1000),
+        unit=unit,
+        least_decay=np.asarray(plan.scales.interval_h / 2),
+        fixed_range=np.asarray(plan.scales.encoding_range_m / 1000),
+        priors={name: np.array(prior.numbers) for name, prior in plan.priors.items()},
+        spread_scale=plan.spread_scale,
+        covariates=plan.covariates,
+        effect_sd=np.asarray(plan.effect_sd),
+        centring=np.zeros((units, plan.spread_scale.size)),
+    )
+
+
+def _table_input(plan: MemoryPlan, study: Study) -> TableInput:
+    moved = np.concatenate([one.steps.length[~one.steps.short] for one in plan.tracks.animals])
+    sizes = np.ones(len(plan.tracks.animals))
+    if plan.spec.pooled:
+        for members in plan.tracks.units:
+            sizes[members] = len(members)
+    return TableInput(
+        animals=tuple(plan.tracks.animals), landscape=plan.landscape, reference=wide_reference(moved),
+        shortest=plan.scales.shortest_step_m / 1000, decays=_decays(plan), ranges=plan.spec.range_limits,
+        columns=(24, 10), by_day="selection" in study.settings.model.vary, home="home_pull" in plan.spec.parameters,
+        weight=tuple(1 / sizes), seed=plan.seed,
+    )  # fmt: skip
+
+
+def _decays(plan: MemoryPlan) -> tuple[float, float] | None:
+    """Shortest and longest decay time that the priors leave open [h]."""
+    if not plan.spec.remembers:
+        return None
+    least = plan.scales.interval_h / 2
+    layout = animal_layout(plan.spec)
+    between = {name: float(plan.spread_scale[layout.rows[name]][0]) if layout else 0.0 for name in EXCESS.values()}
+    return least, least + sum(upper_end(plan.priors[name], between[name]) for name in EXCESS.values())
+
+
+def upper_end(prior: Prior, between: float = 0.0) -> float:
+    """Value that a positive prior, of an animal whose logarithm spreads by `between`, hardly ever passes (99.9 %)."""
+    if prior.family == "log-normal":
+        return prior.numbers[0] * float(np.exp(TAIL * np.hypot(prior.numbers[1], between)))
+    tail = {"half-normal": TAIL, "exponential": 7.0}.get(prior.family, 1.0)
+    return tail * prior.numbers[-1] * float(np.exp(TAIL * between))
+
+
+def _range_limits(priors: dict[str, Prior], scales: MemoryScales) -> tuple[float, float]:
+    prior = priors.get("encoding_range")
+    if prior is None:
+        return scales.encoding_range_m / 1000, scales.encoding_range_m / 1000
+    if prior.family != "log-normal":
+        raise StudyError(
+            f'[model.priors] encoding_range: expected family = "log-normal", because its table needs an end on both '
+            f"sides; got {prior.family}."
+        )
+    median, spread = prior.numbers
+    return float(median * np.exp(-RANGE_TAIL * spread)), float(median * np.exp(RANGE_TAIL * spread))
+
+
+def _check_card(study: Study, card: Card) -> None:
+    model, where = study.settings.model, study.path.name
+    if model.pooling == "shared":
+        raise StudyError(
+            f'{where}, [model] pooling: memory cards take "individual" or "hierarchical"; "shared" is for range cards.'
+        )
+    remembers, selects = "memory" in card.terms, "resources" in card.terms
+    for key, given, needs in (
+        ("perception_m", model.perception_m is not None, "a range card"),
+        ("over_marking", model.over_marking, "a range card"),
+        ("reading", model.reading != "bilinear", "a range card"),
+        (
+            "autocorrelation",
+            "autocorrelation" in model.model_fields_set,
+            "a range card: steps follow one another anyway",
+        ),
+        ("encoding_range_m", model.encoding_range_m is not None and not remembers, "a card with memory"),
+        ("memory_start", model.memory_start == "learned" and not remembers, "a card with memory"),
+    ):
+        if given:
+            raise StudyError(f"{where}, [model] {key}: {card.name} has no use for it; it is for {needs}: take it out.")
+    if selects and not model.layers:
+        raise StudyError(
+            f"{where}, [model] layers: the card {card.name} responds to layers; list at least one, such as "
+            'layers = ["forage"].'
+        )
+    if model.layers and not selects:
+        raise StudyError(
+            f"{where}, [model] layers: the card {card.name} has no resource term; take the list out or choose another "
+            "card."
+        )
+    if "selection" in model.vary and not selects:
+        raise StudyError(f'{where}, [model] vary: the card {card.name} has no selection; take "selection" out.')
+    for name, optional in (
+        ("encoding_range", model.encoding_range_m == "estimate"),
+        ("step_rhythm", "step_length" in model.vary),
+    ):
+        if name in model.priors and not optional:
+            raise StudyError(
+                f"{where}, [model.priors] {name}: this prior has no use here; set "
+                f"{'encoding_range_m = "estimate"' if name == 'encoding_range' else 'vary = ["step_length"]'} in "
+                "[model], or take the prior out."
+            )
+
+
+def _pooled(study: Study, tracks: Tracks) -> bool:
+    model, where, units = study.settings.model, study.path.name, len(tracks.units)
+    if model.pooling == "hierarchical" and units < FEWEST_POOLED:
+        raise StudyError(
+            f'{where}, [model] pooling: "hierarchical" needs at least {FEWEST_POOLED} animals that travel apart, the '
+            f'study has {units}; use "individual".'
+        )
+    pooled = model.pooling == "hierarchical" or (model.pooling is None and units >= FEWEST_POOLED)
+    if pooled and "new animal" in {one.name for one in tracks.animals}:
+        raise StudyError(
+            f'{where}: an animal is called "new animal", which is what the tables call one from the population; '
+            "rename it."
+        )
+    if model.covariates and not pooled:
+        raise StudyError(f'{where}, [model] covariates: covariates of animals need pooling = "hierarchical".')
+    return pooled
+
+
+def _covariates(study: Study, tracks: Tracks, pooled: bool) -> list[tuple[str, np.ndarray]]:
+    """Coded covariates of the units; animals that travel together must agree."""
+    columns = {}
+    for name in study.settings.model.covariates if pooled else ():
+        found = animal_column(study, name)
+        where = f"{study.path.name}, [model] covariates"
+        if found is None or name in ("animal", "tag", "from", "until"):
+            raise StudyError(f"{where}: the animals table has no column {name!r} that could be a covariate.")
+        values = [[found.get(tracks.animals[i].name, "") for i in unit] for unit in tracks.units]
+        for unit, own in zip(tracks.units, values, strict=True):
+            if len(set(own)) > 1:
+                names = " and ".join(tracks.animals[i].name for i in unit)
+                raise StudyError(
+                    f"{where}: {names} travel together and count as one, but differ in {name!r}; leave it out, or set "
+                    'travelling_together = "counted_each".'
+                )
+        columns[name] = pd.Series([own[0] for own in values]).replace("", np.nan)
+    units = [" + ".join(tracks.animals[i].name for i in unit) for unit in tracks.units]
+    return code_columns(columns, units, "animal", f"{study.path.name}, [model] covariates")
+
+
+def _scales(study: Study, tracks: Tracks, layers: dict[str, LayerScale]) -> MemoryScales:
+    given = study.settings.model.encoding_range_m
+    return MemoryScales(
+        median_step_m=tracks.median_step_m,
+        encoding_range_m=float(given) if isinstance(given, int | float) else tracks.median_step_m,
+        area_length_km=float(np.sqrt(study.grid.habitable_km2)),
+        shortest_step_m=tracks.shortest_m, interval_h=tracks.interval_h, home_eps_m=study.grid.cell_m / 2,
+        layers=layers,
+    )  # fmt: skip
+
+
+def _estimates_range(study: Study, card: Card) -> bool:
+    return study.settings.model.encoding_range_m == "estimate" and "memory" in card.terms
+
+
+def _prior(prior: Prior, name: str, scales: MemoryScales) -> Prior:
+    """The prior in the units of the numerics: lengths in km."""
+    if prior.scaled_by == "median_step":
+        return prior.times(scales.median_step_m / 1000)
+    if prior.scaled_by == "1/area_length":
+        return prior.times(1 / scales.area_length_km)
+    return prior.times(1 / 1000) if name in ("step_scale", "encoding_range") else prior
+
+
+def _spread(card: Card, coefficient: str) -> float:
+    name = {inner: outer for outer, inner in EXCESS.items()}.get(coefficient, coefficient)
+    if name not in card.between:
+        raise StudyError(
+            f'{card.file.name}: pooling = "hierarchical" needs a prior of the spread between animals; write '
+            f'[between_animals.{name}] with family = "half-normal" and a scale.'
+        )
+    return card.between[name].numbers[0]
+
+
+def _landscape(study: Study, scales: MemoryScales, layers: list[str]) -> Landscape:
+    grid = study.grid
+    values = np.zeros((len(layers), *grid.shape))
+    for k, name in enumerate(layers):
+        scale = scales.layers[name]
+        values[k] = np.where(grid.inside, (study.layers[name].values - scale.mean) / scale.sd, 0.0)
+    place = (np.asarray(v / 1000) for v in (grid.west_m, grid.south_m, grid.cell_m))
+    return Landscape(*place, values, np.asarray(grid.inside), np.asarray(grid.sub_cells))
+
+
+def _sample(tracks: Tracks) -> Steps:
+    """Every animal's steps in one, for the pilot."""
+    return Steps(*(np.concatenate(columns) for columns in zip(*(one.steps for one in tracks.animals), strict=True)))
