@@ -82,7 +82,7 @@ def read_bare(path: str | Path) -> BareStudy:
     settings, said = read_settings_to_screen(path)
     folder = path.parent
     kept = settings.fixes.model_copy(update={"drop": DropSection(flags=["duplicate"])})  # so that none is refused
-    raw = read_fixes(folder, kept, settings.animals, settings.study.crs)
+    raw = read_fixes(folder, kept, settings.animals, settings.study.crs, settings.bearings)
     crs, fixes_crs, said_of_crs = reference_systems(settings, raw)
     fixes = placed(raw.table, fixes_crs, crs).drop(columns=["minutes", "kept_by_column"])
     nothing: list[str] = []

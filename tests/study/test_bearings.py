@@ -6,6 +6,8 @@ import pyproj
 import pytest
 from study._vhf import CRS, HILLS, SOUTH, WEST, hill_convergence, only_bearings, write
 
+from bayesrange.study._bare import read_bare
+
 ELLIPSE = ["error_major_m", "error_minor_m", "error_bearing_deg"]
 
 
@@ -200,3 +202,11 @@ def test_tags_of_bearings_become_animals_and_hours_are_kept(folder):
     assert set(study.fixes["animal"]) == {"N1", "S1", "E1"}
     assert study.counts["outside_deployment"] > 0 and study.counts["not_kept_by_hours"] > 0
     assert set((study.fixes["time"] + pd.Timedelta("1h")).dt.hour) == {0, 4, 20}
+
+
+def test_the_look_at_the_data_sees_places_from_bearings(folder):
+    _, table = only_bearings(folder)
+    plain = write(folder, table)
+    bare = read_bare(folder.path("study.toml"))
+    assert len(bare.fixes) == len(plain.fixes) and len(bare.failed) == 0
+    np.testing.assert_array_equal(bare.fixes[["x", "y", *ELLIPSE]], plain.fixes[["x", "y", *ELLIPSE]])
