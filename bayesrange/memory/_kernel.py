@@ -5,16 +5,23 @@ Gamma lengths [km], von Mises turns [rad] about straight on. JAX, double precisi
 
 import jax
 import jax.numpy as jnp
-from jax.scipy.special import gammaln, i0e
+from jax.scipy.special import gammaln, i0e, i1e
 from jaxtyping import Array, Bool, Float
 
 LONGEST_SERIES = 2_000
 """Most terms of the series of `log_short_chance`; 60 are enough where the short length is below ten scales."""
 
 
+@jax.custom_jvp
 def log_bessel(concentration: Float[Array, "*shape"]) -> Float[Array, "*shape"]:
     """Log I₀(κ), even in κ, without overflow."""
     return jnp.log(i0e(concentration)) + jnp.abs(concentration)
+
+
+@log_bessel.defjvp
+def _log_bessel_jvp(primals: tuple, tangents: tuple) -> tuple[Array, Array]:
+    (concentration,), (change,) = primals, tangents  # the slope of |κ| alone is 1 at 0 here, not 0
+    return log_bessel(concentration), i1e(concentration) / i0e(concentration) * change
 
 
 def log_step_density(

@@ -126,8 +126,9 @@ def _log_decay(tangent: StepParameters, parameters: StepParameters) -> Float[Arr
 
 def _by_row(by_trace: _Traces, traces: _Traces) -> Float[Array, " rows"]:
     """Change of a block's log-likelihood with log τ_R, log τ_W (and log σ through R, and through W)."""
-    used = by_trace.used[None] * traces.used[2:].reshape(-1, *by_trace.used.shape)
-    nodes = by_trace.nodes[None] * traces.nodes[2:].reshape(-1, *by_trace.nodes.shape)
+    kinds = len(traces.used) // 2 - 1
+    used = by_trace.used[None] * traces.used[2:].reshape(kinds, *by_trace.used.shape)
+    nodes = by_trace.nodes[None] * traces.nodes[2:].reshape(kinds, *by_trace.nodes.shape)
     return (used.sum(2) + nodes.sum(3).astype(float).sum(2)).reshape(-1)
 
 
@@ -235,7 +236,8 @@ def _all_traces(parameters: StepParameters, data: StepData, slopes: bool) -> _Tr
     """R and W of all steps, and with `slopes` their changes too, from one product with each table."""
     blocks, columns, steps, nodes = data.table_nodes.shape
     if not columns:
-        return _Traces(jnp.zeros((blocks, 2, 0)), jnp.zeros((blocks, 2, 0, nodes), data.table_nodes.dtype))
+        rows = 4 if slopes else 2
+        return _Traces(jnp.zeros((blocks, rows, 0)), jnp.zeros((blocks, rows, 0, nodes), data.table_nodes.dtype))
     log_decay = jnp.log(jnp.stack([parameters.reference_decay, parameters.working_decay], axis=1))
     log_range = jnp.log(parameters.encoding_range)
 

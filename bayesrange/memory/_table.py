@@ -78,7 +78,7 @@ class _Encoding:
         far = distance > FARTHEST * self.longest
         weights = self.columns(np.where(far, 0.0, distance))
         weights[far] = 0.0
-        return np.moveaxis(weights, -1, 0)
+        return list(np.moveaxis(weights, -1, 0))
 
 
 def _squares(

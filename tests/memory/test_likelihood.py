@@ -58,7 +58,7 @@ def twin(case, track, home, **values):
 
 
 def by_step(data, p):
-    return np.asarray(step_log_likelihood(p, data))[np.asarray(data.counted)]
+    return np.asarray(jax.jit(step_log_likelihood)(p, data))[np.asarray(data.counted)]
 
 
 def test_the_case_holds_what_can_go_wrong(case):
@@ -79,7 +79,7 @@ def test_each_step_is_its_slow_twin(case, track, home, values):
 
 def test_weighted_sums_of_steps(case):
     data, p = case.blocks(weight=np.array([0.3])), parameters()
-    assert np.isclose(animal_log_likelihood(p, data)[0], 0.3 * by_step(data, p).sum(), rtol=1e-12)
+    assert np.isclose(jax.jit(animal_log_likelihood)(p, data)[0], 0.3 * by_step(data, p).sum(), rtol=1e-12)
 
 
 NAMES = [
@@ -151,9 +151,9 @@ def test_second_derivatives_exist(estimated):
         moved = p._replace(reference_decay=p.reference_decay * jnp.exp(t[0]), scale=p.scale * jnp.exp(t[1]))
         return animal_log_likelihood(moved, estimated).sum()
 
-    found, h = jax.hessian(along)(jnp.zeros(2)), 1e-5
+    found, h = jax.jit(jax.hessian(along))(jnp.zeros(2)), 1e-5
     unit = jnp.eye(2) * h
-    slope = jax.grad(along)
+    slope = jax.jit(jax.grad(along))
     difference = jnp.stack([(slope(row) - slope(-row)) / (2 * h) for row in unit])
     # differences of gradients good to 1e-12 of about 100
     assert np.allclose(found, difference, rtol=1e-6, atol=1e-5)
@@ -193,12 +193,13 @@ def test_padding_and_company_change_nothing(track, case):
     assert np.asarray(together.animal).tolist() == [0, 1, 1, 2, 2]
     kept = np.asarray(together.counted)[1:3]
     # the batched product sums 26 columns in single precision in an order of its own
-    assert np.allclose(step_log_likelihood(p, together)[1:3][kept], by_step(alone, one), rtol=0, atol=2e-6)
-    totals = animal_log_likelihood(p, together)
-    assert np.isclose(totals[1], animal_log_likelihood(one, alone)[0], atol=1e-5, rtol=0)
-    slope = jax.grad(lambda p: animal_log_likelihood(p, together)[1])(p)
+    of_all = np.asarray(jax.jit(step_log_likelihood)(p, together))
+    assert np.allclose(of_all[1:3][kept], by_step(alone, one), rtol=0, atol=2e-6)
+    totals = jax.jit(animal_log_likelihood)
+    assert np.isclose(totals(p, together)[1], totals(one, alone)[0], atol=1e-5, rtol=0)
+    slope = jax.jit(jax.grad(lambda p: animal_log_likelihood(p, together)[1]))(p)
     assert not np.asarray(slope.shape)[[0, 2]].any() and slope.shape[1] != 0
-    assert not np.asarray(step_log_likelihood(p, together))[~np.asarray(together.counted)].any()
+    assert not of_all[~np.asarray(together.counted)].any()
 
 
 def test_no_layers_and_no_memory_is_the_kernel_alone(track):
@@ -209,7 +210,7 @@ def test_no_layers_and_no_memory_is_the_kernel_alone(track):
     full = build(track, layers=2)
     same = by_step(full.blocks(), parameters(**NO_WEIGHT))
     assert np.allclose(by_step(data, p), same, rtol=0, atol=1e-12)
-    assert all(np.isfinite(part).all() for part in jax.grad(lambda p: animal_log_likelihood(p, data).sum())(p))
+    assert all(np.isfinite(part).all() for part in jax.jit(jax.grad(lambda p: animal_log_likelihood(p, data).sum()))(p))
 
 
 def test_steps_without_a_node_on_the_ground_are_set_aside(track):

@@ -6,7 +6,17 @@ import pytest
 from memory._cases import SIGMA, build, parameters, walk
 from memory._twin import recall
 
-from bayesrange.memory import Basis, decay_basis, fixed_range, make_stays, range_basis, step_log_ratio, tabulate, traces
+from bayesrange.memory import (
+    Basis,
+    decay_basis,
+    fixed_range,
+    make_stays,
+    no_memory,
+    range_basis,
+    step_log_ratio,
+    tabulate,
+    traces,
+)
 
 TYPICAL, STRONG = (3.0, 1.2, 6.0), (6.0, 3.0, 1.0)  # κ_R, κ_W, m₀ [h]
 # half an interval to 15,000 h; both ends and random between
@@ -67,12 +77,13 @@ def test_too_few_columns_are_seen_to_fail(long_case):
 
 
 def test_an_estimated_range_is_held_too():
+    """14 range columns for ranges a factor of six apart."""
     track = walk(260, 12)
     sigmas = [0.05, 0.11, 0.3]
     pairs = [(decay, sigma) for sigma in sigmas for decay in (400.0, 6.0)]
-    bases = (decay_basis(0.9, 300.0, 0.5, 3000.0, 16), range_basis(0.05, 0.3, 10))
+    bases = (decay_basis(0.9, 300.0, 0.5, 3000.0, 16), range_basis(0.05, 0.3, 14))
     case = build(track, nodes=24, bases=bases, exact_at=pairs)
-    assert case.animal.table.shape[-1] == 160
+    assert case.animal.table.shape[-1] == 16 * 14
     for k, sigma in enumerate(sigmas):
         log_decay = jnp.log(jnp.array([400.0, 6.0]))
         held = np.asarray(traces(jnp.asarray(case.animal.table), log_decay, jnp.log(sigma), *bases), float)
@@ -95,8 +106,6 @@ def test_fewer_columns_are_a_slice():
 
 
 def test_a_table_without_columns_is_empty():
-    from bayesrange.memory import no_memory
-
     track = walk(30, 5)
     x, y = track.x[:, None], track.y[:, None]
     table, exact = tabulate(make_stays(track, 1.0), track.time, x, y, no_memory(), fixed_range(SIGMA))
