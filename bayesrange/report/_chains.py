@@ -46,6 +46,7 @@ def chains_figure(run: RunContents, draws: dict[str, Float[NDArray, "chain draw"
         run: what the run folder holds.
         draws: by name, in the order to show; `main_draws` if not given.
     """
+    write_out = short if draws is None else _two_lines
     draws = main_draws(run) if draws is None else draws
     shown = dict(list(draws.items())[:AT_MOST])
     if not shown:
@@ -54,7 +55,7 @@ def chains_figure(run: RunContents, draws: dict[str, Float[NDArray, "chain draw"
         figure = Figure(figsize=(11.0, 1.25 * len(shown) + 0.8), layout="constrained")
         panels = figure.subplots(len(shown), 2, squeeze=False, width_ratios=[3, 2])
         for (trace, ranks), (label, values) in zip(panels, shown.items(), strict=True):
-            _trace(trace, label, values)
+            _trace(trace, write_out(label), values)
             _ranks(ranks, values)
         panels[0, 0].set_title("Trace")
         panels[0, 1].set_title("Ranks of each chain among all draws")
@@ -95,10 +96,16 @@ def _flat(variable: str, values: xr.DataArray) -> list[tuple[str, xr.DataArray]]
     return entries
 
 
+def _two_lines(label: str) -> str:
+    """The parameter, and below it whose it is, each short enough: both matter where animals have their own."""
+    base, bracket, rest = label.partition("[")
+    return short(base) + (f"[{short(rest)}" if bracket else "")
+
+
 def _trace(axes, label: str, values: Float[NDArray, "chain draw"]) -> None:
     for chain, line in enumerate(values):
         axes.plot(line, color=HUES[chain % len(HUES)], linewidth=0.6, alpha=0.85)
-    axes.set_ylabel(short(label).replace("[", "\n["), rotation=0, ha="right", va="center")
+    axes.set_ylabel(label.replace("[", "\n["), rotation=0, ha="right", va="center")
     axes.margins(x=0.005)
     axes.locator_params(axis="y", nbins=4)
 

@@ -3,7 +3,7 @@
 from typing import Any
 
 from bayesrange.report._format import listed, number, whole
-from bayesrange.report._read_memory import MemoryContents
+from bayesrange.report._read_memory import NEW, MemoryContents
 from bayesrange.report._sentences import Words
 
 MEANINGS = {
@@ -115,7 +115,8 @@ def beyond_several(names: list[str], animals: list[str]) -> str:
     others = [name for name in names if name not in animals]
     every = len(animals) > 1 and len(names) - len(others) == len(animals)
     named = ["every animal"] if every else [name for name in names if name in animals]
-    return f"The interval passes the record for {listed(named + others)}: its upper end is the prior speaking."
+    said = [f"a {name}" if name == NEW else name for name in named + others]
+    return f"The interval passes the record for {listed(said)}: its upper end is the prior speaking."
 
 
 def together_sentence(pairs: list[list[Any]], pooled: bool, weighted: bool) -> str:

@@ -2,53 +2,18 @@
 
 import re
 from base64 import b64decode
-from html.parser import HTMLParser
 from pathlib import Path
 
 import pandas as pd
 import pytest
 import xarray as xr
+from page_text import Page
 
 from bayesrange import StudyError
 from bayesrange.report import Contents, read_contents, write
 from bayesrange.report._format import bar, interval, number
 from bayesrange.report._parameters import Gate, parameter_blocks, split_name
 from bayesrange.report._sentences import CAUTIONS, NOTES, sparse_note
-
-VOID = {"meta", "img", "rect", "line", "br"}
-
-
-class Page(HTMLParser):
-    """Tags, attributes and text; fails on a tag that closes another than the last opened one."""
-
-    def __init__(self, html: str):
-        super().__init__(convert_charrefs=True)
-        self.open, self.tags, self.text = [], [], []
-        self.feed(html)
-        self.close()
-        assert self.open == []
-
-    def handle_starttag(self, tag, attrs):
-        self.tags.append((tag, dict(attrs)))
-        if tag not in VOID:
-            self.open.append(tag)
-
-    def handle_startendtag(self, tag, attrs):
-        self.tags.append((tag, dict(attrs)))
-
-    def handle_endtag(self, tag):
-        assert self.open and self.open.pop() == tag
-
-    def handle_data(self, data):
-        if not self.open or self.open[-1] != "style":
-            self.text.append(data)
-
-    def all(self, tag):
-        return [attrs for name, attrs in self.tags if name == tag]
-
-    @property
-    def words(self) -> str:
-        return " ".join(" ".join(self.text).split())
 
 
 def test_page_is_well_formed_and_has_every_section(written):
