@@ -77,12 +77,7 @@ def _sample(
     folders = task_folders(checkpoints, prepared.labels)
     if not (checkpoints / "inputs.json").exists():
         tell({"stage": "tables", "kind": prepared.card.kind})
-        tasks, facts = prepared.make_tasks()
-        for folder, task in zip(folders, tasks, strict=True):
-            folder.mkdir(exist_ok=True)
-            save_task(folder, task)
-        inputs = {"fingerprint": prepared.fingerprint, "inputs": prepared.decisive, "facts": facts}
-        write_json(checkpoints / "inputs.json", inputs)
+        _save_tasks(checkpoints, prepared, folders)
     log = checkpoints / "workers.log"
     sampling = prepared.study.settings.sampling
     at_once = min(processes or cores(), sampling.chains * len(folders))
@@ -104,6 +99,16 @@ def _sample(
     ]
     run_workers(todo, at_once, tell, log)
     return seconds, gib
+
+
+def _save_tasks(checkpoints: Path, prepared: Prepared, folders: list[Path]) -> None:
+    """Write the workers' tasks, then what they were made from; tables are large and not kept in memory."""
+    tasks, facts = prepared.make_tasks()
+    for folder, task in zip(folders, tasks, strict=True):
+        folder.mkdir(exist_ok=True)
+        save_task(folder, task)
+    inputs = {"fingerprint": prepared.fingerprint, "inputs": prepared.decisive, "facts": facts}
+    write_json(checkpoints / "inputs.json", inputs)
 
 
 def _refuse_changes(checkpoints: Path, prepared: Prepared) -> None:

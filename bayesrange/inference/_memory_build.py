@@ -3,6 +3,7 @@
 from dataclasses import asdict, dataclass, replace
 from typing import Any
 
+import jax
 import numpy as np
 import pandas as pd
 
@@ -204,7 +205,7 @@ def _memory_data(plan: MemoryPlan, study: Study, inputs: TableInput, steps: Any,
     surface = surface_table(inputs, *cells.T, decay, reach) if len(cells) else np.zeros((len(animals), 0, 0))
     units = plan.covariates.shape[0]
     return MemoryData(
-        steps=steps,
+        steps=jax.tree.map(np.asarray, steps),
         surface=surface.astype(np.float32),
         home=np.array([[one.track.x.mean(), one.track.y.mean()] for one in animals]),
         box=np.array(box) / 1000,

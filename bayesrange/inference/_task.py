@@ -30,7 +30,7 @@ class Task:
 
     Attributes:
         spec: static part of the model.
-        data: numbers of the model (NumPy leaves).
+        data: numbers of the model (NumPy leaves); None once a worker has taken them.
         chains: number of chains.
         warmup: adaptation steps of each chain.
         draws: kept draws of each chain.
@@ -42,7 +42,7 @@ class Task:
     """
 
     spec: Spec
-    data: Data
+    data: Data | None
     chains: int
     warmup: int
     draws: int
@@ -67,7 +67,8 @@ def save_task(folder: Path, task: Task) -> None:
 
 def load_task(folder: Path) -> Task:
     """Read the task back."""
-    return pickle.loads((folder / "task.pkl").read_bytes())
+    with (folder / "task.pkl").open("rb") as file:
+        return pickle.load(file)
 
 
 def save_arrays(path: Path, **arrays: np.ndarray) -> None:

@@ -10,6 +10,7 @@ import os
 import resource
 import sys
 import time
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -44,6 +45,7 @@ def _start(folder: Path) -> None:
     task = load_task(folder)
     _say(stage="compiling")
     data = as_arrays(task.data)
+    task = replace(task, data=None)
     program = Program(task.spec, data, task.warmup, task.target_accept, CHUNK)
     guess = np.asarray(ravel_pytree(program.first_guess(data))[0])
     program.value_and_gradient(jnp.asarray(guess), data)
@@ -91,6 +93,7 @@ def _chain(folder: Path, chain: int) -> int:
 
     task = load_task(folder)
     data = as_arrays(task.data)
+    task = replace(task, data=None)  # tables are large: one copy is enough
     own = chain_folder(folder, chain)
     own.mkdir(exist_ok=True)
     program = Program(task.spec, data, task.warmup, task.target_accept, CHUNK)
