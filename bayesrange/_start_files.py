@@ -21,11 +21,14 @@ time   = "time"                # ISO 8601 with offset; or local time, with the n
 x      = "x"                   # in study.crs; or with the next line. Blank coordinates are failed fixes: counted
 y      = "y"
 # crs  = "EPSG:4326"           # if x is longitude and y is latitude
-group  = "group"
+group  = "group"               # not needed for tracks
 # error = 15                   # location error, standard deviation per axis in metres: a number or a column
 
-[groups]
+[groups]                       # not needed for tracks
 file = "groups.csv"            # group,x,y,animals: home centre (empty: estimated), adults that mark (empty: 1)
+
+# [animals]
+# file = "animals.csv"         # animal, and what is known of it: from, until, sex, release_batch, memory_start
 
 # [layers.forage]
 # file = "forage.tif"          # a GeoTIFF that covers the area
@@ -39,6 +42,15 @@ file = "groups.csv"            # group,x,y,animals: home centre (empty: estimate
 card = "avoidance"             # `bayesrange cards` lists them
 # layers = ["forage"]          # for cards with a resource term
 # perception_m = 200           # distance over which scent is perceived; default two cells
+
+# For tracks (the cards steps-resources, steps-home, memory, memory-resources):
+# pooling = "hierarchical"     # or "individual": each animal alone
+# covariates = ["sex"]         # columns of animals.csv by which animals may differ
+# interval_h = 1.0             # hours from fix to fix that make a step; default the commonest interval
+# memory_start = "learned"     # residents, who know their range; default "naive": released, know nothing
+# learning_days = 30           # with "learned": the first days of a record, which only build memory
+# encoding_range_m = 150       # how far around a place a stay is remembered; default the median step
+# vary = ["step_length"]       # step length by the hour of the day; "selection": by day and night
 
 [sampling]
 chains = 4
