@@ -19,6 +19,7 @@ _HOMES = {
     "open_run": "bayesrange.inference",
     "read_study": "bayesrange.study",
     "report": "bayesrange.report",
+    "screen": "bayesrange.report",
 }
 
 __all__ = ["__version__", *sorted(_HOMES)]

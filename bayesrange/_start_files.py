@@ -1,8 +1,14 @@
-"""A new study: a commented study file and empty tables."""
+"""A new study: a commented study file and empty tables, or filled in from a file of fixes as far as it can be told."""
 
+import json
+from collections.abc import Sequence
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from bayesrange._errors import StudyError
+
+if TYPE_CHECKING:
+    from bayesrange.study import Guess
 
 STUDY = """\
 # A study for bayesrange. Lines that start with # are notes; take the # away to use a key.
@@ -62,17 +68,27 @@ seed   = 20
 TABLES = {"fixes.csv": "animal,time,x,y,group\n", "groups.csv": "group,x,y,animals\n"}
 
 
-def write_start(folder: Path) -> list[str]:
+_CHECK = "# please check"
+_DEFAULTS = {"animal": "animal", "time": "time", "x": "x", "y": "y", "group": "group"}
+
+
+def write_start(folder: Path, fixes: Sequence[Path] = ()) -> list[str]:
     """Write the files.
+
+    Args:
+        folder: new or empty.
+        fixes: files of fixes, which stay where they are; the study file refers to them.
 
     Returns:
         Lines for the screen: what was written and what to do next.
 
     Raises:
-        StudyError: the folder holds something already.
+        StudyError: the folder holds something already, or the fixes cannot be made out.
     """
     if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
         raise StudyError(f"{folder}: expected a new or empty folder; nothing was written.")
+    if fixes:
+        return _write_filled_in(folder, fixes)
     folder.mkdir(parents=True, exist_ok=True)
     (folder / "study.toml").write_text(STUDY, encoding="utf-8")
     for name, header in TABLES.items():
@@ -82,3 +98,91 @@ def write_start(folder: Path) -> list[str]:
         "Fill in the tables, put area.geojson (and layers) beside them, go through study.toml, then:",
         f"  bayesrange fit {folder}",
     ]
+
+
+def _write_filled_in(folder: Path, fixes: Sequence[Path]) -> list[str]:
+    """Write a study file for these fixes, and tables with the animals and groups found in them."""
+    import pandas as pd
+
+    from bayesrange.study import guess_fixes
+
+    found = guess_fixes(fixes, folder)
+    folder.mkdir(parents=True, exist_ok=True)
+    (folder / "study.toml").write_text(_filled_in(found), encoding="utf-8")
+    animals = found.animals.reindex(columns=["animal", "tag", "from", "until", "group", "sex", "age_class", "fate"])
+    animals.to_csv(folder / "animals.csv", index=False)
+    groups = pd.DataFrame({"group": found.groups}).reindex(columns=["group", "x", "y", "animals"])
+    groups.to_csv(folder / "groups.csv", index=False)
+    return [
+        f"Written: {folder / 'study.toml'}, animals.csv ({len(found.animals)} animals), groups.csv "
+        f"({len(found.groups)} groups). The fixes stay where they are: {', '.join(found.files)}.",
+        f"Go through study.toml; every line that was filled in by guess says “{_CHECK[2:]}”. Then:",
+        f"  bayesrange screen {folder}",
+    ]
+
+
+def _filled_in(found: "Guess") -> str:
+    """The study file with what was found, each line that was guessed marked."""
+    lines = []
+    section = ""
+    for line in STUDY.splitlines():
+        section = line.strip("[]") if line.startswith("[") else section
+        key = line.lstrip("# ").split("=")[0].strip() if "=" in line else ""
+        if section == "study" and key == "crs":
+            lines.append(_study_crs(found))
+        elif section == "study" and key == "cell_m":
+            lines.append('cell_m = "auto"               # or the edge of a cell in metres')
+        elif section == "fixes" and key in ("file", "animal", "time", "x", "y", "group", "zone", "crs", "error"):
+            lines += _fixes_line(found, key, line)
+        elif section == "groups" and not found.groups and line:
+            lines.append(f"# {line}")
+        else:
+            lines.append(line)
+    text = "\n".join(lines)
+    deployments = (
+        "# [animals]                    # one row a deployment, for collars that changed animals, or settling in\n"
+        '# file = "animals.csv"         # animals.csv holds the animals found; fill in tag, from, until\n'
+    )
+    return (
+        text.replace("\n[groups]", f"\n{deployments}\n[groups]", 1).replace(
+            "\n# [groups]", f"\n{deployments}\n# [groups]", 1
+        )
+        + "\n"
+    )
+
+
+def _study_crs(found: "Guess") -> str:
+    if found.study_crs is None:
+        return '# crs  = "EPSG:…"              # please fill in: the metric reference system of x and y'
+    return f"{f'crs    = {_quoted(found.study_crs)}':<31}{_CHECK}: the system in which everything is computed"
+
+
+def _fixes_line(found: "Guess", key: str, line: str) -> list[str]:
+    """The line of one key of [fixes]; as it was where nothing was found."""
+    if key == "file":
+        value = _quoted(found.files[0]) if len(found.files) == 1 else f"[{', '.join(map(_quoted, found.files))}]"
+        return [f"file   = {value}"]
+    if key == "zone":
+        if found.offset is None:
+            return [
+                f"# please check the times: expected 2031-03-01T04:00:00+01:00, found {found.time_example!a:.40}",
+                line,
+            ]
+        return [line] if found.offset else ['# zone = "Europe/Oslo"        # please fill in: the times have no offset']
+    if key == "crs":
+        if found.crs is None:
+            return [line, *[f"# please check: {remark}" for remark in found.remarks]]
+        return [f"{f'crs    = {_quoted(found.crs)}':<31}{_CHECK}: the reference system of x and y"]
+    column = found.columns.get(key)
+    if column is None:
+        return [line if key == "error" else f"# {line}"]
+    value = _quoted(column) if isinstance(column, str) else f"[{', '.join(map(_quoted, column))}]"
+    note = ": a standard deviation per axis in metres?" if key == "error" else ""
+    if column == "coordinateUncertaintyInMeters":
+        note = ": read as the radius of a 95 % circle"
+    return [f"{f'{key:<6} = {value}':<31}{_CHECK}{note}"]
+
+
+def _quoted(text: str) -> str:
+    """Text as a TOML string."""
+    return json.dumps(text, ensure_ascii=False)

@@ -40,12 +40,34 @@ def demo(out: Out = None, processes: Processes = None) -> None:
 
 
 @app.command()
-def start(folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="A folder that is new or empty.")]) -> None:
-    """Write a commented study file and empty tables to fill in."""
+def start(
+    folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="A folder that is new or empty.")],
+    fixes: Annotated[
+        list[Path] | None,
+        typer.Option(
+            "--fixes", metavar="FILE", help="Fill in columns, zone and CRS as found in this file; may be repeated."
+        ),
+    ] = None,
+) -> None:
+    """Write a commented study file and tables to fill in, from a file of fixes if there is one."""
     from bayesrange._start_files import write_start
 
-    for line in write_start(folder):
+    for line in write_start(folder, fixes or []):
         typer.echo(line)
+
+
+@app.command()
+def screen(
+    study: StudyPath,
+    out: Annotated[
+        Path | None,
+        typer.Option("--out", metavar="FOLDER", help="Where to write; default screening/ beside the study file."),
+    ] = None,
+) -> None:
+    """Look at the data first: doubtful fixes, gaps, autocorrelation, settling, a map; nothing is changed."""
+    from bayesrange._screen_data import screen_and_show
+
+    screen_and_show(study, out)
 
 
 @app.command()
@@ -82,8 +104,15 @@ def cards(
     study: Annotated[
         Path | None, typer.Option("--study", metavar="FOLDER", help="Also list cards in this study's folder.")
     ] = None,
+    data: Annotated[
+        Path | None, typer.Option("--for", metavar="STUDY", help="Say which cards this study's data can carry.")
+    ] = None,
 ) -> None:
     """List the model cards: what each assumes and when to use it."""
+    if data is not None:
+        from bayesrange._screen_data import show_carried
+
+        return show_carried(data, name)
     from bayesrange import _screen
 
     _screen.show_cards(name, study)

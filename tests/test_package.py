@@ -128,8 +128,9 @@ MAY_IMPORT = {
     "inference": {"study", "spaceuse", "memory"},
     "checks": {"study", "spaceuse", "memory", "inference"},
     "outlook": {"study", "spaceuse", "memory", "inference"},
-    "report": {"study", "spaceuse", "memory", "inference", "checks", "outlook"},
-    "commands": {"study", "spaceuse", "memory", "inference", "checks", "outlook", "report"},
+    "screening": {"study"},
+    "report": {"study", "screening", "spaceuse", "memory", "inference", "checks", "outlook"},
+    "commands": {"study", "screening", "spaceuse", "memory", "inference", "checks", "outlook", "report"},
 }
 
 

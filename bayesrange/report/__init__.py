@@ -10,6 +10,8 @@ from bayesrange.report._read import Contents as Contents
 from bayesrange.report._read import read_contents as read_contents
 from bayesrange.report._read_memory import MemoryContents as MemoryContents
 from bayesrange.report._read_memory import read_memory as read_memory
+from bayesrange.report._screening_page import summary as summary
+from bayesrange.report._screening_write import screen as screen
 from bayesrange.report._tables import overlaps_table as overlaps_table
 from bayesrange.report._tables import ranges_table as ranges_table
 from bayesrange.report._write import write as write

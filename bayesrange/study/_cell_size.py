@@ -27,7 +27,7 @@ def choose_cell(fixes: pd.DataFrame, area: shapely.Polygon | shapely.MultiPolygo
     Raises:
         StudyError: no group has enough fixes to tell its range, or all of one are at one place.
     """
-    across = {str(group): _across_m(own) for group, own in fixes.groupby("group") if len(own) >= _FEWEST_FIXES}
+    across = {str(group): across_m(own) for group, own in fixes.groupby("group") if len(own) >= _FEWEST_FIXES}
     if not across:
         raise StudyError(
             f'[study] cell_m: no group has the {_FEWEST_FIXES} fixes that "auto" needs to judge its range by; '
@@ -93,13 +93,13 @@ def check_resolution(fixes: pd.DataFrame, grid: Grid) -> list[str]:
         if len(own) < _FEWEST_FIXES:
             said.append(f"The {label} has only {counted(len(own), 'fix', 'fixes')}: too few to judge the cell size by.")
             continue
-        across_m = _across_m(own)
-        cells = across_m / grid.cell_m
+        width_m = across_m(own)
+        cells = width_m / grid.cell_m
         if cells < _FEWEST_CELLS:
             raise StudyError(
-                f"[study] cell_m: 95 % of the fixes of the {label} lie within {across_m:.0f} m, only {cells:.1f} cells "
+                f"[study] cell_m: 95 % of the fixes of the {label} lie within {width_m:.0f} m, only {cells:.1f} cells "
                 f"across, which would bias localising by about {_bias(cells):.0f} % or more; "
-                f"use cells of at most {across_m / _FEWEST_CELLS:.0f} m, better {across_m / _BETTER_CELLS:.0f} m."
+                f"use cells of at most {width_m / _FEWEST_CELLS:.0f} m, better {width_m / _BETTER_CELLS:.0f} m."
             )
         if cells < _BETTER_CELLS:
             coarse.append((cells, label))
@@ -116,7 +116,7 @@ def check_resolution(fixes: pd.DataFrame, grid: Grid) -> list[str]:
     return said
 
 
-def _across_m(own: pd.DataFrame) -> float:
+def across_m(own: pd.DataFrame) -> float:
     """Twice the distance from the median place that holds 95 % of the fixes [m]."""
     return float(2 * np.quantile(np.hypot(own["x"] - own["x"].median(), own["y"] - own["y"].median()), 0.95))
 

@@ -36,6 +36,7 @@ FLAGS = {
     "stationary": Flag("h", True, "end of the track at one place, longer than any rest before; value: its duration"),
     "outside": Flag("m", True, "outside the study area; value: how far, limit: 3 sd of the location error"),
     "gap": Flag("h", False, "long time without a fix before this one; value: how long"),
+    "bearing": Flag("", False, "doubtful place from bearings"),
 }
 DROPPABLE = tuple(name for name, flag in FLAGS.items() if flag.droppable)
 
@@ -72,6 +73,8 @@ def find_flags(
         found.append(table.assign(fix=back[which][table["fix"]]))
     if area is not None:
         found.append(outside(fixes, area))
+    if "flag" in fixes.columns:  # places from bearings say themselves what is doubtful about them
+        found.append(_table("bearing", np.flatnonzero(fixes["flag"].fillna("") != ""), np.nan, np.nan))
     flags = pd.concat(found, ignore_index=True)
     order = flags["flag"].map({name: k for k, name in enumerate(FLAGS)})
     return flags.iloc[np.lexsort((flags["fix"], order))].reset_index(drop=True)

@@ -29,12 +29,13 @@ def stationary_tail(
 ) -> Tail | None:
     """The stationary tail of one animal's fixes in the order of time, or None.
 
-    At one place: within 4 standard deviations of the location error (at least 30 m) of the median of the last fixes.
-    A tail has at least 5 fixes over a day, and 1.5 times the longest rest before.
+    At one place: within 4 standard deviations of the location error (at least 30 m) of the median of the last fixes, by
+    running medians of three, so that a stray fix neither ends a rest nor hides a tail. A tail has at least 5 fixes over
+    a day, and 1.5 times the longest rest before.
     """
     if len(hours) < _FEWEST_FIXES:
         return None
-    radius = around_km(error_km)
+    radius, place_km = around_km(error_km), _without_strays(place_km)
     centre = np.median(place_km[-_FEWEST_FIXES:], axis=0)
     away = np.flatnonzero(np.hypot(*(place_km - centre).T) > radius)
     centre = np.median(place_km[away[-1] + 1 if away.size else 0 :], axis=0) if _ends_at(away, len(hours)) else centre
@@ -45,6 +46,12 @@ def stationary_tail(
         return None
     rest = longest_rest_h(hours[:first], place_km[:first], radius, lasts / _PARTS)
     return Tail(first, lasts, rest) if lasts >= _LONGER * rest else None
+
+
+def _without_strays(place_km: Float[NDArray, "n 2"]) -> Float[NDArray, "n 2"]:
+    """Running medians of three; the first and the last fix take those of their neighbours."""
+    middle = np.median(np.stack([place_km[:-2], place_km[1:-1], place_km[2:]]), axis=0)
+    return np.concatenate([middle[:1], middle, middle[-1:]])
 
 
 def around_km(error_km: Float[NDArray, " n"]) -> float:

@@ -10,7 +10,7 @@ from bayesrange.study._settings_file import nearest
 from bayesrange.study._tables import counted, first_few, shown
 
 _CLOCK, _OFFSET = r"[T ][0-9]{2}:[0-9]{2}(?::[0-9]{2}(?:[.,][0-9]+)?)?", r" ?(?:Z|[+-][0-9]{2}(?::?[0-9]{2})?)"
-_ISO = rf"[0-9]{{4}}-[0-9]{{2}}-[0-9]{{2}}(?:{_CLOCK}(?:{_OFFSET})?)?"
+ISO = rf"[0-9]{{4}}-[0-9]{{2}}-[0-9]{{2}}(?:{_CLOCK}(?:{_OFFSET})?)?"
 _EXAMPLE = "expected ISO 8601 such as 2031-03-01T04:00:00+01:00"
 
 
@@ -25,7 +25,7 @@ def read_times(texts: pd.Series, zone: str | None, name: str) -> tuple[pd.Series
     Raises:
         StudyError: not ISO 8601, no such day, no offset and no zone, or a clock time that the zone skips or repeats.
     """
-    _refuse(texts, ~texts.str.fullmatch(_ISO).to_numpy(dtype=bool), name, _EXAMPLE)
+    _refuse(texts, ~texts.str.fullmatch(ISO).to_numpy(dtype=bool), name, _EXAMPLE)
     naive = ~texts.str.contains(f"[T ].*{_OFFSET}$").to_numpy(dtype=bool)
     if naive.any() and zone is None:
         raise StudyError(
