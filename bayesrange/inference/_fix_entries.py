@@ -3,7 +3,7 @@
 The error is integrated by Gauss–Hermite on the bilinear density: 1 node below 0.1 cell, 3 per axis to 1 cell, 5 to 2;
 beyond that by the Gaussian mass of each cell. An ellipse has nodes along its own axes, as many as each axis asks for;
 beyond 2 cells the Gaussian mass of strips half a cell wide across the axis. None of it depends on the parameters, so
-it is done once.
+it is done once. Fixes from bearings are read from these themselves (`_bearing_nodes.py`).
 """
 
 from collections.abc import Iterator
@@ -12,6 +12,7 @@ import numpy as np
 from scipy.special import ndtr
 
 from bayesrange._errors import StudyError
+from bayesrange.inference._bearing_nodes import Bearings, bearing_nodes
 from bayesrange.study import Grid
 
 ORDERS = ((0.1, 1), (1.0, 3), (2.0, 5))
@@ -31,7 +32,13 @@ _CIRCLE = 1e-6  # an ellipse whose axes differ by less than this share is a circ
 
 
 def fix_entries(
-    grid: Grid, x: np.ndarray, y: np.ndarray, error_m: np.ndarray, reading: str, ellipse: np.ndarray | None = None
+    grid: Grid,
+    x: np.ndarray,
+    y: np.ndarray,
+    error_m: np.ndarray,
+    reading: str,
+    ellipse: np.ndarray | None = None,
+    bearings: Bearings | None = None,
 ) -> tuple[np.ndarray, np.ndarray]:
     """Cells and log weights of each fix, padded to the longest.
 
@@ -43,6 +50,7 @@ def fix_entries(
         reading: "bilinear" or "cell".
         ellipse: where some error is one: sd along the long axis and across it [m] and the azimuth of the long axis
             [degrees clockwise from grid north] of each fix (fixes, 3); with equal axes `error_m` counts.
+        bearings: of fixes that are read from them and not from their ellipse, which says only where to look.
 
     Returns:
         Flat cell index (fixes, entries) and log weight, −inf for padding.
@@ -54,6 +62,11 @@ def fix_entries(
     pieces: list[tuple[np.ndarray, np.ndarray, np.ndarray]] = []
     if ellipse is not None:
         oblong = ellipse[:, 0] > ellipse[:, 1] * (1 + _CIRCLE)
+        for fix, own in (bearings or {}).items():
+            found = bearing_nodes(grid, np.array([x[fix], y[fix]]), ellipse[fix], own, REACH)
+            if found is not None:
+                pieces.append(_merged(grid, fix, *found, reading))
+                order[fix], oblong[fix] = -1, False
         order[oblong] = -1
         pieces.extend(_oblong(grid, np.flatnonzero(oblong), x, y, ellipse, reading))
     for level, (_, nodes) in enumerate(ORDERS):
@@ -102,7 +115,6 @@ def _oblong(
     grid: Grid, chosen: np.ndarray, x: np.ndarray, y: np.ndarray, ellipse: np.ndarray, reading: str
 ) -> Iterator[tuple[np.ndarray, np.ndarray, np.ndarray]]:
     """Entries of elliptical errors, merged within each fix as a long axis has many nodes."""
-    cells = grid.shape[0] * grid.shape[1]
     corner_x, corner_y = np.meshgrid(grid.x_m[[0, -1]], grid.y_m[[0, -1]])
     for k in chosen:
         furthest = np.hypot(corner_x - x[k], corner_y - y[k]).max() + grid.cell_m
@@ -114,10 +126,17 @@ def _oblong(
         if mass.size > 1:
             ground = grid.habitable_at(node_x, node_y)
             node_x, node_y, mass = node_x[ground], node_y[ground], mass[ground]
-        _, cell, share = _read_nodes(grid, np.full(mass.size, k), node_x, node_y, mass, reading)
-        total = np.bincount(cell, share, minlength=cells)
-        used = np.flatnonzero(total)
-        yield np.full(used.size, k), used, total[used]
+        yield _merged(grid, int(k), node_x, node_y, mass, reading)
+
+
+def _merged(
+    grid: Grid, fix: int, node_x: np.ndarray, node_y: np.ndarray, mass: np.ndarray, reading: str
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Entries of one fix's nodes, one a cell."""
+    _, cell, share = _read_nodes(grid, np.full(mass.size, fix), node_x, node_y, mass, reading)
+    total = np.bincount(cell, share, minlength=grid.shape[0] * grid.shape[1])
+    used = np.flatnonzero(total)
+    return np.full(used.size, fix), used, total[used]
 
 
 def _axis_nodes(sd: float, cell_m: float, furthest_m: float) -> tuple[np.ndarray, np.ndarray]:

@@ -3,6 +3,7 @@
 import numpy as np
 
 from bayesrange._errors import StudyError
+from bayesrange.inference._bearing_nodes import bearings_of
 from bayesrange.inference._cards import VARYING, Card
 from bayesrange.inference._covariates import code_columns
 from bayesrange.inference._fix_entries import ELLIPSE, fix_entries
@@ -135,7 +136,8 @@ def make_data(study: Study, card: Card, spec: RangeSpec, scales: Scales, weight:
     grid, fixes, groups = study.grid, study.fixes, study.groups
     x, y = fixes["x"].to_numpy(float), fixes["y"].to_numpy(float)
     ellipse = fixes[ELLIPSE].to_numpy(float) if ELLIPSE[0] in fixes else None
-    cell, log_share = fix_entries(grid, x, y, fixes["error_m"].to_numpy(float), study.settings.model.reading, ellipse)
+    error, bearings = fixes["error_m"].to_numpy(float), bearings_of(fixes, study.bearings)
+    cell, log_share = fix_entries(grid, x, y, error, study.settings.model.reading, ellipse, bearings)
     owner = fixes["group"].map({name: i for i, name in enumerate(groups["group"])}).to_numpy(np.int32)
     share = grid.basis_share if study.settings.model.reading == "bilinear" else grid.habitable
     padding = -len(fixes) % BUCKET

@@ -5,8 +5,9 @@ Lenth's (1981) covariance with that concentration. A pair has nothing to spare, 
 given. What gives no place is set aside and counted; what is doubtful is counted and flagged, and used.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import NamedTuple
 
 import numpy as np
 import pandas as pd
@@ -42,11 +43,29 @@ FEWEST_TO_POOL = 5.0
 """Spare bearings of all observers together below which their standard deviation has to be given."""
 
 
+class BearingRows(NamedTuple):
+    """The bearings of the fixes that no observer has behind him.
+
+    The columns are file and row (of the fix), x and y of the station [m], azimuth_deg from grid north and sd_deg.
+    """
+
+    table: pd.DataFrame
+    crs: pyproj.CRS
+
+    def in_system(self, crs: pyproj.CRS) -> pd.DataFrame:
+        """The table in another reference system."""
+        place = self.table["x"].to_numpy(dtype=float), self.table["y"].to_numpy(dtype=float)
+        x, y = carry(*place, self.crs, crs)
+        azimuth = turned(self.table["azimuth_deg"].to_numpy(dtype=float), place, self.crs, (x, y), crs)
+        return self.table.assign(x=x, y=y, azimuth_deg=azimuth)
+
+
 @dataclass(frozen=True)
 class BearingFixes:
     """Fixes like those of tables, in metres of the study's reference system, and what they were made of."""
 
     table: pd.DataFrame
+    rows: BearingRows
     target: pyproj.CRS
     crs: str | None  # the system chosen where the study names none
     counts: dict[str, int]
@@ -104,14 +123,15 @@ def bearing_fixes(
     used = chosen.of(np.flatnonzero(found))
     flags = _flags(place[found], used, sd)
     counts |= {key: int(flag.sum()) for key, flag in flags.items()}
-    fixes = _fixes(first.iloc[wanted[found]], table, place[found], used, sd, flags)
+    fixes = _fixes(first.iloc[wanted[found]], place[found], used, sd, flags)
     said = read.warnings + said + _sentences(counts, first.iloc[lost], fixes, name)
     if section.stations is not None:
         files = files | {section.stations: folder / section.stations}
-    made = BearingFixes(fixes, target, None, counts, said, files)
+    rows = BearingRows(_rows(fixes, used, sd, ~flags["behind_observer"]), target)
+    made = BearingFixes(fixes, rows, target, None, counts, said, files)
     if study_crs is not None:
         return made
-    return BearingFixes(made.in_system(section.crs), target, section.crs, counts, said, files)
+    return replace(made, table=made.in_system(section.crs), crs=section.crs)
 
 
 def _on_the_map(
@@ -242,7 +262,6 @@ def _covariance(place: Float[NDArray, "sets 2"], sets: Sets, sd: Float[NDArray, 
 
 def _fixes(
     first: pd.DataFrame,
-    table: pd.DataFrame,
     place: Float[NDArray, "sets 2"],
     sets: Sets,
     sd: Float[NDArray, " observers"],
@@ -259,6 +278,23 @@ def _fixes(
         **dict(zip(COLUMNS, axes.T, strict=True)),
         flag=pd.Series(["; ".join(filter(None, row)) for row in words], dtype="str"),
     )
+
+
+def _rows(
+    fixes: pd.DataFrame, sets: Sets, sd: Float[NDArray, " observers"], wanted: Bool[NDArray, " n"]
+) -> pd.DataFrame:
+    """One row a bearing of the wanted fixes."""
+    fix, slot = np.nonzero(sets.taken & wanted[:, None])
+    return pd.DataFrame(
+        {
+            "file": fixes["file"].to_numpy()[fix],
+            "row": fixes["row"].to_numpy()[fix],
+            "x": sets.station[fix, slot, 0],
+            "y": sets.station[fix, slot, 1],
+            "azimuth_deg": np.degrees(sets.azimuth[fix, slot]) % 360,
+            "sd_deg": np.degrees(sd[sets.observer[fix, slot]]),
+        }
+    ).astype({"file": "str"})
 
 
 def _why(counts: dict[str, int]) -> str:

@@ -12,7 +12,7 @@ import numpy as np
 import pandas as pd
 
 from bayesrange._errors import StudyError
-from bayesrange.study._bearing_fixes import bearing_fixes
+from bayesrange.study._bearing_fixes import BearingRows, bearing_fixes
 from bayesrange.study._crs import parse_crs
 from bayesrange.study._darwin_core import with_darwin_core
 from bayesrange.study._deployments import assign_animals, read_deployments
@@ -44,6 +44,7 @@ class RawFixes:
     crs: str | None  # reference system of x and y, where one is given
     deployments: pd.DataFrame | None = None
     failed: pd.DataFrame = field(default_factory=pd.DataFrame)  # animal, when (as written), file, row of failed fixes
+    bearings: BearingRows | None = None
 
 
 def read_fixes(
@@ -83,11 +84,13 @@ def read_fixes(
         systems = {None}
     if len(systems) > 1:
         raise StudyError("[fixes] file: the files are in more than one reference system; read them as one study each.")
+    bearing_rows = None
     if bearings is not None:
         sources = _files(folder, bearings.file, "[bearings] file")
         found = bearing_fixes(folder, bearings, sources, section.zone, study_crs)
         parts.append(found.in_system(next(iter(systems))) if systems else found.table)
         systems = systems or {found.crs}
+        bearing_rows = found.rows
         counts |= found.counts
         warnings += found.warnings
         files |= found.files
@@ -111,7 +114,7 @@ def read_fixes(
     counts["unsorted"] = int(earlier.sum())
     fixes = fixes.sort_values(["animal", "time"], kind="stable", ignore_index=True)
     left_out = pd.concat(failed, ignore_index=True) if failed else pd.DataFrame()
-    return RawFixes(fixes, counts, warnings, files, systems.pop(), deployments, left_out)
+    return RawFixes(fixes, counts, warnings, files, systems.pop(), deployments, left_out, bearing_rows)
 
 
 def _files(folder: Path, given: str | list[str] | None, key: str) -> dict[str, Path]:

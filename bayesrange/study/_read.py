@@ -55,6 +55,8 @@ class Study:
         period: which of the study's periods was read, if it has some.
         deployments: animal, tag, from, until (UTC), then further columns such as fate; None without them.
         rounding_m: step to which the fixes' coordinates were written [m]; 0 if not known.
+        bearings: file and row (of the fix), x and y of the station [m], azimuth_deg from grid north and sd_deg of each
+            bearing whose fix may be read from them instead of its ellipse; None without bearings.
     """
 
     path: Path
@@ -71,6 +73,7 @@ class Study:
     period: str | None = None
     deployments: pd.DataFrame | None = None
     rounding_m: float = 0.0
+    bearings: pd.DataFrame | None = None
 
     @property
     def model_layers(self) -> tuple[str, ...]:
@@ -123,6 +126,7 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     return Study(
         path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes, period, raw.deployments,
         rounding(*raw.table[["x", "y"]].to_numpy(dtype=float).T, fixes_crs.is_geographic),
+        None if raw.bearings is None else raw.bearings.in_system(crs),
     )  # fmt: skip
 
 
