@@ -14,6 +14,7 @@ from bayesrange.study import Grid
 FINEST, COARSEST = 24, 2
 """Nodes along a cell's edge, at the most and at the least."""
 
+_BLOCK = 8  # cells along the edge of a block
 _PER_SD = 3  # nodes along the short semi-axis of the fix's ellipse
 
 type Bearings = dict[int, np.ndarray]
@@ -49,9 +50,7 @@ def bearing_nodes(
     if parts > FINEST or ellipse[0] < grid.cell_m / 2:
         return None
     lowest = log_density(place[None], bearings)[0] - reach**2 / 2
-    x, y = np.meshgrid(grid.x_m, grid.y_m)
-    centres = np.stack([x[grid.inside], y[grid.inside]], axis=-1)
-    centres = centres[log_density(centres, bearings, blur_m=grid.cell_m / np.sqrt(2)) > lowest]
+    centres = _likely_cells(grid, bearings, lowest)
     parts = max(parts, COARSEST)
     at = ((np.arange(parts) + 0.5) / parts - 0.5) * grid.cell_m
     step = np.stack(np.meshgrid(at, at), axis=-1).reshape(-1, 2)
@@ -64,6 +63,22 @@ def bearing_nodes(
     if not ground.any():
         return None
     return nodes[ground, 0], nodes[ground, 1], share[ground]
+
+
+def _likely_cells(grid: Grid, bearings: np.ndarray, lowest: float) -> np.ndarray:
+    """Centres of the inside cells in which the log density may reach `lowest`, (cells, 2) [m]; blocks first."""
+    rows, columns = np.arange(0, grid.shape[0], _BLOCK), np.arange(0, grid.shape[1], _BLOCK)
+    corner = np.stack(np.meshgrid(columns, rows), axis=-1).reshape(-1, 2)
+    half = _BLOCK * grid.cell_m / 2
+    middle = corner * grid.cell_m + (grid.west_m + half, grid.south_m + half)
+    corner = corner[log_density(middle, bearings, blur_m=half * np.sqrt(2)) > lowest]
+    within = np.stack(np.meshgrid(np.arange(_BLOCK), np.arange(_BLOCK)), axis=-1).reshape(-1, 2)
+    column, row = (corner[:, None] + within).reshape(-1, 2).T
+    there = (row < grid.shape[0]) & (column < grid.shape[1])
+    column, row = column[there], row[there]
+    inside = grid.inside[row, column]
+    centres = np.column_stack([grid.x_m[column[inside]], grid.y_m[row[inside]]])
+    return centres[log_density(centres, bearings, blur_m=grid.cell_m / np.sqrt(2)) > lowest]
 
 
 def log_density(places: np.ndarray, bearings: np.ndarray, blur_m: float = 0.0) -> np.ndarray:
