@@ -15,6 +15,8 @@ from bayesrange.study import Study, solar_clock
 FEWEST_STEPS = 50
 TOGETHER_M, TOGETHER_SHARE, TOGETHER_FIXES = 100.0, 0.5, 30
 """Two animals travel together if this share of their simultaneous fixes, at least so many, lie within this distance."""
+SIMULTANEOUS = 0.25
+"""Fixes of two animals are simultaneous if they are this share of an interval apart, or less."""
 
 
 @dataclass(frozen=True)
@@ -128,8 +130,8 @@ def nominal_interval(study: Study) -> float:
     given = 60 * model.interval_h
     if not (np.abs(minutes - given) <= model.interval_tolerance * given).any():
         raise StudyError(
-            f"{study.path.name}, [model] interval_h: no two fixes of an animal are {model.interval_h:g} h apart; the "
-            f"commonest interval is {commonest / 60:.3g} h: write that, or take the key out."
+            f"{study.path.name}, [model] interval_h: no two successive fixes of an animal are {model.interval_h:g} h "
+            f"apart; the commonest interval is {commonest / 60:.3g} h: write that, or take the key out."
         )
     return model.interval_h
 
@@ -140,15 +142,16 @@ def travelling_together(study: Study, interval_h: float) -> list[tuple[str, str,
     Only animals of one release batch are compared where the animals table says batches.
     """
     batch = animal_column(study, "release_batch")
-    slot = (study.fixes["time"].astype("int64") / 1e9 / 3600 / interval_h).round().astype("int64")
-    places = study.fixes.assign(slot=slot).drop_duplicates(["animal", "slot"])
-    own = {str(name): part.set_index("slot")[["x", "y"]] for name, part in places.groupby("animal", sort=True)}
-    names, found = list(own), []
+    fixes = study.fixes.sort_values("time", kind="stable")
+    own = {str(name): part[["time", "x", "y"]] for name, part in fixes.groupby("animal", sort=True)}
+    names, found, near = list(own), [], pd.Timedelta(hours=SIMULTANEOUS * interval_h)
     for i, one in enumerate(names):
         for other in names[i + 1 :]:
             if batch is not None and batch[one] != batch[other]:
                 continue
-            both = own[one].join(own[other], how="inner", rsuffix="_other")
+            both = pd.merge_asof(
+                own[one], own[other], on="time", suffixes=("", "_other"), direction="nearest", tolerance=near
+            ).dropna()
             if len(both) < TOGETHER_FIXES:
                 continue
             share = float((np.hypot(both["x"] - both["x_other"], both["y"] - both["y_other"]) < TOGETHER_M).mean())
@@ -198,6 +201,11 @@ def _memory_starts(study: Study) -> dict[str, str]:
         raise StudyError(
             f'{study.path.name}, [model] learning_days: animals whose memory_start is "learned" need it: the days at '
             "the beginning of a record that only build memory, such as learning_days = 30."
+        )
+    if "learned" not in starts.values() and model.learning_days is not None:
+        raise StudyError(
+            f'{study.path.name}, [model] learning_days: it has no use unless memory_start = "learned", here or in the '
+            "animals table; add that, or take it out."
         )
     return starts
 

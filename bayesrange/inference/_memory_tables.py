@@ -9,6 +9,7 @@ from dataclasses import dataclass, replace
 from typing import Any, NamedTuple
 
 import jax
+import jax.numpy as jnp
 import numpy as np
 
 from bayesrange._errors import StudyError
@@ -223,8 +224,8 @@ def _error(
     """|Δ log L| of one animal with strong memories at one pair of decay times, in the columns of one option."""
     full, (reference, working, sigma) = inputs.columns, pair
     decay, reach = bases(replace(inputs, columns=option))
-    by_range = np.asarray(range_coefficients(reach, np.log(sigma)))
-    by_decay = [np.asarray(decay_coefficients(decay, np.log(tau))) for tau in (reference, working)]
+    by_range = np.asarray(range_coefficients(reach, jnp.log(sigma)))
+    by_decay = [np.asarray(decay_coefficients(decay, jnp.log(tau))) for tau in (reference, working)]
     weight = np.stack([np.outer(own, by_range).ravel() for own in by_decay], axis=1).astype(np.float32)
     compressed = _fewer(one.steps.table, full, option, inputs) @ weight
     exact = one.exact[:, :, [2 * at, 2 * at + 1]].astype(np.float32)

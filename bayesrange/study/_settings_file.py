@@ -234,7 +234,8 @@ def _contradictions(s: StudySettings) -> Iterator[str]:
             "[model] covariates: they are columns of the groups table, or of the animals table for cards of single "
             "animals, and there is neither a section [groups] nor [animals]; add it."
         )
-    if s.model.learning_days is not None and s.model.memory_start != "learned":
+    starts_in_table = s.animals is not None and s.animals.file is not None  # a column memory_start, perhaps
+    if s.model.learning_days is not None and s.model.memory_start != "learned" and not starts_in_table:
         yield '[model] learning_days: it has no use unless memory_start = "learned"; add that, or take it out.'
 
 
