@@ -83,20 +83,21 @@ def decay_table(run: MemoryContents) -> pd.DataFrame:
     return pd.DataFrame(rows, columns=names)
 
 
-def beyond_record(run: MemoryContents) -> dict[tuple[str, str | None], tuple[float, float]]:
-    """Decay times whose interval passes the record: upper end and record [h], by parameter and animal.
+def beyond_record(run: MemoryContents) -> dict[str, tuple[str, str, float, float]]:
+    """Decay times whose interval passes the record, by their name in the table.
 
-    The animal is None for the population, which is held against the longest record, as a new animal is.
+    Returns:
+        Parameter, whose (empty for the population), upper end and record [h]. The population and a new animal are held
+        against the longest record, an animal against its own.
     """
     records = {str(name): float(value) for name, value in run.numerics["record_h"].items()}
-    found: dict[tuple[str, str | None], tuple[float, float]] = {}
+    found: dict[str, tuple[str, str, float, float]] = {}
     for row in run.parameters.itertuples():
-        base, inner = split_name(str(row.parameter))
-        plain = str(row.parameter) in (base, f"{base}[{inner}]")
-        if base not in MEMORIES.values() or not plain:
+        name = str(row.parameter)
+        base, inner = split_name(name)
+        if base not in MEMORIES.values() or name not in (base, f"{base}[{inner}]"):
             continue
-        animal = run.whose(base, inner)[1]
-        record = records.get(animal or "", max(records.values()))
+        record = records.get(inner, max(records.values()))
         if float(row.upper) > record:
-            found[base, animal] = (float(row.upper), record)
+            found[name] = (base, inner, float(row.upper), record)
     return found

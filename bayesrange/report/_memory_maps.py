@@ -130,9 +130,11 @@ def _panels(run: MemoryContents) -> tuple[Figure, np.ndarray, list[Axes]]:
     panels = figure.subplots(rows, columns, squeeze=False)
     for at, (axes, name) in enumerate(zip(panels.ravel(), run.animals, strict=False)):
         map_axes(axes, run)
+        axes.set_facecolor(NOT_HABITABLE)  # ground beyond the grid
+        ground = np.where(run.inside, 1.0, np.nan)
+        axes.imshow(ground, extent=extent_km(run), origin="lower", cmap=ListedColormap(["white"]), zorder=0.3)
         axes.set_xlim(windows[name][:2])
         axes.set_ylim(windows[name][2:])
-        axes.set_facecolor(NOT_HABITABLE if run.inside.all() else "white")
         axes.set_title(short(name))
         axes.set_xlabel("easting [km]" if at + columns >= len(run.animals) else "")
         axes.set_ylabel("northing [km]" if at % columns == 0 else "")

@@ -16,7 +16,6 @@ from bayesrange.report._format import fixed, percent, whole
 from bayesrange.report._memory_maps import layer_maps, recall_maps, track_maps
 from bayesrange.report._memory_sentences import (
     CAUTIONS,
-    COUNTS,
     POOLING,
     TERMS,
     UNMAPPED,
@@ -32,6 +31,7 @@ from bayesrange.report._page_parts import checks, grid, head, priors, record, sc
 from bayesrange.report._parameters import Gate, by_kind, parameter_blocks, raw_left_out
 from bayesrange.report._read_memory import MemoryContents
 from bayesrange.report._recall import recall_files
+from bayesrange.report._sentences import COUNTS
 from bayesrange.report._steps import numerics, step_rows
 
 LEAST_SHOWN = 0.005
@@ -101,16 +101,17 @@ def _step_scales(run: MemoryContents) -> list[tuple[str, str]]:
 
 def _parameters(run: MemoryContents, gate: Gate) -> list[dict[str, Any]]:
     """The blocks of rows, with a note beside each decay time whose interval passes the record."""
-    blocks = by_kind(parameter_blocks(run, gate, memory_words(run)))
+    title = run.animals[0] if run.lone else "Population"
+    blocks = by_kind(parameter_blocks(run, gate, memory_words(run)), title)
     beyond = beyond_record(run)
     for block in blocks:
         if not block["single"]:
             for row in block["rows"]:
-                if (row.name, None) in beyond:
-                    row.notes.append(beyond_one(*beyond[row.name, None]))
+                if row.name in beyond:
+                    row.notes.append(beyond_one(*beyond[row.name][2:]))
             continue
         base = block["title"].removesuffix(" by animal")
-        names = [row.name for row in block["rows"] if (base, row.name) in beyond]
+        names = [row.name for row in block["rows"] if f"{base}[{row.name}]" in beyond]
         if names:
             block["notes"].append(beyond_several(names, run.animals))
     return blocks
@@ -138,9 +139,9 @@ def _decay(run: MemoryContents, table: pd.DataFrame) -> dict[str, Any] | None:
 
 def _beyond_words(run: MemoryContents) -> list[str]:
     """Whose decay times reach past the record, a sentence for each memory that has any."""
-    beyond, said = beyond_record(run), []
+    beyond, said = beyond_record(run).values(), []
     for memory, name in MEMORIES.items():
-        named = [animal or "the population" for base, animal in beyond if base == name]
+        named = [whose or "the population" for base, whose, *_ in beyond if base == name]
         if named:
             said.append(f"Decay of the {memory} memory. {beyond_several(named, run.animals)}")
     return said

@@ -30,13 +30,6 @@ TERMS = {
     "home": "a pull towards one estimated centre",
 }
 
-COUNTS = {
-    "rows": "rows of fixes read",
-    "failed": "failed fixes (no coordinates)",
-    "unsorted": "rows not in the order of time",
-    "fixes": "fixes used",
-}
-
 POOLING = {
     "individual": "Each animal is fitted alone; nothing is shared, and nothing is said of animals not tracked.",
     "hierarchical": "Animals differ, and their values come from one population (hierarchical).",
@@ -93,8 +86,8 @@ def counted_steps(run: MemoryContents) -> str:
     """How many fixes give how many steps, on the first screen."""
     found = list(run.numerics["steps"].values())
     fixes, steps = (sum(row.get(key, 0) for row in found) for key in ("fixes", "steps"))
-    animals = "1 animal gives" if len(found) == 1 else f"{len(found)} animals give"
-    return f"{whole(fixes)} fixes of {animals} {whole(steps)} steps that count."
+    animals = "1 animal" if len(found) == 1 else f"{len(found)} animals"
+    return f"{whole(fixes)} fixes of {animals} give {whole(steps)} steps that count."
 
 
 def hours(value: float) -> str:

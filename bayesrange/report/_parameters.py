@@ -76,22 +76,25 @@ def parameter_blocks(run: RunContents, gate: Gate, words: Words = RANGE_WORDS) -
     return blocks
 
 
-def by_kind(blocks: list[dict[str, Any]]) -> list[dict[str, Any]]:
+def by_kind(blocks: list[dict[str, Any]], title: str) -> list[dict[str, Any]]:
     """The leading block taken apart: the population first, then its spreads; effects of covariates after the animals.
 
     What a spread or an effect is then stands once, above its rows.
+
+    Args:
+        blocks: as `parameter_blocks` makes them.
+        title: of the first block.
     """
-    kinds: dict[str, list[Row]] = {"Population": [], "Spread": [], "Effects of covariates": []}
+    kinds: dict[str, list[Row]] = {title: [], "Spread": [], "Effects of covariates": []}
     for row in (row for block in blocks if not block["single"] for row in block["rows"]):
-        title = "Spread" if _is_spread(row.name) else "Effects of covariates" if ":" in row.name else "Population"
-        kinds[title].append(row)
+        kinds["Spread" if _is_spread(row.name) else "Effects of covariates" if ":" in row.name else title].append(row)
     made: dict[str, list[dict[str, Any]]] = {}
-    for title, rows in kinds.items():
-        meaning = rows[0].meaning if rows and title != "Population" else ""
+    for name, rows in kinds.items():
+        meaning = rows[0].meaning if rows and name != title else ""
         rows = [replace(row, meaning="") for row in rows] if meaning else rows
-        made[title] = [{"title": title, "meaning": meaning, "rows": rows, "notes": [], "single": False}] if rows else []
+        made[name] = [{"title": name, "meaning": meaning, "rows": rows, "notes": [], "single": False}] if rows else []
     single = [block for block in blocks if block["single"]]
-    return made["Population"] + made["Spread"] + single + made["Effects of covariates"]
+    return made[title] + made["Spread"] + single + made["Effects of covariates"]
 
 
 def raw_left_out(run: RunContents) -> bool:

@@ -56,6 +56,11 @@ class MemoryContents(RunContents):
         """Whether animals come from one population; otherwise each was fitted alone."""
         return self.facts["card"].get("pooling") == "hierarchical"
 
+    @property
+    def lone(self) -> bool:
+        """Whether there is one animal only, fitted alone: its parameters then need no table for each."""
+        return len(self.animals) == 1 and not self.hierarchical
+
     @cached_property
     def fixes(self) -> pd.DataFrame:
         """All fixes in the order of time: animal, time, x_km, y_km."""
@@ -75,6 +80,8 @@ class MemoryContents(RunContents):
 
         Names of layers and animals are looked up, not split at the comma, which may be part of a name.
         """
+        if self.lone:
+            return base, None
         parts = {"selection": self.responses, "step_rhythm": self.harmonics}.get(base, [])
         if not inner or inner in parts:
             return base, None

@@ -112,13 +112,20 @@ def _accuracy(run: MemoryContents, largest: float) -> list[dict[str, Any]]:
     rows = [("nodes a step of the quadrature", whole(found_number(given, "nodes")), "", True)]
     if run.has_memory:
         error, limit = found_number(given, "trace_error"), found_number(given, "trace_error_limit")
-        rows.append(("columns of the compressed traces", whole(found_number(given, "columns")), "", True))
+        rows.append(("columns of the compressed traces", _columns(given), "", True))
         name = "largest error of an animal’s log-likelihood by the compressed traces"
         rows.append((name, number(error, abs(error)), f"below {limit:g}", error < limit))
     wanted = f"below {WANTED_SHIFT:g}"
     name = "largest shift by the quadrature [posterior sd]"
     rows.append((name, fixed(largest, 3), wanted, largest < WANTED_SHIFT))
     return [dict(zip(("name", "value", "wanted", "good"), row, strict=True)) for row in rows]
+
+
+def _columns(given: dict[str, Any]) -> str:
+    """Columns by decay time, times those by encoding range where that is estimated."""
+    by_range = found_number(given, "range_columns")
+    more = f" × {by_range:.0f}" if given.get("encoding_range_m") is None and by_range > 0 else ""
+    return whole(found_number(given, "columns")) + more
 
 
 def _shift(value: float | None) -> tuple[str, bool]:

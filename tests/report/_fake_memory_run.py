@@ -197,6 +197,7 @@ def facts(recipe: Recipe, table: pd.DataFrame, counts: dict) -> dict:
         "memory": {
             "interval_h": 1.0, "tolerance": 0.1, "shortest_step_m": SHORTEST_M,
             "encoding_range_m": None if recipe.estimate_range else RANGE_M, "nodes": 64, "columns": 18,
+            "range_columns": 10,
             "trace_error": 2.4e-4, "trace_error_limit": 1e-3, "quadrature_shift": shifts,
             "step_autocorrelation": {name: {"lag_1": 0.02 + 0.03 * at, "day": 0.02} for at, name in enumerate(counts)},
             "together": [[*recipe.names[:2], 0.83]] if recipe.animals > 1 else [],

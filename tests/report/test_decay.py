@@ -87,11 +87,14 @@ def test_decay_beyond_the_record_is_found_by_animal_and_for_the_population(new_m
     run.numerics["record_h"] = {first: uppers[1] - 1, second: 1e6}
     found = beyond_record(run)
     # The population is held against the longest record, an animal against its own.
-    assert found == {("reference_decay", first): (pytest.approx(uppers[1]), pytest.approx(uppers[1] - 1))}
+    own = pytest.approx((uppers[1], uppers[1] - 1), rel=1e-12)
+    assert {name: row[:2] for name, row in found.items()} == {f"reference_decay[{first}]": ("reference_decay", first)}
+    assert found[f"reference_decay[{first}]"][2:] == own
     run.numerics["record_h"] = {first: 1.0, second: 1.0}
-    names = [None, first, second, "new animal"]
-    wanted = {(f"{memory}_decay", name) for memory in ("reference", "working") for name in names}
-    assert set(beyond_record(run)) == wanted
+    names = ["", f"[{first}]", f"[{second}]", "[new animal]"]
+    assert set(beyond_record(run)) == {
+        f"{base}{name}" for base in ("reference_decay", "working_decay") for name in names
+    }
 
 
 def test_intervals_take_the_share_of_the_parameters_table(new_memory_run):

@@ -215,6 +215,15 @@ def test_animals_that_travel_together_are_named_with_what_was_done(eight, alone)
     assert f"{pair} Each is fitted alone" in Page(alone.html).words
 
 
+def test_one_animal_alone_has_one_table_of_parameters(new_memory_run):
+    folder = new_memory_run(animals=1, hierarchical=False)
+    page = page_of(folder)
+    assert "step_shape by animal" not in page.words and "Population parameter" not in page.words
+    names = [row[0].partition("|")[0] for row in page.rows if len(row) == 9 and re.match(r"\d\.\d{3}", row[8])]
+    assert names == list(pd.read_csv(folder / "tables" / "parameters.csv")["parameter"])
+    assert "reaches" in page.words and "its upper end is the prior speaking" in page.words
+
+
 def test_a_card_without_layers_has_no_selection(new_memory_run):
     page = page_of(new_memory_run(layers=(), card="memory"))
     assert "selection" not in [attrs["id"] for attrs in page.all("section")]
@@ -226,6 +235,7 @@ def test_selection_by_part_of_the_day_and_an_estimated_range_are_said(new_memory
     assert "selection[forage, day] by animal" in page.words and "selection[forage, night] by animal" in page.words
     assert "selection by animal" not in page.words
     assert ["distance over which a visit is remembered", "estimated"] in page.rows
+    assert ["columns of the compressed traces", "18 × 10", ""] in page.rows
 
 
 def test_same_run_gives_the_same_page(new_memory_run):
@@ -277,5 +287,7 @@ def test_names_of_layers_and_animals_may_hold_commas(base, inner, whose):
         coords={"layer": ["forage", "forage, day"], "harmonic": ["cos 24 h"]},
     )
     empty, constant = xr.Dataset(), xr.Dataset(coords={"animal": ["A, B"]})
-    run = MemoryContents(Path("nowhere"), {}, pd.DataFrame(), posterior, empty, empty, constant, None)
+    run = MemoryContents(
+        Path("nowhere"), {"card": {"pooling": "hierarchical"}}, pd.DataFrame(), posterior, empty, empty, constant, None
+    )
     assert run.whose(base, inner) == whose

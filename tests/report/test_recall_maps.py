@@ -49,6 +49,8 @@ def test_a_peak_is_found_at_its_coordinates(new_memory_run, thin):
         x, y = float(use["x"][11]), float(use["y"][4])
         # rasterio's own georeferencing reads the value back; a flipped or swapped axis puts it elsewhere.
         assert next(raster.sample([(x, y)]))[0] == pytest.approx(0.9, rel=1e-6)
+        row, column = np.unravel_index(np.nanargmax(raster.read(1)), raster.shape)
+        assert raster.xy(row, column) == pytest.approx((x, y), abs=1e-6)
         assert raster.res == (100.0 * thin, 100.0 * thin) and raster.transform.e < 0
 
 
