@@ -29,6 +29,7 @@ y      = "y"
 # crs  = "EPSG:4326"           # if x is longitude and y is latitude
 group  = "group"               # not needed for tracks
 # error = 15                   # location error, standard deviation per axis in metres: a number or a column
+# Directions taken from stations (VHF) go into a section [bearings] instead, or beside this one: docs/bearings.md
 
 [groups]                       # not needed for tracks
 file = "groups.csv"            # group,x,y,animals: home centre (empty: estimated), adults that mark (empty: 1)
