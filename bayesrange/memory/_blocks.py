@@ -60,7 +60,7 @@ class StepData(NamedTuple):
         cos_nodes: cosine of the nodes' turn; 0 where the turn is unknown.
         allowed: nodes on habitable ground.
         xy_used: used place [km]; no steps unless a home is used.
-        xy_nodes: nodes [km]; no steps unless a home is used.
+        xy_nodes: nodes [km]; no steps unless a home is used. Double, for eastings and northings may be thousands of km.
         table_used: the past at the used place [h].
         table_nodes: the past at the nodes, columns first: one product then makes the traces fastest [h].
         weight: of each animal's log-likelihood.
@@ -191,9 +191,9 @@ def make_blocks(
         "table_used": pad([a.table[:, 0] for a in animals], 0.0, node),
     }
     if home:
-        xy = pad([np.stack(places(s, n), axis=-1) for s, n in zip(steps, nodes)], 0.0, node)
+        xy = pad([np.stack(places(s, n), axis=-1) for s, n in zip(steps, nodes)], 0.0, float)
     else:
-        xy = np.zeros((len(owner), 0, nodes[0].x.shape[1] + 1, 2), node)
+        xy = np.zeros((len(owner), 0, nodes[0].x.shape[1] + 1, 2))
     return StepData(
         animal=jnp.asarray(owner),
         xy_used=jnp.asarray(xy[:, :, 0]),

@@ -210,9 +210,8 @@ def _log_weights(
         used += _recall(traces.used, p)
         at_nodes += _recall(traces.nodes, p)
     if data.xy_used.shape[0]:
-        used -= p.home_pull * _distance(data.xy_used.astype(float), p.home, p.home_eps)
-        single_home = (data.xy_nodes.reshape(-1, 2), p.home.astype(single), p.home_eps.astype(single))
-        at_nodes -= p.home_pull.astype(single) * _distance(*single_home).reshape(steps, nodes)
+        used -= p.home_pull * _distance(data.xy_used, p, used.dtype)
+        at_nodes -= p.home_pull.astype(single) * _distance(data.xy_nodes, p, single)
     return used, at_nodes
 
 
@@ -225,11 +224,10 @@ def _recall(traces: Float[Array, "2 ..."], p: StepParameters) -> Float[Array, ".
     return back - p.working_strength.astype(kind) * (working / (working + half))
 
 
-def _distance(
-    place: Float[Array, "places 2"], home: Float[Array, " 2"], eps: Float[Array, ""]
-) -> Float[Array, " places"]:
-    """Smoothed distance to the home [km]."""
-    return jnp.sqrt(((place - home[None]) ** 2).sum(1) + eps**2)
+def _distance(place: Float[Array, "*places 2"], p: StepParameters, kind: jnp.dtype) -> Float[Array, "*places"]:
+    """Smoothed distance to the home [km], in precision `kind` once it is taken off the place."""
+    offset = (place - p.home.reshape((1,) * (place.ndim - 1) + (2,))).astype(kind)
+    return jnp.sqrt((offset**2).sum(-1) + (p.home_eps**2).astype(kind))
 
 
 def _all_traces(parameters: StepParameters, data: StepData, slopes: bool) -> _Traces:

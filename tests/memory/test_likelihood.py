@@ -77,6 +77,21 @@ def test_each_step_is_its_slow_twin(case, track, home, values):
     assert np.abs(found - twin(case, track, home, **values)).max() < 3e-5
 
 
+def test_a_home_far_from_the_origin_is_as_good(track):
+    """Northings of 6,000 km: the pull is the same as about the origin."""
+    near = build(track, layers=0, bases=(no_memory(), fixed_range(SIGMA)))
+    shift = np.array([640.0, 6000.0])
+    steps = near.steps._replace(**{k: getattr(near.steps, k) + shift[i] for k, i in FAR.items()})
+    nodes = near.nodes._replace(x=near.nodes.x + shift[0], y=near.nodes.y + shift[1])
+    far = type(near)(near.animal._replace(steps=steps, nodes=nodes), *list(vars(near).values())[1:])
+    here, there = parameters(layers=0), parameters(layers=0, home=np.array([0.3, -0.2]) + shift)
+    difference = by_step(far.blocks(home=True), there) - by_step(near.blocks(home=True), here)
+    assert np.abs(difference).max() < 1e-6  # single-precision coordinates would miss by 1e-4
+
+
+FAR = {"x": 0, "y": 1, "end_x": 0, "end_y": 1}
+
+
 def test_weighted_sums_of_steps(case):
     data, p = case.blocks(weight=np.array([0.3])), parameters()
     assert np.isclose(jax.jit(animal_log_likelihood)(p, data)[0], 0.3 * by_step(data, p).sum(), rtol=1e-12)

@@ -5,7 +5,7 @@ import pytest
 from memory._cases import SHORTEST, walk
 from scipy import special, stats
 
-from bayesrange.memory import Reference, fit_gamma, make_nodes, make_steps, wide_reference
+from bayesrange.memory import Reference, fit_gamma, make_nodes, make_steps, places, wide_reference
 
 
 def some_steps():
@@ -62,3 +62,15 @@ def test_rotations_sides_and_offsets_differ_between_steps_and_follow_the_seed():
 def test_a_tiny_shape_leaves_finite_logs():
     nodes = make_nodes(some_steps(), Reference(0.02, 1.0), 64, seed=1)
     assert np.isfinite(np.log(nodes.radius.astype(np.float32))).all()
+
+
+def test_a_short_step_is_read_at_its_start_and_any_other_at_its_end():
+    steps = some_steps()
+    nodes = make_nodes(steps, Reference(0.9, 0.4), 5, 1)
+    x, y = places(steps, nodes)
+    assert steps.short.any() and not steps.short.all()
+    start, end = (steps.x, steps.y), (steps.end_x, steps.end_y)
+    for read, here, there in zip((x, y), start, end, strict=True):
+        assert np.array_equal(read[steps.short, 0], here[steps.short])
+        assert np.array_equal(read[~steps.short, 0], there[~steps.short])
+    assert np.array_equal(x[:, 1:], nodes.x) and np.array_equal(y[:, 1:], nodes.y)
