@@ -188,11 +188,7 @@ def _errors(
     pairs = _pairs(inputs) if inputs.decays is not None else []
     asked = [(tau, sigma) for reference, working, sigma in pairs for tau in (reference, working)]
     made = [_tabulated(inputs, k, count, decay, reach, asked) for k in animals]
-    errors = [
-        {option: max((_error(inputs, one, pair, at, option) for at, pair in enumerate(pairs)), default=0.0)
-         for option in options}
-        for one in made
-    ]  # fmt: skip
+    errors = [_errors_of(inputs, one, pairs, options, decay, reach) for one in made]
     return made, errors
 
 
@@ -218,19 +214,25 @@ def _fewer(table: np.ndarray, full: tuple[int, int], columns: tuple[int, int], i
     return np.ascontiguousarray(cut.reshape(*table.shape[:2], -1))
 
 
-def _error(
-    inputs: TableInput, one: _Tabulated, pair: tuple[float, float, float], at: int, option: tuple[int, int]
-) -> float:
-    """|Δ log L| of one animal with strong memories at one pair of decay times, in the columns of one option."""
-    full, (reference, working, sigma) = inputs.columns, pair
-    decay, reach = bases(replace(inputs, columns=option))
-    by_range = np.asarray(range_coefficients(reach, jnp.log(sigma)))
-    by_decay = [np.asarray(decay_coefficients(decay, jnp.log(tau))) for tau in (reference, working)]
-    weight = np.stack([np.outer(own, by_range).ravel() for own in by_decay], axis=1).astype(np.float32)
-    compressed = _fewer(one.steps.table, full, option, inputs) @ weight
-    exact = one.exact[:, :, [2 * at, 2 * at + 1]].astype(np.float32)
-    there, here = (_log_likelihood(inputs, one.steps, traces, pair) for traces in (exact, compressed))
-    return abs(there - here)
+def _errors_of(
+    inputs: TableInput, one: _Tabulated, pairs: list[tuple[float, float, float]], options: list[tuple[int, int]],
+    decay: Basis, reach: Basis,
+) -> dict[tuple[int, int], float]:  # fmt: skip
+    """Largest |Δ log L| of one animal with strong memories over the pairs of decay times, by option of columns."""
+    found = dict.fromkeys(options, 0.0)
+    for at, pair in enumerate(pairs):
+        reference, working, sigma = pair
+        by_range = np.asarray(range_coefficients(reach, jnp.log(sigma)))
+        by_decay = [np.asarray(decay_coefficients(decay, jnp.log(tau))) for tau in (reference, working)]
+        exact = one.exact[:, :, [2 * at, 2 * at + 1]].astype(np.float32)
+        there = _log_likelihood(inputs, one.steps, exact, pair)
+        for option in options:  # fewer columns of the same bases: their first coefficients
+            first = [np.outer(own[: option[0]], by_range[: option[1]]).ravel() for own in by_decay]
+            weight = np.stack(first, axis=1).astype(np.float32)
+            compressed = _fewer(one.steps.table, inputs.columns, option, inputs) @ weight
+            here = _log_likelihood(inputs, one.steps, compressed, pair)
+            found[option] = max(found[option], abs(there - here))
+    return found
 
 
 def _log_likelihood(
