@@ -1,7 +1,7 @@
 """How many independent fixes an animal's record amounts to, quickly enough for a million fixes.
 
 The crossing time comes from at most about 500 fixes an animal, evenly chosen; a record so thinned that the crossing
-time is below three of its intervals is looked at again with four times as many. The effective number is then that of
+time is below 1.5 of its intervals is looked at again with four times as many. The effective number is then that of
 all fixes (`interval_weights`). A fit uses every fix for the crossing time too.
 """
 
@@ -10,7 +10,7 @@ import pandas as pd
 
 from bayesrange.study import autocorrelation_weights, interval_weights
 
-_FIXES, _TIMES, _INTERVALS = 500, 4, 3.0
+_FIXES, _TIMES, _INTERVALS = 500, 4, 1.5
 _SMALL_ERROR = 0.1  # of the median step: below it the location error is left out, which is ten times as fast
 
 

@@ -111,7 +111,7 @@ def look(study: BareStudy) -> Screening:
 
 def _without_any(animal: pd.Series, sound: np.ndarray, flags: pd.DataFrame) -> np.ndarray:
     """Fixes of animals without a sound one, which are looked at all the same; duplicates left out."""
-    lost = ~animal.isin(set(animal[sound])).to_numpy()
+    lost = ~animal.isin(animal[sound].unique()).to_numpy()
     lost[flags["fix"][flags["flag"] == "duplicate"]] = False
     return lost
 
@@ -146,7 +146,7 @@ def _by_animal(
         regular = usable(between, nominal, tolerance)
         step = 1000 * np.hypot(*np.diff(place, axis=0).T)[regular]
         settlings[animal], rhythms[animal] = settling(own["time"], place), rhythm(hours, place, nominal, tolerance)
-        groups = sorted(set(own["group"]) - {""})
+        groups = sorted(set(own["group"].unique()) - {""})
         rows.append(
             {
                 "animal": animal, "group": ", ".join(groups), "fixes": int(every[animal]), "sound": len(own),
