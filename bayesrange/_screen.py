@@ -4,6 +4,7 @@ import time
 from pathlib import Path
 from typing import Any
 
+import pandas as pd
 from rich.console import Console
 from rich.markup import escape
 from rich.padding import Padding
@@ -140,12 +141,15 @@ def show_result(run: Run, page: Path, console: Console) -> None:
     table = Table(title="Parameters", title_justify="left")
     for name in ("parameter", "unit", "median", "90 % interval", "ESS", "R-hat"):
         table.add_column(name, justify="left" if name in ("parameter", "unit") else "right", overflow="fold")
-    for row in run.parameters.itertuples():
+    shown = population_rows(run)
+    for row in shown.itertuples():
         table.add_row(
             escape(row.parameter), escape(str(row.unit)), number(row.median),
             f"{number(row.lower)} to {number(row.upper)}", f"{min(row.ess_bulk, row.ess_tail):.0f}", f"{row.rhat:.3f}",
         )  # fmt: skip
     console.print(table)
+    if len(shown) < len(run.parameters):
+        console.print("The rows of single animals are in tables/parameters.csv and in the report.")
     if run.converged:
         console.print("[green]Converged[/green]: every convergence check was passed.")
     else:
@@ -154,6 +158,16 @@ def show_result(run: Run, page: Path, console: Console) -> None:
             console.print(f"  {escape(problem)}")
     console.print(f"Run folder: {escape(str(run.folder))}", soft_wrap=True)
     console.print(f"Report: {escape(str(page))}", soft_wrap=True)
+
+
+def population_rows(run: Run) -> pd.DataFrame:
+    """Rows of the table that fit a screen: of a population of animals, those of no single animal."""
+    table = run.parameters
+    memory = run.info.get("memory")
+    if memory is None or run.info["card"]["pooling"] != "hierarchical":
+        return table
+    ends = tuple(f"{mark}{animal}]" for animal in memory["record_h"] for mark in ("[", ", "))
+    return table[~table["parameter"].str.endswith(ends)]
 
 
 def number(value: float) -> str:
