@@ -28,7 +28,7 @@ def beside(run: MemoryContents) -> dict[str, Any]:
         return {"rows": [], "cards": [], "figure": None, "sentences": [_how_to(run)]}
     cards = [null.card for null in nulls]
     not_yet = [null.card for null in nulls if not null.converged]
-    sentences = [_difference(pair, cards) for pair in _leading(found)] + [_what_it_means()]
+    sentences = [_difference(pair, cards) for pair in _leading(run, found)] + [_what_it_means()]
     if not_yet:
         sentences.append(f"Not converged: {listed(not_yet)}; its numbers are not yet results.")
     return {
@@ -58,9 +58,9 @@ def _how_to(run: MemoryContents) -> str:
     )
 
 
-def _leading(found: list[Pair]) -> list[Pair]:
-    """The population's rows; without a population none lead, and the table speaks for each animal."""
-    return [pair for pair in found if pair.animal is None]
+def _leading(run: MemoryContents, found: list[Pair]) -> list[Pair]:
+    """The rows to say in words: the population's, or those of an only animal; of several the table speaks."""
+    return [pair for pair in found if pair.animal is None or run.lone]
 
 
 def _difference(pair: Pair, cards: list[str]) -> str:

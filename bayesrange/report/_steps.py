@@ -130,7 +130,7 @@ def _columns(given: dict[str, Any]) -> str:
 
 def _shift(value: float | None) -> tuple[str, bool]:
     shift = math.nan if value is None else float(value)
-    return fixed(shift, 3), abs(shift) < WANTED_SHIFT
+    return fixed(round(shift, 3) + 0.0, 3), abs(shift) < WANTED_SHIFT  # no "−0.000"
 
 
 def _autocorrelation(run: MemoryContents) -> list[dict[str, Any]]:

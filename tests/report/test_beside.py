@@ -9,6 +9,7 @@ from page_text import Page
 
 from bayesrange.report import read_memory, write
 from bayesrange.report._beside import Estimate, find_nulls, pairs, times_as_large
+from bayesrange.report._beside_figure import beside
 
 
 @pytest.fixture(scope="module")
@@ -128,6 +129,14 @@ def test_animals_fitted_alone_are_compared_one_by_one(new_memory_run):
     assert [pair.animal for pair in found] == run.animals
     words = Page(write(here).read_text(encoding="utf-8")).words
     assert "without: steps-home" in words and "times as large" not in words
+
+
+def test_an_only_animal_is_compared_in_words(new_memory_run):
+    here = new_memory_run(animals=1, hierarchical=False)
+    there = new_memory_run(animals=1, hierarchical=False, memory=False, card="steps-resources", selection=1.6)
+    shutil.move(there, here.with_name("steps-resources"))
+    (sentence, *_) = beside(read_memory(here))["sentences"]
+    assert sentence.startswith("Selection of forage is 0.") and "without memory (steps-resources)" in sentence
 
 
 @pytest.mark.parametrize(
