@@ -198,7 +198,7 @@ def make_blocks(
         animal=jnp.asarray(owner),
         xy_used=jnp.asarray(xy[:, :, 0]),
         xy_nodes=jnp.asarray(xy[:, :, 1:]),
-        table_nodes=jnp.moveaxis(jnp.asarray(pad([a.table[:, 1:] for a in animals], 0.0, node)), -1, 1),
+        table_nodes=jnp.asarray(np.moveaxis(pad([a.table[:, 1:] for a in animals], 0.0, node), -1, 1)),
         weight=jnp.ones(len(animals)) if weight is None else jnp.asarray(weight),
         shortest=jnp.asarray(float(shortest)),
         reference_shape=jnp.asarray(float(reference.shape)),

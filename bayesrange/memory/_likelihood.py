@@ -234,8 +234,8 @@ def _all_traces(parameters: StepParameters, data: StepData, slopes: bool) -> _Tr
     """R and W of all steps, and with `slopes` their changes too, from one product with each table."""
     blocks, columns, steps, nodes = data.table_nodes.shape
     if not columns:
-        rows = 4 if slopes else 2
-        return _Traces(jnp.zeros((blocks, rows, 0)), jnp.zeros((blocks, rows, 0, nodes), data.table_nodes.dtype))
+        kinds = 4 if slopes else 2
+        return _Traces(jnp.zeros((blocks, kinds, 0)), jnp.zeros((blocks, kinds, 0, nodes), data.table_nodes.dtype))
     log_decay = jnp.log(jnp.stack([parameters.reference_decay, parameters.working_decay], axis=1))
     log_range = jnp.log(parameters.encoding_range)
 
