@@ -8,6 +8,7 @@ import jax.numpy as jnp
 import numpy as np
 import pytest
 from inference._tiny_study import HOMES, NORTH, SOUTH, WEST, fixes_table, groups_table, write_study
+from inference._tiny_tracks import write_tracks
 from jax.flatten_util import ravel_pytree
 
 from bayesrange.inference import (
@@ -21,6 +22,7 @@ from bayesrange.inference import (
     make_spec,
     read_card,
 )  # fmt: skip
+from bayesrange.inference._prepare import prepare
 from bayesrange.inference._start import whitening_scale
 from bayesrange.study import autocorrelation_weights, read_study
 
@@ -99,3 +101,45 @@ def hierarchical(tmp_path_factory):
 @pytest.fixture(scope="session")
 def homes_km():
     return np.array([(WEST + x, SOUTH + y) for x, y in HOMES.values()]) / 1000
+
+
+Memory = namedtuple("Memory", "study prepared plan tasks facts task data program")
+
+
+def build_memory(file, which=0):
+    """Everything that a fit of a memory card makes of a study before it samples; the program of one of its tasks."""
+    prepared = prepare(read_study(file))
+    tasks, facts = prepared.make_tasks()
+    task = tasks[which]
+    data = as_arrays(task.data)
+    program = Program(task.spec, data, task.warmup, task.target_accept, 50)
+    return Memory(prepared.study, prepared, prepared.plan, tasks, facts, task, data, program)
+
+
+@pytest.fixture(scope="session")
+def pooled(tmp_path_factory):
+    """Memory and selection by day and night, steps by the hour, hierarchical with one covariate."""
+    model = {"pooling": "hierarchical", "covariates": ["sex"], "vary": ["step_length", "selection"]}
+    return build_memory(write_tracks(tmp_path_factory.mktemp("pooled"), model=model))
+
+
+@pytest.fixture(scope="session")
+def estimated(tmp_path_factory):
+    """Memory without layers, each animal alone, the encoding range estimated, steps by the hour."""
+    model = {"card": "memory", "pooling": "individual", "encoding_range_m": "estimate", "vary": ["step_length"]}
+    file = write_tracks(tmp_path_factory.mktemp("estimated"), without=("layers",), model=model)
+    return build_memory(file, which=2)
+
+
+@pytest.fixture(scope="session")
+def at_home(tmp_path_factory):
+    """The null with a pull to one centre, each animal alone."""
+    model = {"card": "steps-home", "pooling": "individual"}
+    return build_memory(write_tracks(tmp_path_factory.mktemp("at home"), model=model), which=3)
+
+
+@pytest.fixture(scope="session")
+def roaming(tmp_path_factory):
+    """The null without memory, each animal alone."""
+    model = {"card": "steps-resources", "pooling": "individual"}
+    return build_memory(write_tracks(tmp_path_factory.mktemp("roaming"), model=model), which=1)
