@@ -37,10 +37,11 @@ def screen_and_show(study: Path, out: Path | None) -> None:
         console.print(table)
     else:
         console.print("No fix is flagged.")
-    console.print(f"Page: {escape(str(found.folder / 'screening.html'))}", soft_wrap=True)
+    folder = found.folder or Path()
+    console.print(f"Page: {escape(str(folder / 'screening.html'))}", soft_wrap=True)
     if found.replaced:
         console.print("This screening replaces an earlier one there.")
-    console.print(f"Every flag with file and line: {escape(str(found.folder / 'screening.csv'))}", soft_wrap=True)
+    console.print(f"Every flag with file and line: {escape(str(folder / 'screening.csv'))}", soft_wrap=True)
     for line in _next(study, list(raised), settings.fixes.drop is not None):
         console.print(escape(line), soft_wrap=True)
 

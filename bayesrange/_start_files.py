@@ -1,6 +1,7 @@
 """A new study: a commented study file and empty tables, or filled in from a file of fixes as far as it can be told."""
 
 import json
+import re
 from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -29,7 +30,11 @@ y      = "y"
 # crs  = "EPSG:4326"           # if x is longitude and y is latitude
 group  = "group"               # not needed for tracks
 # error = 15                   # location error, standard deviation per axis in metres: a number or a column
+# max_speed_kmh = 15           # faster the animals cannot be; left out: judged by what is usual for each
 # Directions taken from stations (VHF) go into a section [bearings] instead, or beside this one: docs/bearings.md
+
+# [fixes.drop]                 # `bayesrange screen` shows the flags; nothing is dropped unless said here
+# flags = ["duplicate", "speed", "spike", "stationary", "outside"]
 
 [groups]                       # not needed for tracks
 file = "groups.csv"            # group,x,y,animals: home centre (empty: estimated), adults that mark (empty: 1)
@@ -97,6 +102,7 @@ def write_start(folder: Path, fixes: Sequence[Path] = ()) -> list[str]:
     return [
         f"Written: {folder / 'study.toml'}, {', '.join(TABLES)}.",
         "Fill in the tables, put area.geojson (and layers) beside them, go through study.toml, then:",
+        f"  bayesrange screen {folder}     a look at the data",
         f"  bayesrange fit {folder}",
     ]
 
@@ -127,7 +133,8 @@ def _filled_in(found: "Guess") -> str:
     lines = []
     section = ""
     for line in STUDY.splitlines():
-        section = line.strip("[]") if line.startswith("[") else section
+        opened = re.match(r"(?:# )?\[([a-z.]+)\]", line)
+        section = opened[1] if opened else section
         key = line.lstrip("# ").split("=")[0].strip() if "=" in line else ""
         if section == "study" and key == "crs":
             lines.append(_study_crs(found))
@@ -139,17 +146,7 @@ def _filled_in(found: "Guess") -> str:
             lines.append(f"# {line}")
         else:
             lines.append(line)
-    text = "\n".join(lines)
-    deployments = (
-        "# [animals]                    # one row a deployment, for collars that changed animals, or settling in\n"
-        '# file = "animals.csv"         # animals.csv holds the animals found; fill in tag, from, until\n'
-    )
-    return (
-        text.replace("\n[groups]", f"\n{deployments}\n[groups]", 1).replace(
-            "\n# [groups]", f"\n{deployments}\n# [groups]", 1
-        )
-        + "\n"
-    )
+    return "\n".join(lines) + "\n"
 
 
 def _study_crs(found: "Guess") -> str:

@@ -92,8 +92,9 @@ def duplicates(fixes: pd.DataFrame) -> pd.DataFrame:
 
 
 def outside(fixes: pd.DataFrame, area: shapely.Polygon | shapely.MultiPolygon) -> pd.DataFrame:
-    """Fixes outside the area by more than 3 standard deviations of their location error [m]."""
-    x, y, error = (fixes[c].to_numpy(dtype=float) for c in ("x", "y", "error_m"))
+    """Fixes outside the area by more than 3 standard deviations of the location error (an ellipse's long axis) [m]."""
+    widest = "error_major_m" if "error_major_m" in fixes.columns else "error_m"
+    x, y, error = (fixes[c].to_numpy(dtype=float) for c in ("x", "y", widest))
     shapely.prepare(area)
     out = np.flatnonzero(~shapely.covers(area, shapely.points(x, y)))
     distance = np.asarray(shapely.distance(area, shapely.points(x[out], y[out])))

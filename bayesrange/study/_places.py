@@ -99,7 +99,8 @@ def _where(fixes: pd.DataFrame, far: NDArray, ground: Ground, x: NDArray, y: NDA
     if fixes["error_m"].iloc[far].any():
         told[-1] += f", by more than {_SDS:.0f} standard deviations of their error"
     return (
-        f"{'; '.join(told)}; mend or take out these rows, widen the area, or give the location error by [fixes] error."
+        f"{'; '.join(told)}; mend or take out these rows, widen the area, give the location error by [fixes] error, "
+        'or leave out those outside the area by flags = ["outside"] in [fixes.drop].'
     )
 
 

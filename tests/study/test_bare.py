@@ -6,8 +6,9 @@ import re
 import numpy as np
 import pandas as pd
 import pytest
+from study._vhf import only_bearings
 
-from bayesrange.study import StudyError, read_bare, read_settings
+from bayesrange.study import StudyError, find_flags, read_bare, read_settings
 
 
 def bare(folder, **sections):
@@ -32,6 +33,16 @@ def test_a_whole_study_is_read_as_for_a_fit(folder):
     pd.testing.assert_frame_equal(looked_at.fixes, whole.fixes)
     pd.testing.assert_frame_equal(looked_at.groups, whole.groups)
     assert looked_at.area.equals(whole.area) and looked_at.warnings == []
+
+
+def test_places_from_bearings_come_with_their_doubts(folder):
+    _, table = only_bearings(folder, hills=2)
+    folder.toml = {"study": {"crs": folder.crs}, "bearings": folder.toml["bearings"] | {"sd_deg": 3.0}}
+    table.to_csv(folder.path("bearings.csv"), index=False)
+    study = read_bare(folder.write())
+    assert len(study.fixes) > 150 and "flag" in study.fixes.columns
+    doubtful = find_flags(study.fixes).query("flag == 'bearing'")["fix"].tolist()
+    assert doubtful == study.fixes.index[study.fixes["flag"] != ""].tolist() and doubtful
 
 
 def test_duplicates_stay(folder):

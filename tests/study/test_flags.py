@@ -181,6 +181,30 @@ def test_outside_is_beyond_three_standard_deviations():
     assert flags[["value", "limit"]].iloc[0].tolist() == [pytest.approx(31), 30]
 
 
+def test_outside_an_error_ellipse_is_judged_by_its_long_axis():
+    fixes = wandering(error_m=10.0).assign(error_major_m=40.0)
+    west = fixes["x"].min() - 1
+    fixes.loc[3, "x"], fixes.loc[5, "x"] = west - 100, west - 121
+    assert of(find_flags(fixes, area=shapely.box(west, 0, fixes["x"].max() + 1, 1e7)), "outside") == [5]
+
+
+def test_what_bearings_doubt_is_a_flag():
+    fixes = wandering().assign(flag="")
+    fixes.loc[7, "flag"] = "crossing under 20°"
+    assert of(find_flags(fixes), "bearing") == [7]
+
+
+def test_flags_do_not_depend_on_where_the_animals_are_or_what_they_are_called():
+    fixes = pd.concat([wandering(seed=1), wandering(seed=2).assign(animal="B1")], ignore_index=True)
+    fixes.loc[[100, 800], "x"] += [50_000, 3_500]
+    fixes.loc[1100:, ["x", "y"]] = fixes.loc[1100, ["x", "y"]].to_numpy()
+    flags = find_flags(fixes)
+    assert set(flags["flag"]) == {"speed", "spike", "stationary"}
+    turned = fixes.assign(x=5e5 - fixes["y"], y=fixes["x"] + 1e5, time=fixes["time"] + pd.Timedelta(days=900))
+    moved = find_flags(turned.assign(animal=fixes["animal"].map({"A1": "wolf 1", "B1": "wolf 2"})))
+    pd.testing.assert_frame_equal(moved, flags, rtol=1e-9)
+
+
 def test_a_gap_is_more_than_a_day_and_ten_intervals():
     fixes = wandering()
     fixes.loc[250:, "time"] += pd.Timedelta(hours=40)
