@@ -14,6 +14,7 @@ from bayesrange.inference._memory_data import EXCESS, MemoryData, MemorySpec
 from bayesrange.inference._memory_model import animal_layout
 from bayesrange.inference._memory_study import Tracks, animal_column, make_tracks
 from bayesrange.inference._memory_tables import (
+    COLUMNS,
     Proof,
     TableInput,
     make_proved,
@@ -230,7 +231,7 @@ def _table_input(plan: MemoryPlan, study: Study) -> TableInput:
     return TableInput(
         animals=tuple(plan.tracks.animals), landscape=plan.landscape, reference=wide_reference(moved),
         shortest=plan.scales.shortest_step_m / 1000, decays=_decays(plan), ranges=plan.spec.range_limits,
-        columns=(24, 10), by_day="selection" in study.settings.model.vary, home="home_pull" in plan.spec.parameters,
+        columns=COLUMNS[-1], by_day="selection" in study.settings.model.vary, home="home_pull" in plan.spec.parameters,
         weight=tuple(1 / sizes), seed=plan.seed,
     )  # fmt: skip
 

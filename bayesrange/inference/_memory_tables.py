@@ -38,7 +38,7 @@ from bayesrange.memory import (
 
 TRACE_LIMIT = 1e-3
 """Largest |Δ log L| of an animal that compression may make."""
-COLUMNS = ((12, 5), (14, 6), (16, 7), (20, 8), (24, 10), (30, 12))
+COLUMNS = ((16, 10), (18, 12), (20, 14), (24, 16), (28, 20), (32, 26))
 """Columns for decay times and, where it is estimated, for the encoding range, in the order in which they are tried."""
 PROVED_AT = 6
 """Random pairs of decay times at which the error is proved."""
