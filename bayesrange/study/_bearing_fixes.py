@@ -35,6 +35,7 @@ from bayesrange.study._triangulation import (
     residuals,
 )
 
+_EARTH_M = 1e8  # no coordinate of a map is larger
 NARROW = float(np.radians(20))
 FLAGS = {"narrow_crossing": "narrow crossing", "behind_observer": "behind observer", "large_residual": "large residual"}
 """Count of a flag and its word in the fixes' column."""
@@ -156,17 +157,17 @@ def _on_the_map(
         )
     target = given or utm_for(x, y, source)
     along, up = carry(x, y, source, target)
-    strange = ~(np.isfinite(along) & np.isfinite(up))
-    if strange.any():
-        raise StudyError(
-            f'{where}: the station "{shown(table["station"][strange].iloc[0])}" lies where [study] crs does not reach; '
-            "check [bearings] crs and the order of x and y."
-        )
     north = target if source.is_geographic else source
     if section.north != "grid":
         north = north.geodetic_crs or north
     azimuth = table["bearing"].to_numpy(dtype=float) + table["declination"].to_numpy(dtype=float)
     azimuth = turned(azimuth, carry(along, up, target, north), north, (along, up), target)
+    strange = ~((np.abs(along) < _EARTH_M) & (np.abs(up) < _EARTH_M) & np.isfinite(azimuth))
+    if strange.any():
+        raise StudyError(
+            f'{where}: the station "{shown(table["station"][strange].iloc[0])}" lies where [study] crs does not reach; '
+            "check [bearings] crs and the order of x and y."
+        )
     return table.assign(x=along, y=up, azimuth=np.radians(azimuth)), target
 
 
@@ -211,7 +212,8 @@ def _sd(
             f"{counted(len(sets.azimuth), 'set', 'sets')} of three and more bearings; say what beacon trials "
             "gave, as in [bearings] sd_deg = 5."
         )
-    of = [f"{shown(o) or 'no observer'} {np.degrees(s):.1f}°" for o, s in zip(observers, pooled.sd, strict=True)]
+    sds = [f"{s:.1f}°" for s in np.degrees(pooled.sd)]
+    of = [f"{shown(o) or 'no observer'} {s}" for o, s in zip(observers, sds, strict=True)] if len(sds) > 1 else sds
     few = [shown(o) or "no observer" for o, n in zip(observers, pooled.spare, strict=True) if n < FEWEST_SPARE]
     text = (
         f"{name}: the standard deviation of a bearing was pooled over {counted(pooled.sets, 'set', 'sets')} of three "

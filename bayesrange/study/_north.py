@@ -26,7 +26,7 @@ def turned(
     placed: tuple[Float[NDArray, " n"], Float[NDArray, " n"]],
     target: pyproj.CRS,
 ) -> Float[NDArray, " n"]:
-    """Azimuths from the north of one reference system to that of another, from 0 to below 360.
+    """Azimuths from the north of one reference system to that of another, from 0 to below 360; NaN where one ends.
 
     Args:
         azimuth: from the north of `source`.
@@ -37,4 +37,5 @@ def turned(
     """
     if source == target:
         return azimuth % 360
-    return (azimuth + convergence(*place, source) - convergence(*placed, target)) % 360
+    with np.errstate(invalid="ignore"):
+        return (azimuth + convergence(*place, source) - convergence(*placed, target)) % 360

@@ -85,10 +85,11 @@ def residual_cosine(
 
 
 def directions(place: Float[NDArray, "sets 2"], station: Stations) -> Stations:
-    """Gradient of each azimuth of the place by the place [rad/m]."""
+    """Gradient of each azimuth of the place by the place [rad/m]; 0 on the station itself."""
     away = place[:, None] - station
     square = (away**2).sum(axis=-1)
-    return np.stack([away[..., 1] / square, -away[..., 0] / square], axis=-1)
+    turned = np.stack([away[..., 1], -away[..., 0]], axis=-1)
+    return np.divide(turned, square[..., None], out=np.zeros_like(turned), where=square[..., None] > 0)
 
 
 def information(place: Float[NDArray, "sets 2"], station: Stations, weight: Azimuths) -> Float[NDArray, "sets 2 2"]:

@@ -118,6 +118,10 @@ STATIONS = {
     "blank": (",500000,5600000", "stations.csv, line 2: the station is blank; expected one line a station"),
     "case": ("alder,500000,5600000\nAlder,504000,5600000", "differ only by upper case or blanks"),
     "text": ("alder,500000,N", 'stations.csv, line 2, column "y": expected a number, got "N"'),
+    "far off": (
+        "alder,1e300,5600000\nbirch,504000,5600000\ncedar,504000,5604000\nelm,500000,5604000",
+        'stations.csv: the station "alder" lies where [study] crs does not reach; check [bearings] crs',
+    ),
     "no place": ("alder,500000,", 'stations.csv, line 2, column "y": expected a number, got ""'),
     "degrees": (
         "alder,3.0,50.5\nbirch,3.1,50.5\ncedar,3.1,50.6\nelm,3.0,50.6",
