@@ -16,7 +16,8 @@ from jaxtyping import Bool, Float
 from numpy.typing import NDArray
 
 from bayesrange._errors import StudyError
-from bayesrange.study._bearing_sd import FEWEST_SPARE, LARGE, Sets, large_residuals, pooled_sd
+from bayesrange.study._bearing_flags import FLAGS, flags_of, sentences, why_set_aside
+from bayesrange.study._bearing_sd import FEWEST_SPARE, Sets, pooled_sd
 from bayesrange.study._bearings import read_bearings
 from bayesrange.study._crs import carry, look_like_degrees, metric_crs, parse_crs, utm_for
 from bayesrange.study._ellipses import COLUMNS, axes_of, circular_sd
@@ -24,22 +25,13 @@ from bayesrange.study._north import turned
 from bayesrange.study._settings import BearingsSection
 from bayesrange.study._tables import counted, first_few, shown
 from bayesrange.study._triangulation import (
-    NEAREST_M,
     crossing,
-    crossing_angle,
     information,
     lenth_information,
-    leverages,
     locate,
-    residual_cosine,
-    residuals,
 )
 
 _EARTH_M = 1e8  # no coordinate of a map is larger
-NARROW = float(np.radians(20))
-FLAGS = {"narrow_crossing": "narrow crossing", "behind_observer": "behind observer", "large_residual": "large residual"}
-"""Count of a flag and its word in the fixes' column."""
-
 FEWEST_TO_POOL = 5.0
 """Spare bearings of all observers together below which their standard deviation has to be given."""
 
@@ -119,13 +111,13 @@ def bearing_fixes(
     counts["no_place"] = lost.size
     if not found.any():
         raise StudyError(
-            f"{name}: none of {counted(len(size), 'set', 'sets')} of bearings gives a place: {_why(counts)}."
+            f"{name}: none of {counted(len(size), 'set', 'sets')} of bearings gives a place: {why_set_aside(counts)}."
         )
     used = chosen.of(np.flatnonzero(found))
-    flags = _flags(place[found], used, sd)
+    flags = flags_of(place[found], used, sd)
     counts |= {key: int(flag.sum()) for key, flag in flags.items()}
     fixes = _fixes(first.iloc[wanted[found]], place[found], used, sd, flags)
-    said = read.warnings + said + _sentences(counts, first.iloc[lost], fixes, name)
+    said = read.warnings + said + sentences(counts, first.iloc[lost], fixes, name)
     if section.stations is not None:
         files = files | {section.stations: folder / section.stations}
     rows = BearingRows(_rows(fixes, used, sd, ~flags["behind_observer"]), target)
@@ -240,19 +232,6 @@ def _places(
     return place, found
 
 
-def _flags(
-    place: Float[NDArray, "sets 2"], sets: Sets, sd: Float[NDArray, " observers"]
-) -> dict[str, Bool[NDArray, " sets"]]:
-    weight = sets.weights(sd)
-    off = np.where(sets.taken, residuals(place, sets.station, sets.azimuth), 0.0)
-    left = np.where(sets.taken, 1 - leverages(place, sets.station, weight), 0.0)
-    return {
-        "narrow_crossing": crossing_angle(sets.azimuth, weight) < NARROW,
-        "behind_observer": (residual_cosine(place, sets.station, sets.azimuth, weight) < 0).any(axis=1),
-        "large_residual": large_residuals(off, left, sd[sets.observer]).any(axis=1),
-    }
-
-
 def _covariance(place: Float[NDArray, "sets 2"], sets: Sets, sd: Float[NDArray, " observers"]) -> NDArray:
     """Lenth's covariance; where residuals are so large that his is none, the expected one [m²]."""
     weight = sets.weights(sd)
@@ -297,42 +276,3 @@ def _rows(
             "sd_deg": np.degrees(sd[sets.observer[fix, slot]]),
         }
     ).astype({"file": "str"})
-
-
-def _why(counts: dict[str, int]) -> str:
-    """What set sets aside, in words."""
-    words = {
-        "single_bearings": ("has bearings from one place only", "have bearings from one place only"),
-        "pairs_set_aside": ("is a pair without [bearings] sd_deg", "are pairs without [bearings] sd_deg"),
-        "no_place": ("does not meet ahead of the observers", "do not meet ahead of the observers"),
-    }
-    return "; ".join(
-        f"{counts[key]:,} {one if counts[key] == 1 else many}" for key, (one, many) in words.items() if counts.get(key)
-    )
-
-
-def _sentences(counts: dict[str, int], lost: pd.DataFrame, fixes: pd.DataFrame, name: str) -> list[str]:
-    said = []
-    if counts["bearings_failed"]:
-        said.append(f"{name}: {counted(counts['bearings_failed'], 'row has', 'rows have')} no bearing, set aside.")
-    why = _why(counts)
-    if why:
-        text = f"{name}: of {counted(counts['bearing_sets'], 'set', 'sets')} some were set aside: {why}"
-        if len(lost):
-            text += f" or meet within {NEAREST_M:g} m of a station ({_lines(lost)})"
-        said.append(text + ".")
-    told = {
-        "narrow_crossing": f"of bearings that cross at less than {np.degrees(NARROW):.0f}°",
-        "behind_observer": "behind an observer (a bearing taken the wrong way round?)",
-        "large_residual": f"with a bearing off by more than {LARGE:.0f} standard deviations",
-    }
-    for key, words in told.items():
-        if counts[key]:
-            which = fixes[fixes["flag"].str.contains(FLAGS[key], regex=False)]
-            number = counted(counts[key], "place", "places")
-            said.append(f"{name}: {number} {words}, flagged and used ({_lines(which)}).")
-    return said
-
-
-def _lines(rows: pd.DataFrame) -> str:
-    return first_few(f"{file} line {row}" for file, row in zip(rows["file"], rows["row"], strict=True))
