@@ -123,7 +123,7 @@ def make_proved(inputs: TableInput, count: int) -> tuple[TableInput, StepData, P
     """Steps with nodes and tables in as few columns as the limit allows, and the proof of their error.
 
     Where the encoding range is known the columns are chosen for all animals at once; where it is estimated on the
-    longest record, and proved on all.
+    longest record, and proved on all: more columns are tried where that fails.
 
     Args:
         inputs: tracks and what their tables need; their columns are chosen here.
@@ -135,14 +135,17 @@ def make_proved(inputs: TableInput, count: int) -> tuple[TableInput, StepData, P
     Raises:
         StudyError: no number of columns will do.
     """
-    everyone = range(len(inputs.animals))
-    options = list(COLUMNS)
+    tries = [list(COLUMNS)]
     if inputs.decays is None:
-        options = [COLUMNS[0]]
+        tries = [[COLUMNS[0]]]
     elif inputs.ranges[0] != inputs.ranges[1]:
         longest = int(np.argmax([one.steps.time.size for one in inputs.animals]))
-        options = [_fewest(_errors(replace(inputs, columns=COLUMNS[-1]), [longest], count, options)[1])]
-    made, errors = _errors(replace(inputs, columns=options[-1]), everyone, count, options)
+        fewest = _fewest(_errors(replace(inputs, columns=COLUMNS[-1]), [longest], count, list(COLUMNS))[1])
+        tries = [[option] for option in COLUMNS[COLUMNS.index(fewest) :]]
+    for options in tries:
+        made, errors = _errors(replace(inputs, columns=options[-1]), range(len(inputs.animals)), count, options)
+        if max(own[options[-1]] for own in errors) < TRACE_LIMIT / 2:
+            break
     columns = _fewest(errors) if inputs.decays is not None else options[0]
     full, inputs = options[-1], replace(inputs, columns=columns)
     steps = [one.steps._replace(table=_fewer(one.steps.table, full, columns, inputs)) for one in made]
@@ -200,8 +203,9 @@ def _fewest(errors: list[dict[tuple[int, int], float]]) -> tuple[int, int]:
     worst = max(list(own.values())[-1] for own in errors)
     raise StudyError(
         f"The past of the animals cannot be compressed to within {TRACE_LIMIT:g} of the log-likelihood with "
-        f"{COLUMNS[-1][0]} columns (error {worst:.2g}): the priors of the decay times reach too far; give "
-        "reference_decay and working_decay narrower priors in [model.priors]."
+        f"{COLUMNS[-1][0]} columns (error {worst:.2g}): the priors of the decay times, or of an estimated encoding "
+        "range, reach too far; give reference_decay, working_decay and encoding_range narrower priors in "
+        "[model.priors]."
     )
 
 

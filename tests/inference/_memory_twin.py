@@ -83,6 +83,19 @@ def twin_track(study, name, layers, count, seed, reference, shortest):
     return TwinTrack(stays_of(hours, x, y), steps, nodes, px, py, read, allowed)
 
 
+def twin_tracks(model, layers, shortest=0.001):
+    """The twin's tracks of the animals of one task, with the package's nodes."""
+    inputs, found = model.task.extra["inputs"], []
+    for one in inputs.animals:
+        k = list(model.plan.spec.animals).index(one.name)
+        # The seed of an animal's nodes, whether or not it was made ready alone
+        seed = model.study.settings.sampling.seed + 31 * k
+        found.append(twin_track(model.study, one.name, layers, 16, seed, inputs.reference, shortest))
+        if inputs.by_day:  # by day, then by night
+            found[-1].layers = found[-1].layers * np.stack([one.day, ~one.day], 1)[:, None]
+    return found
+
+
 def _layer_at(ground, k, x, y):
     try:
         return _bilinear(ground, ground.layers[k], x, y)
@@ -102,7 +115,7 @@ def trace(own, decay, encoding_range):
 
 
 def log_likelihood(own, p, reference, shortest, hour):
-    """Log-likelihood of each step of one animal; `p` holds its parameters [km, h], layers in the order of `selection`."""
+    """Log-likelihood of each step of one animal, from its parameters [km, h]."""
     log_omega = own.layers @ np.atleast_1d(p.get("selection", np.zeros(own.layers.shape[-1])))
     if "reference_strength" in p:
         for strength, decay in (("reference_strength", "reference_decay"), ("working_strength", "working_decay")):

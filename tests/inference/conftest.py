@@ -7,6 +7,7 @@ import jax
 import jax.numpy as jnp
 import numpy as np
 import pytest
+from inference._memory_twin import twin_tracks
 from inference._tiny_study import HOMES, NORTH, SOUTH, WEST, fixes_table, groups_table, write_study
 from inference._tiny_tracks import write_tracks
 from jax.flatten_util import ravel_pytree
@@ -124,18 +125,24 @@ def pooled(tmp_path_factory):
 
 
 @pytest.fixture(scope="session")
+def pooled_tracks(pooled):
+    """The animals of `pooled` as the twin sees them."""
+    return twin_tracks(pooled, ["forage"])
+
+
+@pytest.fixture(scope="session")
 def estimated(tmp_path_factory):
     """Memory without layers, each animal alone, the encoding range estimated, steps by the hour."""
     model = {"card": "memory", "pooling": "individual", "encoding_range_m": "estimate", "vary": ["step_length"]}
     file = write_tracks(tmp_path_factory.mktemp("estimated"), without=("layers",), model=model)
-    return build_memory(file, which=2)
+    return build_memory(file, which=3)
 
 
 @pytest.fixture(scope="session")
 def at_home(tmp_path_factory):
     """The null with a pull to one centre, each animal alone."""
     model = {"card": "steps-home", "pooling": "individual"}
-    return build_memory(write_tracks(tmp_path_factory.mktemp("at home"), model=model), which=3)
+    return build_memory(write_tracks(tmp_path_factory.mktemp("at home"), model=model), which=0)
 
 
 @pytest.fixture(scope="session")
