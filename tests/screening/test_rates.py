@@ -51,3 +51,11 @@ def test_gaps_do_not_hide_a_rhythm():
 @pytest.mark.parametrize(("n", "hours"), [(1200, 12.0), (10, 2.0), (1, 2.0)])
 def test_too_rare_or_too_few_fixes_cannot_tell(n, hours):
     assert rhythm(np.arange(n) * hours, wandering(n, hours) / 1000, hours, 0.1).verdict == "cannot be told"
+
+
+def test_lively_and_lazy_weeks_are_no_24_hour_rhythm():
+    rng = np.random.default_rng(6)
+    lively = np.exp(1.5 * np.sin(2 * np.pi * np.arange(1440) / (12 * 14)))  # a period of two weeks
+    place = np.cumsum(lively[:, None] * rng.normal(size=(1440, 2)) * 100, axis=0)
+    found = rhythm(np.arange(1440) * 2.0, place / 1000, 2.0, 0.1)
+    assert found.correlation[np.argmin(np.abs(found.lag_h - 24))] > 0.3 and found.verdict == "no 24-hour rhythm"

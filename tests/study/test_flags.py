@@ -217,3 +217,12 @@ def test_animals_are_judged_each_by_itself():
     slow.loc[300, "x"] += 30_000
     fixes = pd.concat([slow, fast], ignore_index=True)
     assert of(find_flags(fixes), "speed") == [300]
+
+
+def test_the_location_error_makes_no_speed():
+    # Two fixes ten seconds apart scatter by their error of 10 m: up to 15 km/h, and the animal stood still.
+    fixes = wandering(n=200)
+    again = fixes.assign(time=fixes["time"] + pd.Timedelta(seconds=10), x=fixes["x"] + 20, y=fixes["y"] - 25)
+    both = pd.concat([fixes, again]).sort_values("time", ignore_index=True)
+    assert of(find_flags(both, max_speed_kmh=5.0), "speed") == []
+    assert of(find_flags(both.assign(error_m=1.0), max_speed_kmh=5.0), "speed") != []
