@@ -101,7 +101,7 @@ def bases(inputs: TableInput) -> tuple[Basis, Basis]:
     reach = fixed_range(short) if short == long else range_basis(short, long, inputs.columns[1])
     if inputs.decays is None:
         return no_memory(), fixed_range(short)
-    youngest = min(float(np.diff(one.stays.time).min()) for one in inputs.animals if one.stays.time.size > 1)
+    youngest = min(float(one.stays.duration.min()) for one in inputs.animals)
     oldest = max(one.record_h for one in inputs.animals)
     return decay_basis(0.9 * youngest, 1.1 * oldest, *inputs.decays, inputs.columns[0]), reach
 
