@@ -156,9 +156,10 @@ def test_each_observer_has_a_standard_deviation_of_its_own():
     assert pooled.spare.sum() == pytest.approx(2 * pooled.sets, rel=1e-6)  # n − 2 a set
 
 
-def test_bearings_taken_the_wrong_way_round_do_not_widen_all_ellipses():
+@pytest.mark.parametrize("off_deg", [180, 40])
+def test_bearings_far_off_do_not_widen_all_ellipses(off_deg):
     _, sets = field(400, 4, [4.0], np.random.default_rng(83))
-    sets.azimuth[::20, 0] += np.pi
+    sets.azimuth[::20, 0] += np.radians(off_deg)
     pooled = pooled_sd(sets, 1)
     assert np.degrees(pooled.sd[0]) == pytest.approx(4, rel=0.1)
     assert 20 <= pooled.left_out < 25
