@@ -77,13 +77,19 @@ def fit(
     again: Annotated[bool, typer.Option("--again", help="Make a new run folder where a finished run stands.")] = False,
     processes: Processes = None,
     period: Annotated[
-        str | None, typer.Option("--period", metavar="NAME", help="Which of the study's periods to fit.")
+        str | None,
+        typer.Option("--period", metavar="NAME", help="Fit this of the study's periods only; default all, one by one."),
     ] = None,
 ) -> None:
     """Sample the posterior and write the run folder with tables, maps and report; the same command resumes."""
     from bayesrange import _screen
+    from bayesrange.inference import study_periods
     from bayesrange.study import read_study
 
+    if period is None and study_periods(study):
+        from bayesrange._screen_periods import fit_periods_and_report
+
+        return _finish(fit_periods_and_report(study, out, again, processes))
     whole = study if period is None else read_study(study, period)
     run = _screen.fit_and_report(whole, out=out, again=again, processes=processes)
     _finish(run.converged)

@@ -30,7 +30,8 @@ def fit(
     """Sample the posterior of a study and write a run folder.
 
     A fit that was interrupted goes on where it stopped when called again with the same study. Call `report` on the
-    run's folder for tables of ranges, maps and the page (the command `bayesrange fit` does).
+    run's folder for tables of ranges, maps and the page (the command `bayesrange fit` does). A study with periods is
+    fitted one period at a time, `fit(read_study(study, period))`, or all of them by `fit_periods`.
 
     Args:
         study: study file, its folder, or a study that was read (one period of it, where there are some).
@@ -55,7 +56,7 @@ def fit(
     name = prepared.card.name if study.period is None else f"{prepared.card.name}-{study.period}"
     folder = choose_folder(study.path.parent, name, out, again, prepared.fingerprint)
     checkpoints = folder / "checkpoints"
-    _refuse_changes(checkpoints, prepared)
+    refuse_changes(checkpoints, prepared)
     make_folder(checkpoints)
     with held(checkpoints):
         tell({"stage": "read", "folder": str(folder), "prepared": prepared})
@@ -111,7 +112,7 @@ def _save_tasks(checkpoints: Path, prepared: Prepared, folders: list[Path]) -> N
     write_json(checkpoints / "inputs.json", inputs)
 
 
-def _refuse_changes(checkpoints: Path, prepared: Prepared) -> None:
+def refuse_changes(checkpoints: Path, prepared: Prepared) -> None:
     """An unfinished run goes on only with the very same input.
 
     Raises:

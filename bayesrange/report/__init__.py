@@ -5,6 +5,8 @@ Works from a run folder alone: no study files, no sampler.
 
 from bayesrange._callable import make_callable
 from bayesrange.report._decay import decay_table as decay_table
+from bayesrange.report._differences_write import check_differences_folder as check_differences_folder
+from bayesrange.report._differences_write import write_differences as write_differences
 from bayesrange.report._isopleths import isopleth_outlines as isopleth_outlines
 from bayesrange.report._read import Contents as Contents
 from bayesrange.report._read import read_contents as read_contents

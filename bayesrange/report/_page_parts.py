@@ -30,8 +30,8 @@ def head(run: RunContents, today: date) -> dict[str, str]:
         "card_title": str(run.facts["card"].get("title") or ""),
         "period": spaced(period) if period else "",
         "tracked": _tracked(run),
-        "fitted": _day(date.fromisoformat(fitted)) if fitted else "",
-        "written": _day(today),
+        "fitted": day(date.fromisoformat(fitted)) if fitted else "",
+        "written": day(today),
     }
 
 
@@ -40,10 +40,10 @@ def _tracked(run: RunContents) -> str:
     if name not in run.constant or not run.constant[name].size:
         return ""
     times = pd.to_datetime(run.constant[name].values)
-    return f"{_day(times.min().date())} to {_day(times.max().date())}"
+    return f"{day(times.min().date())} to {day(times.max().date())}"
 
 
-def _day(when: date) -> str:
+def day(when: date) -> str:
     return f"{when.day} {when:%B %Y}"
 
 

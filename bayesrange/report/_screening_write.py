@@ -10,6 +10,7 @@ import geopandas
 import pandas as pd
 
 from bayesrange._errors import StudyError
+from bayesrange.report._own_folder import refuse_other_things
 from bayesrange.report._screening_page import screening_page
 from bayesrange.screening import CardLike, Carried, Screening, carried, look
 from bayesrange.study import read_bare
@@ -31,33 +32,13 @@ def screen(study: str | Path, out: str | Path | None = None, cards: Iterable[Car
     """
     bare = read_bare(study)
     folder = Path(out) if out is not None else bare.path.parent / "screening"
-    refuse_other_things(folder)
+    refuse_other_things(folder, FILES, _MARK, "a screening")
     found = look(bare)
     if cards is None:
         from bayesrange.inference import cards as all_cards
 
         cards = all_cards(bare.path.parent)
     return write_screening(found, folder, carried(found.evidence, cards))
-
-
-def refuse_other_things(folder: Path) -> None:
-    """Refuse a folder that holds anything but an earlier screening.
-
-    Raises:
-        StudyError: it does.
-    """
-    if not folder.exists():
-        return
-    if not folder.is_dir():
-        raise StudyError(f"{folder}: this is a file; expected a folder for the screening, choose another by --out.")
-    held = sorted(path.name for path in folder.iterdir())
-    page = folder / FILES[0]
-    ours = page.is_file() and _MARK in page.read_text(encoding="utf-8", errors="replace")[:2000]
-    if set(held) - set(FILES) or (held and not ours):
-        raise StudyError(
-            f"{folder}: this folder holds other things than a screening ({held[0]}), which would be overwritten; "
-            "choose another by --out."
-        )
 
 
 def write_screening(found: Screening, folder: Path, cards: list[Carried]) -> Screening:

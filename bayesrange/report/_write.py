@@ -42,7 +42,7 @@ def write(run: str | Path | HasFolder) -> Path:
     """
     folder = Path(run.folder if isinstance(run, HasFolder) else run)
     facts = read_facts(folder)
-    _refuse_sensitive(folder, facts)
+    refuse_sensitive(folder, facts)
     html = _write_memory(folder, facts) if is_memory(facts) else _write_range(folder, facts)
     file = folder / "report.html"
     part = file.with_name("report.html.part")
@@ -74,7 +74,7 @@ def _write_memory(folder: Path, facts: dict[str, Any]) -> str:
     return html
 
 
-def _refuse_sensitive(folder: Path, facts: dict[str, Any]) -> None:
+def refuse_sensitive(folder: Path, facts: dict[str, Any]) -> None:
     """Maps and figures hold exact places, and coarsening them is not built yet: better no report than a leak."""
     if facts.get("sensitive") not in (None, False, "", "no"):
         raise StudyError(

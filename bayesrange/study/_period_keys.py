@@ -13,6 +13,8 @@ def period_problems(s: StudySettings) -> Iterator[str]:
             yield (
                 f"[periods]: the name {ascii(name)[:60]} would not do for a folder; expected letters, digits, - and _."
             )
+        if name.casefold() == "differences":
+            yield f"[periods]: the name {name} is that of the folder with what lies between periods; choose another."
     plain = [name.casefold() for name in s.periods]
     if len(set(plain)) < len(plain):
         yield "[periods]: two names differ only by upper case; give them names that differ."
