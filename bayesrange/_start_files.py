@@ -37,7 +37,7 @@ group  = "group"               # not needed for tracks
 # flags = ["duplicate", "speed", "spike", "stationary", "outside"]
 
 [groups]                       # not needed for tracks
-file = "groups.csv"            # group,x,y,animals: home centre (empty: estimated), adults that mark (empty: 1)
+file = "groups.csv"            # group,x,y,animals: home centre (empty: estimated), adults that mark (empty: 1; or 3-5)
 
 # [animals]
 # file = "animals.csv"         # animal, and what is known of it: from, until, sex, release_batch, memory_start

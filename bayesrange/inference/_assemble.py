@@ -20,6 +20,7 @@ UNITS = {
     "resource": "per sd",
     "home_x": "m",
     "home_y": "m",
+    "animals": "animals",
 }
 """Unit of each parameter in posterior.nc and the tables."""
 
@@ -41,6 +42,8 @@ def parameter_dataset(spec: RangeSpec, sites: Sites) -> xr.Dataset:
         unit = UNITS.get(base, "1") if part in ("", "population") else "1"
         if name in ("home_x", "home_y"):
             variables[name] = (("home_group",), value * 1000, {"units": "m"})
+        elif name == "animals":
+            variables[name] = (("animals_group",), value, {"units": UNITS[name]})
         elif name == "group_correlation":  # sampled as its Cholesky factor
             correlation = value @ np.swapaxes(value, -1, -2)
             variables[name] = (("coefficient", "coefficient_2"), correlation, {"units": "1"})
@@ -52,7 +55,7 @@ def parameter_dataset(spec: RangeSpec, sites: Sites) -> xr.Dataset:
     known = {
         "layer": list(spec.layers), "group": list(spec.groups), "covariate": list(spec.covariates),
         "home_group": [spec.groups[i] for i in spec.estimated], "coefficient": _coefficients(spec),
-        "coefficient_2": _coefficients(spec),
+        "coefficient_2": _coefficients(spec), "animals_group": [spec.groups[i] for i in spec.counted],
     }  # fmt: skip
     coords = {dim: known[dim] for dim in used}
     leading = ("chain", "draw")
@@ -103,10 +106,13 @@ def build_tree(study: Study, spec: RangeSpec, derived: Derived, prior: Sites, we
             "layer_value": (("layer", "y", "x"), layers.reshape(-1, *grid.shape)),
             "home_x": ("group", np.where(known, groups["x"].to_numpy(float), np.nan)),
             "home_y": ("group", np.where(known, groups["y"].to_numpy(float), np.nan)),
-            "animals": ("group", groups["animals"].to_numpy(int)),
+            "animals": ("group", groups["animals"].to_numpy()),  # whole, or the middle of a range
         },
         {"group": list(spec.groups), "layer": list(spec.layers), **places},
     )  # fmt: skip
+    for column in ("animals_low", "animals_high"):
+        if column in groups:
+            constant[column] = ("group", groups[column].to_numpy(float))
     chain_draw = ("chain", "draw")
     use = xr.Dataset(
         {

@@ -15,6 +15,8 @@ from bayesrange.study import Study
 BUCKET = 256
 """Fixes are padded to a multiple of this, so that data sets of nearly the same size share one compiled program."""
 
+_NOT_COVARIATES = ("group", "x", "y", "animals_low", "animals_high")
+
 
 def make_spec(study: Study, card: Card) -> RangeSpec:
     """The static part, from a study and a card.
@@ -37,6 +39,7 @@ def make_spec(study: Study, card: Card) -> RangeSpec:
         raise StudyError(
             f'{where}: a group is called "new group", which is what the tables call one from the population; rename it.'
         )
+    coupled = card.scent and len(study.groups) > 1
     unknown_home = study.groups[["x", "y"]].isna().any(axis=1).to_numpy()
     names = card.parameters + (("over_marking",) if model.over_marking else ())
     return RangeSpec(
@@ -44,12 +47,13 @@ def make_spec(study: Study, card: Card) -> RangeSpec:
         families=tuple((name, card.priors[name].family) for name in names),
         varying=tuple(name for name in card.parameters if name in VARYING) if hierarchical else (),
         solver=card.solver,
-        coupled=card.scent and len(study.groups) > 1,
+        coupled=coupled,
         over_marking=model.over_marking,
         layers=study.model_layers if "resources" in card.terms else (),
         groups=tuple(study.groups["group"]),
         covariates=tuple(name for name, _ in code_covariates(study)),
         estimated=tuple(int(i) for i in np.flatnonzero(unknown_home)) if needs_home else (),
+        counted=uncertain_animals(study) if coupled else (),
     )
 
 
@@ -104,7 +108,7 @@ def code_covariates(study: Study) -> list[tuple[str, np.ndarray]]:
     """
     where, columns = f"{study.path.name}, [model] covariates", {}
     for name in study.settings.model.covariates:
-        if name not in study.groups.columns or name in ("group", "x", "y"):
+        if name not in study.groups.columns or name in _NOT_COVARIATES:
             raise StudyError(f"{where}: the groups table has no column {name!r} that could be a covariate.")
         columns[name] = study.groups[name]
     return code_columns(columns, list(study.groups["group"]), "group", where)
@@ -168,7 +172,17 @@ def make_data(study: Study, card: Card, spec: RangeSpec, scales: Scales, weight:
         covariates=np.stack(coded, axis=1) if coded else np.zeros((len(groups), 0)),
         effect_sd=np.asarray(card.covariate_effect.numbers[1]),
         centring=np.zeros((len(groups), spread_scale.size)),
+        animals=groups[["animals_low", "animals_high"]].to_numpy(float)[list(spec.counted)] if spec.counted else None,
+        a0=np.asarray(scales.a0_km2) if spec.counted else None,
     )
+
+
+def uncertain_animals(study: Study) -> tuple[int, ...]:
+    """Indices of the groups whose number of animals is a range."""
+    if "animals_low" not in study.groups:
+        return ()
+    wide = study.groups["animals_low"] < study.groups["animals_high"]
+    return tuple(int(i) for i in np.flatnonzero(wide.to_numpy()))
 
 
 def first_homes(study: Study) -> np.ndarray:

@@ -27,6 +27,7 @@ class RangeSpec:
         groups: names of the groups.
         covariates: names of the group covariates, after coding.
         estimated: indices of groups whose home centre is sampled.
+        counted: indices of groups whose number of animals is sampled.
     """
 
     parameters: tuple[str, ...]
@@ -39,6 +40,7 @@ class RangeSpec:
     groups: tuple[str, ...]
     covariates: tuple[str, ...]
     estimated: tuple[int, ...]
+    counted: tuple[int, ...] = ()
 
     def family(self, parameter: str) -> str:
         """Family of a parameter's prior."""
@@ -59,6 +61,8 @@ class RangeData(NamedTuple):
         covariates: coded covariates of each group, mean 0.
         effect_sd: prior sd of a covariate's coefficient.
         centring: share of centring of each group's coefficients (see `walk_coefficients`); 0 until the mode is known.
+        animals: least and largest number of animals of the groups `counted`; None if there are none.
+        a0: A₀ [km²], with `animals`.
     """
 
     setting: Setting
@@ -71,3 +75,5 @@ class RangeData(NamedTuple):
     covariates: Float[Array, "groups covariates"]
     effect_sd: Float[Array, ""]
     centring: Float[Array, "groups varying"]
+    animals: Float[Array, "counted 2"] | None = None
+    a0: Float[Array, ""] | None = None

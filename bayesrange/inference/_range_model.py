@@ -49,6 +49,7 @@ def sample_parameters(spec: RangeSpec, data: RangeData) -> Parameters:
         resource=jnp.broadcast_to(resource[:, None] if resource.ndim == 1 else resource, (len(spec.layers), groups)),
         over_marking=over_marking,
         home=_homes(spec, data),
+        marking=_marking(spec, data),
     )
 
 
@@ -100,6 +101,8 @@ class RangeModel:
             return jnp.clip(jnp.asarray(data.home)[jnp.array(self.spec.estimated), axis], low + margin, high - margin)
         if name == "over_marking":  # a wide prior has its centre where marks grow without bound
             return jnp.minimum(usual, MODEST_MARKING)
+        if name == "animals" and data.animals is not None:
+            return jnp.asarray(data.animals).mean(1)
         return usual
 
     def derive(self, parameters: Parameters, data: RangeData) -> tuple[dict[str, Array], dict[str, Array]]:
@@ -146,6 +149,15 @@ def _homes(spec: RangeSpec, data: RangeData) -> Float[Array, "groups 2"]:
     x = numpyro.sample("home_x", dist.Uniform(west, east).expand([count]).to_event(1))
     y = numpyro.sample("home_y", dist.Uniform(south, north).expand([count]).to_event(1))
     return jnp.asarray(data.home).at[index].set(jnp.stack([x, y], axis=1))
+
+
+def _marking(spec: RangeSpec, data: RangeData) -> Float[Array, " groups"] | None:
+    """n_i A₀ where some n_i is uncertain: uniform between its least and largest number, no whole one."""
+    if data.animals is None or data.a0 is None:
+        return None
+    low, high = jnp.asarray(data.animals).T
+    animals = numpyro.sample("animals", dist.Uniform(low, high).to_event(1))
+    return jnp.asarray(data.setting.marking).at[jnp.array(spec.counted)].set(animals * data.a0)
 
 
 def _by_group(layout: Layout, data: RangeData) -> dict[str, Array]:

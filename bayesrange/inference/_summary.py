@@ -54,6 +54,9 @@ def rows(spec: RangeSpec, scales: Scales, posterior: xr.Dataset, prior: xr.Datas
             found.append(
                 Row(f"{axis}[{group}]", "m", _values(posterior[axis].sel(pick)), _values(prior[axis].sel(pick)))
             )
+    for group in (spec.groups[i] for i in spec.counted):
+        own = [_values(data["animals"].sel({"animals_group": group})) for data in (posterior, prior)]
+        found.append(Row(f"animals[{group}]", UNITS["animals"], *own))
     return found
 
 

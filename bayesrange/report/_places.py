@@ -24,14 +24,13 @@ def area_rows(run: Contents, ranges: pd.DataFrame, hues: list[str]) -> dict[str,
         cells = [_area(mine.loc[isopleth], float(width[isopleth])) for isopleth in run.isopleths]
         last = mine.loc[run.isopleths[-1]]
         drawn = bar(last["area_km2_lower"], last["area_km2_median"], last["area_km2_upper"], None, axis)
-        animals = int(run.constant["animals"].values[at]) if "animals" in run.constant else None
         fixes = int((run.constant["group_of_fix"].values.astype(str) == group).sum())
         rows.append(
             {
                 "number": at + 1,
                 "group": group,
                 "hue": hues[at],
-                "animals": animals,
+                "animals": _animals(run, at),
                 "fixes": f"{fixes:,}",
                 "cells": cells,
                 "bar": drawn,
@@ -39,6 +38,15 @@ def area_rows(run: Contents, ranges: pd.DataFrame, hues: list[str]) -> dict[str,
             }
         )
     return {"isopleths": run.isopleths, "rows": rows, "axis": number(axis[1], axis[1] / 10)}
+
+
+def _animals(run: Contents, at: int) -> str | None:
+    """The number of marking animals, or its range."""
+    if "animals" not in run.constant:
+        return None
+    ends = ("animals_low", "animals_high") if "animals_low" in run.constant else ("animals",)
+    counts = {f"{run.constant[end].values[at]:g}": None for end in ends}
+    return "–".join(counts)
 
 
 def _area(row: pd.Series, width: float) -> dict[str, str]:

@@ -14,6 +14,7 @@ MEANINGS = {
     "over_marking": "extra marking per unit of foreign scent",
     "home_x": "home centre, easting",
     "home_y": "home centre, northing",
+    "animals": "number of marking animals, which was given as a range",
 }
 
 COUNTS = {

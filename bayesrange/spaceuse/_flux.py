@@ -22,7 +22,7 @@ from bayesrange.spaceuse._scent import foreign_scent
 from bayesrange.spaceuse._solution import NO_STEADY_SCENT, NOT_FINITE, TOO_STEEP, Solution, result_code
 from bayesrange.spaceuse._sparse import Linear, choose, five_point, pinned_values
 from bayesrange.spaceuse._special import STEEPEST
-from bayesrange.spaceuse._terms import Parameters, Setting
+from bayesrange.spaceuse._terms import Parameters, Setting, as_marked
 
 ROUNDS = 5
 """Factors made before a solve is given up; over the prior 3 were needed, 4 from groups without neighbours."""
@@ -64,6 +64,7 @@ def flux(
     """
     if start not in STARTS:
         raise ValueError(f"`start` must be one of {', '.join(STARTS)}, got {start!r}.")
+    setting = as_marked(parameters, setting)
     domain, theta = setting.domain, (parameters, setting)
     coupled = coupled and setting.marking.shape[0] > 1
     log_density, found = _log_density(theta, choose(linear), coupled, start)

@@ -11,7 +11,7 @@ from jaxtyping import Array, Float
 from bayesrange.spaceuse._fixed_point import TOLERANCE, implicit_fixed_point
 from bayesrange.spaceuse._scent import foreign_scent
 from bayesrange.spaceuse._solution import Solution, result_code
-from bayesrange.spaceuse._terms import Parameters, Setting, solitary_potential
+from bayesrange.spaceuse._terms import Parameters, Setting, as_marked, solitary_potential
 
 
 def gibbs(
@@ -32,7 +32,7 @@ def gibbs(
     Returns:
         The solution; differentiable in `parameters` once (reverse mode).
     """
-    domain = setting.domain
+    domain, setting = setting.domain, as_marked(parameters, setting)
     shape = setting.marking.shape + domain.area.shape
     theta = (solitary_potential(parameters, setting), parameters.avoidance, parameters.over_marking, setting)
     if not coupled or shape[0] == 1:

@@ -7,7 +7,7 @@ from jaxtyping import Array, Float
 
 from bayesrange.spaceuse._gibbs import gibbs
 from bayesrange.spaceuse._scent import perceive
-from bayesrange.spaceuse._terms import Parameters, Setting
+from bayesrange.spaceuse._terms import Parameters, Setting, as_marked
 
 
 def arrival_scent(parameters: Parameters, setting: Setting, order: Sequence[int]) -> Float[Array, "groups ny nx"]:
@@ -24,7 +24,7 @@ def arrival_scent(parameters: Parameters, setting: Setting, order: Sequence[int]
     Returns:
         F̃ to begin from [1].
     """
-    domain = setting.domain
+    domain, setting = setting.domain, as_marked(parameters, setting)
     laid = jnp.zeros(domain.area.shape)
     scent = [laid] * len(order)
     for i in order:

@@ -23,6 +23,7 @@ class Parameters(NamedTuple):
         resource: γ, movement up the gradient of each layer [per sd].
         over_marking: m, extra marking per unit foreign scent [1].
         home: home centres, x and y [km].
+        marking: n_i A₀ where the number of animals is sampled [km²]; None: as the setting has it.
     """
 
     localising: Float[Array, " groups"]
@@ -31,6 +32,7 @@ class Parameters(NamedTuple):
     resource: Float[Array, "layers groups"]
     over_marking: Float[Array, ""]
     home: Float[Array, "groups 2"]
+    marking: Float[Array, " groups"] | None = None
 
 
 class Setting(NamedTuple):
@@ -47,6 +49,11 @@ class Setting(NamedTuple):
     layers: Float[Array, "layers ny nx"]
     marking: Float[Array, " groups"]
     softening: Float[Array, ""]
+
+
+def as_marked(parameters: Parameters, setting: Setting) -> Setting:
+    """The setting with the marking that the parameters have, if they have any."""
+    return setting if parameters.marking is None else setting._replace(marking=parameters.marking)
 
 
 def home_distance(home: Float[Array, "groups 2"], setting: Setting) -> Float[Array, "groups ny nx"]:

@@ -6,6 +6,7 @@ import numpy as np
 import pandas as pd
 
 from bayesrange._errors import StudyError
+from bayesrange.study._marking_animals import count_animals
 from bayesrange.study._moments import bounds
 from bayesrange.study._periods import Span
 from bayesrange.study._tables import column_or_error, counted, first_few, numbers, one_name_each, read_table
@@ -26,8 +27,9 @@ def read_groups(
         zone: of the study's clock.
 
     Returns:
-        Columns group, x, y [as written; NaN = to be estimated], animals, then every further column: numbers where
-        all its cells are numbers, else text.
+        Columns group, x, y [as written; NaN = to be estimated], animals (and where a number is uncertain also
+        animals_low and animals_high, see `count_animals`), then every further column: numbers where all its cells are
+        numbers, else text.
 
     Raises:
         StudyError: names file, line and column of what is wrong.
@@ -54,9 +56,9 @@ def read_groups(
             f"{name}, line {table.index[half][0]}: one coordinate of the home centre is blank; "
             "give both, or blank both to have it estimated."
         )
-    animals, said = _animals(table, name)
-    groups = pd.DataFrame({"group": group.to_numpy(), "x": x, "y": y, "animals": animals}).astype({"group": "str"})
-    for column in table.columns.difference(_OWN, sort=False):
+    counts, said = count_animals(table, name)
+    groups = pd.DataFrame({"group": group.to_numpy(), "x": x, "y": y, **counts}).astype({"group": "str"})
+    for column in table.columns.difference([*_OWN, *counts], sort=False):
         groups[column] = _covariate(table[column], name, wanted=column in covariates)
     for column in covariates:
         if column not in groups.columns or column in _OWN:
@@ -132,26 +134,11 @@ def _remarks(fixes: pd.DataFrame, groups: pd.DataFrame) -> list[str]:
     for animal in per_animal.index[per_animal > 1]:
         said.append(f'The animal "{animal}" has fixes in more than one group.')
     tracked = fixes.groupby("group")["animal"].nunique()
-    for group, animals in zip(groups["group"], groups["animals"], strict=True):
+    for group, animals in zip(groups["group"], groups.get("animals_high", groups["animals"]), strict=True):
         if tracked.get(group, 0) > animals:
-            said.append(f'The group "{group}" counts {animals} animals, but {tracked[group]} have fixes.')
+            most = "at most " if "animals_high" in groups else ""
+            said.append(f'The group "{group}" counts {most}{animals:g} animals, but {tracked[group]} have fixes.')
     return said
-
-
-def _animals(table: pd.DataFrame, name: str) -> tuple[np.ndarray, list[str]]:
-    if "animals" not in table.columns:
-        return np.ones(len(table), dtype=np.int64), [f"{name}: no column animals; each group counts 1 animal."]
-    texts = table["animals"]
-    counts = numbers(texts, name, blank=1.0)
-    bad = (counts < 1) | (counts != np.round(counts))
-    if bad.any():
-        raise StudyError(
-            f'{name}, line {table.index[bad][0]}, column "animals": expected a whole number of at least 1, '
-            f'got "{texts[bad].iloc[0]}".'
-        )
-    blank = table["group"][(texts == "").to_numpy()]
-    said = [f"{name}: the number of animals is blank and counts 1 for {', '.join(blank)}."] if len(blank) else []
-    return counts.astype(np.int64), said
 
 
 def _covariate(texts: pd.Series, name: str, wanted: bool) -> pd.Series:

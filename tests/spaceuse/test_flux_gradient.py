@@ -68,8 +68,8 @@ def test_gradient_of_every_parameter_is_the_difference_of_solutions(avoidance, r
     for i in range(flat.size):
         at = [float(both(unravel(flat.at[i].add(k * STEP)))[0][0]) for k in (-2, -1, 1, 2)]
         differences[i] = (at[0] - 8 * at[1] + 8 * at[2] - at[3]) / (12 * STEP)
-    names = np.concatenate([[name] * part.size for name, part in parameters._asdict().items()])
-    for kind in parameters._fields:
+    names = np.concatenate([[name] * part.size for name, part in parameters._asdict().items() if part is not None])
+    for kind in dict.fromkeys(names.tolist()):
         own = names == kind
         scale = np.abs(differences[own]).max()
         assert scale > 0.1, f"{kind} does not matter here, so that its gradient is not tested"

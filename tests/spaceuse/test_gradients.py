@@ -23,7 +23,7 @@ def steep_setting():
 
 def free(parameters: Parameters) -> dict:
     """The parameters that `gibbs` knows; `retreat` is none of them."""
-    return {name: value for name, value in parameters._asdict().items() if name != "retreat"}
+    return {name: value for name, value in parameters._asdict().items() if name not in ("retreat", "marking")}
 
 
 @pytest.fixture(scope="module")

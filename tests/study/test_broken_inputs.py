@@ -222,6 +222,13 @@ GROUPS = {
         'groups.csv, line 3, column "animals": expected a whole number of at least 1',
     ),
     "no animal": (1, "animals", 0, 'expected a whole number of at least 1, got "0"'),
+    "none to some": (1, "animals", "0-2", 'expected a whole number of at least 1, got "0-2"'),
+    "from more to less": (1, "animals", "5-3", 'got "5-3"; a number that is uncertain is written as a range such as'),
+    "half a range": (1, "animals", "3-", 'got "3-"; a number that is uncertain is written as a range such as 3-5.'),
+    "less than none": (1, "animals", "-3", 'column "animals": expected a whole number of at least 1, got "-3"'),
+    "parts of animals": (1, "animals", "2.5-3.5", 'expected a whole number of at least 1, got "2.5-3.5"'),
+    "a date": (1, "animals", "3. May", "such as 3-5 (a spreadsheet may have made a date of it: format the column"),
+    "a word": (1, "animals", "some", 'column "animals": expected a number, got "some"'),
 }
 
 
