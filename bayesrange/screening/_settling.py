@@ -12,7 +12,7 @@ import pandas as pd
 from jaxtyping import Float
 from numpy.typing import NDArray
 
-MOST_BINS, _FIXES_A_BIN, FEWEST_BINS = 100, 3, 12
+MOST_BINS, _FIXES_A_BIN, FEWEST_BINS = 100, 3, 20
 _CLEAR = 0.7  # share of the variance that a shape must explain before it is believed
 _FAINT, _NOISE = 0.35, 3.0  # enough if the rise is three times the spread about it: a short move before a long stay
 _RETURN = 0.12  # more of it that a return must explain beyond a move
@@ -103,7 +103,7 @@ def _line(at: Float[NDArray, " bins"], nsd: Float[NDArray, " bins"]) -> _Fit:
 
 def _best_rise(at: Float[NDArray, " bins"], nsd: Float[NDArray, " bins"]) -> _Fit:
     """The best of all rises to a plateau: logistic, or exponential from the start."""
-    middle = np.linspace(0.01, 0.97, 65)
+    middle = np.linspace(0.01, 0.92, 62)
     widths = np.array(_WIDTHS)
     theta, phi = (grid.ravel() for grid in np.meshgrid(middle, widths))
     speed = np.geomspace(0.005, 0.4, 24)
@@ -120,7 +120,7 @@ def _best_rise(at: Float[NDArray, " bins"], nsd: Float[NDArray, " bins"]) -> _Fi
 def _best_return(at: Float[NDArray, " bins"], nsd: Float[NDArray, " bins"]) -> _Fit:
     """The best way out and back: two logistic steps of one width, each with its own height."""
     times = np.linspace(0.03, 0.97, 32)
-    i, j = np.triu_indices(len(times), 2)
+    i, j = np.triu_indices(len(times), 5)  # away for a seventh of the record: no single bin is a journey
     best: _Fit | None = None
     for phi in _WIDTHS[1::2]:
         steps = _logistic(at, times, np.full(len(times), phi))

@@ -67,3 +67,9 @@ def test_few_fixes_give_no_verdict(n):
 
 def test_an_animal_that_never_moved_is_settled():
     assert settling(times(N), np.zeros((N, 2))).verdict == "settled"
+
+
+@pytest.mark.parametrize(("n", "hours", "tau_h"), [(60, 6.0, 1.0), (150, 6.0, 12.0), (300, 4.0, 12.0)])
+def test_few_fixes_seldom_make_a_journey_by_chance(n, hours, tau_h):
+    found = [settling(times(n, hours), wandering(n, hours, tau_h, seed=s) / 1000).verdict for s in range(100)]
+    assert found.count("settled") >= 97  # seen: at most 1 of 100
