@@ -237,12 +237,16 @@ def _table_input(plan: MemoryPlan, study: Study) -> TableInput:
 
 
 def _decays(plan: MemoryPlan) -> tuple[float, float] | None:
-    """Shortest and longest decay time that the priors leave open [h]."""
+    """Shortest and longest decay time that the priors leave open, for the animal of the oddest covariates [h]."""
     if not plan.spec.remembers:
         return None
     least = plan.scales.interval_h / 2
     layout = animal_layout(plan.spec)
-    between = {name: float(plan.spread_scale[layout.rows[name]][0]) if layout else 0.0 for name in EXCESS.values()}
+    farthest = np.sqrt((plan.covariates**2).sum(1)).max(initial=0.0) if layout else 0.0
+    between = {
+        name: float(np.hypot(plan.spread_scale[layout.rows[name]][0], plan.effect_sd * farthest)) if layout else 0.0
+        for name in EXCESS.values()
+    }
     return least, least + sum(upper_end(plan.priors[name], between[name]) for name in EXCESS.values())
 
 
@@ -273,7 +277,7 @@ def _check_card(study: Study, card: Card) -> None:
         raise StudyError(
             f'{where}, [model] pooling: memory cards take "individual" or "hierarchical"; "shared" is for range cards.'
         )
-    remembers, selects = "memory" in card.terms, "resources" in card.terms
+    selects = "resources" in card.terms
     for key, given, needs in (
         ("perception_m", model.perception_m is not None, "a range card"),
         ("over_marking", model.over_marking, "a range card"),
@@ -283,8 +287,6 @@ def _check_card(study: Study, card: Card) -> None:
             "autocorrelation" in model.model_fields_set,
             "a range card: steps follow one another anyway",
         ),
-        ("encoding_range_m", model.encoding_range_m is not None and not remembers, "a card with memory"),
-        ("memory_start", model.memory_start == "learned" and not remembers, "a card with memory"),
     ):
         if given:
             raise StudyError(f"{where}, [model] {key}: {card.name} has no use for it; it is for {needs}: take it out.")
@@ -310,6 +312,13 @@ def _check_card(study: Study, card: Card) -> None:
                 f"{'encoding_range_m = "estimate"' if name == 'encoding_range' else 'vary = ["step_length"]'} in "
                 "[model], or take the prior out."
             )
+
+
+def said_of_unused(study: Study, card: Card) -> list[str]:
+    """Keys that a card without memory leaves aside, so that a null takes the same study file as the card it is for."""
+    if "memory" in card.terms or study.settings.model.encoding_range_m is None:
+        return []
+    return [f"[model] encoding_range_m has no use for the card {card.name} and is left aside."]
 
 
 def _pooled(study: Study, tracks: Tracks) -> bool:

@@ -21,6 +21,9 @@ from bayesrange.study import Study, Weights, autocorrelation_weights
 Made = tuple[list[Data], list[Any], dict[str, Any]]
 """Data and extra of each task, and facts for run.json that came up on the way."""
 
+TARGET_ACCEPT = {"range": 0.9, "memory": 0.8}
+"""Where the study file gives none: a steady state has rougher corners than the likelihood of steps."""
+
 
 @dataclass
 class Prepared:
@@ -62,6 +65,11 @@ class Prepared:
         chosen = {} if self.study.period is None else {"the period": self.study.period}
         return self.inputs | chosen | {f"the version of {name}": number for name, number in versions.items()}
 
+    @property
+    def target_accept(self) -> float:
+        """Target of the step size adaptation."""
+        return self.study.settings.sampling.target_accept or TARGET_ACCEPT[self.card.kind]
+
     def make_tasks(self) -> tuple[list[Task], dict[str, Any]]:
         """The workers' tasks, and facts for run.json."""
         sampling = self.study.settings.sampling
@@ -69,7 +77,7 @@ class Prepared:
         tasks = [
             Task(
                 spec, numbers, sampling.chains, sampling.warmup, sampling.draws, sampling.seed,
-                sampling.target_accept, self.fingerprint, label, extra,
+                self.target_accept, self.fingerprint, label, extra,
             )
             for spec, numbers, label, extra in zip(self.specs, data, self.labels, extras, strict=True)
         ]  # fmt: skip
@@ -116,7 +124,7 @@ def _range(study: Study, card: Card, inputs: dict[str, str]) -> Prepared:
 
 
 def _memory(study: Study, card: Card, inputs: dict[str, str]) -> Prepared:
-    from bayesrange.inference._memory_build import make_plan, make_tables, specs_of
+    from bayesrange.inference._memory_build import make_plan, make_tables, said_of_unused, specs_of
 
     plan = make_plan(study, card)
 
@@ -132,5 +140,5 @@ def _memory(study: Study, card: Card, inputs: dict[str, str]) -> Prepared:
 
     labels = [""] if plan.spec.pooled else list(plan.spec.animals)
     specs: list[Spec] = list(specs_of(plan))
-    warnings = list(study.warnings) + plan.tracks.warnings
+    warnings = list(study.warnings) + said_of_unused(study, card) + plan.tracks.warnings
     return Prepared(study, card, specs, labels, plan.scales, inputs, make, plan=plan, warnings=warnings)

@@ -103,7 +103,7 @@ def _range_facts(prepared: Prepared, effective: float) -> dict[str, Any]:
     reasons = {name: prior.reason for name, prior in priors.items()}
     return {
         "card": card_facts(prepared, study.settings.model.pooling or "shared", words, reasons),
-        "reading": study.settings.model.reading,
+        "reading": study.settings.model.reading, "detection": study.settings.fixes.detection,
         "effective": {
             "fixes": count, "effective": effective, "sentence": sentence, "animals": animals,
             "autocorrelation": study.settings.model.autocorrelation,
@@ -132,7 +132,7 @@ def _common(prepared: Prepared, diagnostics: Diagnostics, times: dict[str, float
         "card": {}, "scales": prepared.scales.as_json(), "reading": "bilinear",
         "sampling": {
             "chains": sampling.chains, "warmup": sampling.warmup, "draws": sampling.draws, "seed": sampling.seed,
-            "target_accept": sampling.target_accept,
+            "target_accept": prepared.target_accept,
         },
         "versions": {"bayesrange": bayesrange.__version__, **{name: version(name) for name in LIBRARIES}},
         "finished": datetime.now(UTC).isoformat(timespec="seconds"), "times": times, "worker_gib": worker_gib,
