@@ -37,7 +37,7 @@ def memory_results(
     plan: MemoryPlan = prepared.plan
     spec, study = plan.spec, prepared.study
     least = plan.scales.interval_h / 2
-    posterior = parameter_dataset(spec, _joined(derived), least)
+    posterior = parameter_dataset(spec, _joined(derived, spec), least)
     before = parameter_dataset(spec, _spread_out(prior, spec), least)
     tree = _tree(study, plan, tasks, derived, posterior, before)
     found = memory_rows(spec, plan.scales, posterior, before, least, tasks[0].seed)
@@ -117,27 +117,35 @@ def quadrature_shifts(found: list[Row], spec: MemorySpec, derived: list[Derived]
     return shifts
 
 
-def _joined(derived: list[Derived]) -> Sites:
+_ONE_A_FIT = ("step_rhythm", "encoding_range", "log_encoding_range")
+"""Sites without an axis of animals."""
+
+
+def _joined(derived: list[Derived], spec: MemorySpec) -> Sites:
     """Sites of every task, animals side by side on the last axis."""
-    if len(derived) == 1:
+    if spec.pooled:
         return derived[0].sites
-    return {name: np.concatenate([one.sites[name] for one in derived], axis=-1) for name in derived[0].sites}
+    sites = {}
+    for name in derived[0].sites:
+        parts = [one.sites[name] for one in derived]
+        sites[name] = np.stack(parts, axis=-1) if name in _ONE_A_FIT else np.concatenate(parts, axis=-1)
+    return sites
 
 
 def _spread_out(prior: Sites, spec: MemorySpec) -> Sites:
     """Prior draws with a chain axis, the same for every animal where each is fitted alone."""
     if spec.pooled:
         return {name: value[None] for name, value in prior.items()}
-    return {name: np.repeat(value[None], len(spec.animals), axis=-1) for name, value in prior.items()}
+    own = {name: value[..., None] if name in _ONE_A_FIT else value for name, value in prior.items()}
+    return {name: np.repeat(value[None], len(spec.animals), axis=-1) for name, value in own.items()}
 
 
 def _dims(spec: MemorySpec, name: str, part: str, value: np.ndarray) -> tuple[tuple[str, ...], np.ndarray]:
+    by_animal = () if spec.pooled else ("animal",)
     if name == "step_rhythm":
-        return ("harmonic",), value
+        return ("harmonic", *by_animal), value
     if name in ("recall_half", "encoding_range"):
-        if name == "recall_half" and not spec.pooled:
-            return ("animal",), value
-        return ((), value) if value.ndim == 2 else (("animal",), value)
+        return by_animal, value
     layered = ("layer",) if name == "selection" else ()
     own: dict[str, tuple[str, ...]] = {"": ("animal",), "population": (), "spread": (), "effect": ("covariate",)}
     if not layered and part in ("spread", "effect"):
@@ -209,7 +217,7 @@ def _constant(study: Study, plan: MemoryPlan, animals: list[Any]) -> xr.Dataset:
     return xr.Dataset(
         {
             "animal_of_step": ("step", joined(lambda one: [one.name] * one.steps.time.size).astype(str)),
-            "time": ("step", origin.to_datetime64() + (hours * 3600e9).astype("timedelta64[ns]")),
+            "time": ("step", origin.to_datetime64() + np.rint(hours * 3600e9).astype("timedelta64[ns]")),
             "length_m": ("step", joined(lambda one: one.steps.length) * 1000),
             "turn": ("step", np.where(turn_known, joined(lambda one: one.steps.turn), np.nan)),
             "kind": ("step", kind.astype(str)),

@@ -108,18 +108,24 @@ def _of_parameter(
 def _new(name: str, data: xr.Dataset, pick: dict[str, str], least_decay: float, rng: np.random.Generator) -> np.ndarray:
     """Draws of an animal that was not tracked, at covariates 0; decay times through their excesses."""
 
-    def drawn(centre: np.ndarray, of: str) -> np.ndarray:
+    def noise() -> np.ndarray:
+        return rng.standard_normal(np.shape(centre))
+
+    def drawn(centre: np.ndarray, of: str, noise: np.ndarray) -> np.ndarray:
         spread = np.asarray(data[f"{of}_spread"].sel(pick if of == "selection" else {}).values, float)
-        noise = spread * rng.standard_normal(centre.shape)
-        return centre + noise if of in SIGNED else centre * np.exp(noise)
+        return centre + spread * noise if of in SIGNED else centre * np.exp(spread * noise)
 
     centre = np.asarray(data[f"{name}_population"].sel(pick).values, float)
     if name == "working_decay":
-        return least_decay + drawn(centre - least_decay, name)
+        return least_decay + drawn(centre - least_decay, name, noise())
     if name == "reference_decay":
-        working = np.asarray(data["working_decay_population"].values, float)
-        return least_decay + drawn(working - least_decay, "working_decay") + drawn(centre - working, name)
-    return drawn(centre, name)
+        working, first = np.asarray(data["working_decay_population"].values, float), noise()
+        both = {"coefficient": "working_decay", "coefficient_2": "reference_decay"}
+        r = np.asarray(data["animal_correlation"].sel(both).values, float)
+        second = r * first + np.sqrt(np.maximum(1 - r**2, 0)) * noise()
+        excess = drawn(centre - working, name, second)
+        return least_decay + drawn(working - least_decay, "working_decay", first) + excess
+    return drawn(centre, name, noise())
 
 
 def _pair(sets: tuple[xr.Dataset, xr.Dataset], variable: str, **at: str) -> tuple[np.ndarray, np.ndarray]:

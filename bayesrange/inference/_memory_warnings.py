@@ -8,7 +8,7 @@ import xarray as xr
 from scipy import stats
 
 from bayesrange.inference._memory_build import MemoryPlan
-from bayesrange.inference._memory_study import AnimalTrack
+from bayesrange.inference._memory_study import SIMULTANEOUS, AnimalTrack
 
 MOST_SHIFT = 0.1
 """Shift by the quadrature that is let pass [posterior sd]."""
@@ -33,11 +33,11 @@ def step_autocorrelation(plan: MemoryPlan, posterior: xr.Dataset) -> dict[str, d
         scale = float(own["step_scale"].mean()) / 1000
         waves = rhythm if rhythm.ndim == 1 else rhythm[:, list(plan.spec.animals).index(one.name)]
         residual = _residuals(one, shape, scale, waves, plan.scales.shortest_step_m / 1000)
-        slot = np.round(one.steps.time / plan.tracks.interval_h).astype(int)
-        lags = {"lag_1": 1}
+        lags = {"lag_1": plan.tracks.interval_h}
         if plan.tracks.interval_h <= 6:
-            lags["day"] = int(round(24 / plan.tracks.interval_h))
-        figures = {name: _correlation(residual, slot, lag) for name, lag in lags.items()}
+            lags["day"] = 24.0
+        near = SIMULTANEOUS * plan.tracks.interval_h
+        figures = {name: _correlation(residual, one.steps.time, lag, near) for name, lag in lags.items()}
         found[one.name] = {name: figure for name, figure in figures.items() if figure is not None}
     return found
 
@@ -52,8 +52,15 @@ def _residuals(one: AnimalTrack, shape: float, scale: float, waves: np.ndarray, 
     return stats.norm.ppf(np.clip(share, 1e-6, 1 - 1e-6))
 
 
-def _correlation(residual: np.ndarray, slot: np.ndarray, lag: int) -> float | None:
-    _, first, second = np.intersect1d(slot + lag, slot, return_indices=True)
+def _correlation(residual: np.ndarray, time: np.ndarray, lag: float, near: float) -> float | None:
+    """Correlation of steps `lag` apart, give or take `near` [h]."""
+    if time.size < 2:
+        return None
+    after = np.searchsorted(time, time + lag).clip(1, time.size - 1)
+    sooner = (time + lag) - time[after - 1] < time[after] - (time + lag)
+    second = np.where(sooner, after - 1, after)
+    first = np.flatnonzero(np.abs(time[second] - time - lag) <= near)
+    second = second[first]
     if first.size < FEWEST_PAIRS or residual[first].std() == 0 or residual[second].std() == 0:
         return None
     return float(np.corrcoef(residual[first], residual[second])[0, 1])
