@@ -160,7 +160,7 @@ def test_defaults_are_filled_in_and_a_named_default_is_fine(folder):
     settings = read_settings(folder.write())
     assert (settings.sampling.chains, settings.sampling.warmup, settings.sampling.draws) == (2, 500, 500)
     assert (settings.model.pooling, settings.model.autocorrelation, settings.model.reading) == (
-        "shared", "weighted", "bilinear",
+        None, "weighted", "bilinear",
     )  # fmt: skip
 
 
