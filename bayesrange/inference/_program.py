@@ -98,6 +98,11 @@ class Program:
         """Negative log posterior density on the unconstrained space."""
         return potential_energy(self.model, (data,), {}, self._unravel(z))
 
+    @cached_property
+    def prior_gradient(self) -> Callable[..., Array]:
+        """(z, data) → gradient of the prior's potential alone."""
+        return jax.jit(jax.grad(lambda z, data: potential_energy(self.prior, (data,), {}, self._unravel(z))))
+
     def potential_in_w(self, data: Data, whitening: Whitening) -> Callable[[dict[str, Array]], Array]:
         """Log-density in the sampler's coordinates, as NumPyro's kernel wants it."""
         return lambda w: self.potential(whitening.mode + whitening.scale @ w["w"], data)

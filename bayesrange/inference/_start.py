@@ -30,25 +30,45 @@ class Start(NamedTuple):
     evaluations: int
 
 
-def whitening_scale(curvature: np.ndarray, apart: np.ndarray) -> np.ndarray:
+def whitening_scale(curvature: np.ndarray, apart: np.ndarray, prior: np.ndarray | None = None) -> np.ndarray:
     """Factor L of the sampler's coordinates z = mode + L w, from the curvature.
 
-    L Lᵀ is the inverse curvature; directions flatter than `FLATTEST` count as that flat. Spreads and correlations of a
-    hierarchy stand apart: the curvature at one spread says little about another, so that they get a scale of their
-    own and no correlation with the rest.
+    L Lᵀ is the inverse curvature; directions flatter than `FLATTEST` count as that flat, or, where the prior's own
+    curvature is given, those flatter than the prior as flat as the prior. Spreads and correlations of a hierarchy stand
+    apart: the curvature at one spread says little about another, so that they get a scale of their own and no
+    correlation with the rest.
 
     Args:
         curvature: second derivatives of the potential.
         apart: True for the coordinates that stand apart.
+        prior: second derivatives of the prior's potential.
     """
     scale = np.zeros_like(curvature)
     rest = np.flatnonzero(~apart)
-    values, vectors = np.linalg.eigh(curvature[np.ix_(rest, rest)])
-    covariance = (vectors / np.maximum(np.abs(values), FLATTEST)) @ vectors.T
+    own = curvature[np.ix_(rest, rest)]
+    covariance = _inverse(own) if prior is None else _inverse_within(own, prior[np.ix_(rest, rest)])
     scale[np.ix_(rest, rest)] = np.linalg.cholesky(covariance)
     own = np.flatnonzero(apart)
     scale[own, own] = np.clip(1 / np.sqrt(np.maximum(curvature[own, own], 1e-12)), *APART)
     return scale
+
+
+def _inverse(curvature: np.ndarray) -> np.ndarray:
+    values, vectors = np.linalg.eigh(curvature)
+    return (vectors / np.maximum(np.abs(values), FLATTEST)) @ vectors.T
+
+
+def _inverse_within(curvature: np.ndarray, prior: np.ndarray) -> np.ndarray:
+    """Inverse curvature, no wider than the prior in any direction.
+
+    A likelihood that curves the wrong way at the mode, as one of decay times does, would cancel the prior's curvature
+    and make a direction look many times wider than it can be; one such direction sets the step size of all.
+    """
+    values, vectors = np.linalg.eigh(prior)
+    root = vectors / np.sqrt(np.maximum(values, FLATTEST))  # columns: the prior's own axes, one prior sd long
+    values, vectors = np.linalg.eigh(root.T @ curvature @ root)
+    axes = root @ vectors
+    return (axes / np.maximum(values, 1.0)) @ axes.T
 
 
 ValueAndGradient = Callable[[np.ndarray], tuple[float, np.ndarray]]

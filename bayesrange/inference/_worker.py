@@ -58,7 +58,7 @@ def _start(folder: Path) -> None:
     if program.layout is not None:
         mode, data = program.centred(start.mode, start.curvature, data)
         start = start._replace(mode=mode, curvature=curvature_at(density, mode))
-    scale = whitening_scale(start.curvature, program.apart())
+    scale = whitening_scale(start.curvature, program.apart(), _prior_curvature(program, task, start.mode, data))
     times = []
     for _ in range(5):
         begun = time.perf_counter()
@@ -81,6 +81,18 @@ def _start(folder: Path) -> None:
         peak_gib=_peak_gib(),
         dimension=program.dimension,
     )
+
+
+def _prior_curvature(program: Any, task: Any, mode: Any, data: Any) -> Any:
+    """Curvature of the prior, for the models whose likelihood may curve the wrong way; None for steady states."""
+    import jax.numpy as jnp
+
+    from bayesrange.inference._memory_data import MemorySpec
+    from bayesrange.inference._start import curvature_at
+
+    if not isinstance(task.spec, MemorySpec):
+        return None
+    return curvature_at(lambda z: (0.0, program.prior_gradient(jnp.asarray(z), data)), mode)
 
 
 def _chain(folder: Path, chain: int) -> int:
