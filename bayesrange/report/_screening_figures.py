@@ -5,13 +5,15 @@ import math
 import numpy as np
 import pandas as pd
 from matplotlib.axes import Axes
-from matplotlib.collections import LineCollection
+from matplotlib.collections import LineCollection, PatchCollection
+from matplotlib.colors import Normalize
 from matplotlib.dates import AutoDateLocator, ConciseDateFormatter
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
+from matplotlib.patches import Rectangle
 from matplotlib.ticker import MaxNLocator, NullFormatter, PercentFormatter, StrMethodFormatter
 
-from bayesrange.report._drawing import HUES, INK, Picture, our_style, picture, scale_bar, shape, short
+from bayesrange.report._drawing import HUES, INK, LAYER, Picture, our_style, picture, scale_bar, shape, short
 from bayesrange.screening import Screening, Settling
 
 _WIDTH_IN = 11.0
@@ -26,6 +28,7 @@ MARKS = {
 }
 """Marker, colour and size of the flags that are drawn on the map, the lowest first."""
 
+_FEWEST_TRIES, _FEWEST_FAILED = 10, 20
 _MOST_POINTS, _MOST_LINES = 60_000, 15_000
 MOST_ANIMALS, _MOST_TRACKS = 60, 24
 
@@ -236,6 +239,44 @@ def _rhythms(axes: Axes, found: Screening) -> None:
     axes.set_xlabel("lag [h]")
     axes.set_ylabel("autocorrelation")
     axes.set_title("Rhythm of step lengths")
+
+
+def success_map(found: Screening) -> Picture | None:
+    """Where fixes fail: share of attempts that gave a position, by squares; None where hardly any failed."""
+    table = found.by_square[found.by_square["fixes"] + found.by_square["failed"] >= _FEWEST_TRIES]
+    if int(table["failed"].sum()) < _FEWEST_FAILED:
+        return None
+    side = float(table["side_m"].iloc[0]) / 1e3
+    with our_style():
+        west, south, east, north = _frame(found)
+        wide = 0.5 * _WIDTH_IN
+        tall = min(max((wide - 1.2) * (north - south) / (east - west), 2.2), 6.5)
+        figure = Figure(figsize=(wide, tall + 0.6), layout="constrained")
+        axes = figure.subplots()
+        axes.set_aspect("equal")
+        axes.set_xlim(west, east)
+        axes.set_ylim(south, north)
+        if found.study.area is not None:
+            shape(axes, found.study.area, facecolor="#f6f7f7", edgecolor="#6d777c", linewidth=1.0, zorder=1)
+        low = max(0.0, np.floor(10 * float(table["success"].min())) / 10)
+        squares = [
+            Rectangle((x / 1e3 - side / 2, y / 1e3 - side / 2), side, side) for x, y in zip(table["x"], table["y"])
+        ]
+        drawn = PatchCollection(squares, cmap=LAYER, norm=Normalize(min(low, 0.9), 1.0), linewidths=0, zorder=2)
+        drawn.set_array(table["success"].to_numpy(dtype=float))
+        axes.add_collection(drawn)
+        bar = figure.colorbar(drawn, ax=axes, shrink=0.8, format=PercentFormatter(1.0))
+        bar.set_label("fix success")
+        axes.xaxis.set_major_locator(MaxNLocator(4, steps=[1, 2, 5, 10]))
+        axes.yaxis.set_major_locator(MaxNLocator(4, steps=[1, 2, 5, 10]))
+        axes.set_xlabel("easting [km]")
+        axes.set_ylabel("northing [km]")
+        axes.set_title("Where fixes fail")
+        caption = (
+            f"Share of attempts that gave a position, in squares of {side:g} km with at least {_FEWEST_TRIES} attempts"
+            ". Failed fixes are put on the line between the fixes before and after them."
+        )
+        return picture(figure, f"Map of fix success in {len(table)} squares.", caption)
 
 
 def _hours(hours: float) -> str:

@@ -9,7 +9,7 @@ import pandas as pd
 
 from bayesrange.report._format import percent, whole
 from bayesrange.report._page import render
-from bayesrange.report._screening_figures import calendar, displacements, overview, rates
+from bayesrange.report._screening_figures import calendar, displacements, overview, rates, success_map
 from bayesrange.screening import FEWEST, TOGETHER, Carried, Screening
 from bayesrange.study import DROPPABLE, FLAGS
 
@@ -19,7 +19,8 @@ _MOST_PAIRS, _MOST_PERIODS = 10, 14
 def screening_page(found: Screening, cards: Iterable[Carried], today: date) -> str:
     """The page as HTML that needs no other file, no network and no script."""
     study, counts = found.study, found.counts
-    pictures = [made for make in (calendar, rates, displacements) if (made := make(found)) is not None]
+    drawn = (calendar, rates, success_map, displacements)
+    pictures = [made for make in drawn if (made := make(found)) is not None]
     first, last = study.fixes["time"].min(), study.fixes["time"].max()
     return render(
         "screening.html",

@@ -11,7 +11,7 @@ from bayesrange.screening._companions import travelling_pairs
 from bayesrange.screening._information import information
 from bayesrange.screening._rates import Rhythm, commonest_interval_h, histogram, rhythm, usable
 from bayesrange.screening._settling import Settling, settling
-from bayesrange.screening._success import success_by_class, success_by_hour
+from bayesrange.screening._success import places_of_failed, success_by_class, success_by_hour, success_by_square
 from bayesrange.study import FLAGS, BareStudy, across_m, find_flags
 
 UNSOUND = ("duplicate", "speed", "spike", "stationary")
@@ -37,6 +37,7 @@ class Screening:
         rhythms: by animal.
         by_hour: hour, fixes, failed, success.
         by_class: layer, class, fixes, failed, success.
+        by_square: x, y [m], side_m, fixes, failed, success.
         pairs: first, second, simultaneous, near, share.
         by_period: group, then a column of fixes a period.
         folder: where it was written, if it was.
@@ -55,6 +56,7 @@ class Screening:
     rhythms: dict[str, Rhythm]
     by_hour: pd.DataFrame
     by_class: pd.DataFrame
+    by_square: pd.DataFrame
     pairs: pd.DataFrame
     by_period: pd.DataFrame
     folder: Path | None = None
@@ -89,6 +91,7 @@ def look(study: BareStudy) -> Screening:
     between = between[~np.isnan(between)]
     nominal = study.settings.model.interval_h or commonest_interval_h(between, tolerance)
     animals, settlings, rhythms = _by_animal(study, fixes, nominal, tolerance)
+    failed_at = places_of_failed(fixes, study.failed)
     single = np.ones(len(study.fixes), dtype=bool)
     single[flags["fix"][flags["flag"] == "duplicate"]] = False
     return Screening(
@@ -103,7 +106,8 @@ def look(study: BareStudy) -> Screening:
         settlings=settlings,
         rhythms=rhythms,
         by_hour=success_by_hour(study.fixes[single], study.failed, study.settings.fixes.zone),
-        by_class=success_by_class(study, fixes),
+        by_class=success_by_class(study, fixes, failed_at),
+        by_square=success_by_square(fixes, failed_at),
         pairs=travelling_pairs(fixes, nominal),
         by_period=_by_period(study, fixes),
     )

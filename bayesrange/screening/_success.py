@@ -7,6 +7,8 @@ import pandas as pd
 
 from bayesrange.study import BareStudy
 
+_ACROSS = 15  # squares
+
 
 def success_by_hour(fixes: pd.DataFrame, failed: pd.DataFrame, zone: str | None) -> pd.DataFrame:
     """Fixes and failed fixes by hour of the study's clock (UTC without a zone): hour, fixes, failed, success."""
@@ -18,19 +20,15 @@ def success_by_hour(fixes: pd.DataFrame, failed: pd.DataFrame, zone: str | None)
     return _with_success(pd.DataFrame({"hour": np.arange(24), **counts}))
 
 
-def success_by_class(study: BareStudy, fixes: pd.DataFrame) -> pd.DataFrame:
-    """Fixes and failed fixes by class of every layer of classes: layer, class, fixes, failed, success.
-
-    A failed fix is put on the straight line between the animal's fixes before and after it, at its share of the time
-    between them: right on the whole where few fail in a row.
-    """
+def success_by_class(study: BareStudy, fixes: pd.DataFrame, failed_at: np.ndarray) -> pd.DataFrame:
+    """Fixes and failed fixes by class of every layer of classes: layer, class, fixes, failed, success."""
     grid = study.grid
     if grid is None or not study.classes or study.failed.empty:
         return pd.DataFrame(columns=["layer", "class", "fixes", "failed", "success"])
     rows = []
     for name, layer in study.classes.items():
         counts = []
-        for x, y in (fixes[["x", "y"]].to_numpy(dtype=float).T, _between(fixes, study.failed).T):
+        for x, y in (fixes[["x", "y"]].to_numpy(dtype=float).T, failed_at.T):
             row, column = grid.cell_of(x, y)
             at = np.where(row >= 0, layer.cells[row, column], np.nan)
             counts.append(np.bincount(at[~np.isnan(at)].astype(int), minlength=len(layer.names)))
@@ -38,8 +36,12 @@ def success_by_class(study: BareStudy, fixes: pd.DataFrame) -> pd.DataFrame:
     return _with_success(pd.DataFrame(rows, columns=["layer", "class", "fixes", "failed"]))
 
 
-def _between(fixes: pd.DataFrame, failed: pd.DataFrame) -> np.ndarray:
-    """Places of failed fixes [m]; those before an animal's first or after its last fix are left out."""
+def places_of_failed(fixes: pd.DataFrame, failed: pd.DataFrame) -> np.ndarray:
+    """Where animals must have been when fixes failed: x, y [m]; not before its first or after its last fix.
+
+    On the straight line between the fixes before and after, at the share of the time between them: right on the whole
+    where few fail in a row.
+    """
     own = dict(list(fixes.groupby("animal")))
     parts = [np.zeros((0, 2))]
     for animal, lost in failed.groupby("animal"):
@@ -50,6 +52,21 @@ def _between(fixes: pd.DataFrame, failed: pd.DataFrame) -> np.ndarray:
         at = at[(at > known[0]) & (at < known[-1])]
         parts.append(np.column_stack([np.interp(at, known, got[axis].to_numpy(dtype=float)) for axis in ("x", "y")]))
     return np.concatenate(parts)
+
+
+def success_by_square(fixes: pd.DataFrame, failed_at: np.ndarray) -> pd.DataFrame:
+    """Fixes and failed fixes by squares of a readable size, at most fifteen across.
+
+    Columns x, y [m, middle], side_m, fixes, failed, success.
+    """
+    places = fixes[["x", "y"]].to_numpy(dtype=float)
+    wide = max(float(np.ptp(places, axis=0).max()), 1.0) / _ACROSS
+    power = 10.0 ** np.floor(np.log10(wide))
+    side = float(power * next(step for step in (1, 2, 5, 10) if step * power >= wide))
+    got, lost = (pd.DataFrame(np.floor(p / side), columns=["x", "y"]).value_counts() for p in (places, failed_at))
+    table = pd.DataFrame({"fixes": got, "failed": lost}).fillna(0).astype(int).reset_index()
+    table[["x", "y"]] = (table[["x", "y"]] + 0.5) * side
+    return _with_success(table.assign(side_m=side))
 
 
 def _with_success(table: pd.DataFrame) -> pd.DataFrame:

@@ -64,6 +64,17 @@ def test_failed_fixes_are_put_to_the_ground_between_their_neighbours(study):
     assert by_class.loc["wood", "success"] < 0.8 < by_class.loc["heath", "success"]
 
 
+def test_squares_hold_every_attempt_and_are_worse_in_the_wood(study):
+    found, truth = study
+    squares = found.by_square
+    assert squares["fixes"].sum() == 3000 - truth["fails"]
+    assert squares["failed"].sum() == pytest.approx(truth["fails"], abs=2)
+    west, east = squares[squares["x"] < 5e5 - 300], squares[squares["x"] > 5e5 + 300]
+    share = [one["fixes"].sum() / (one["fixes"] + one["failed"]).sum() for one in (west, east)]
+    assert share[0] < 0.8 < 0.95 < share[1]
+    assert len(set(squares["side_m"])) == 1 and (np.ptp(found.study.fixes["x"]) / squares["side_m"].iloc[0]) <= 15
+
+
 def test_without_a_layer_of_classes_nothing_is_said_of_them(tmp_path):
     as_file(table(wandering(100))).to_csv(tmp_path / "fixes.csv", index=False)
     (tmp_path / "study.toml").write_text('[study]\ncrs = "EPSG:32631"\n[fixes]\nfile = "fixes.csv"\n')
