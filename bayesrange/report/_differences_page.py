@@ -48,10 +48,11 @@ def _verdict(facts: list[dict[str, Any]]) -> dict[str, Any]:
     lacking = [str(one["period"]) for one in facts if not one["converged"]]
     if not lacking:
         return {"converged": True, "sentence": "The chains of every period's run agree.", "problems": []}
+    runs = "run" if len(lacking) == 1 else "runs"
     return {
         "converged": False,
-        "sentence": f"The run of {listed(lacking)} did not converge, so differences from it are not yet results.",
-        "problems": [str(text) for one in facts if not one["converged"] for text in one["diagnostics"]["problems"]],
+        "sentence": f"The {runs} of {listed(lacking)} did not converge: the differences below are not yet results.",
+        "problems": [f"{one['period']}: {text}" for one in facts for text in one["diagnostics"]["problems"]],
     }
 
 
@@ -106,7 +107,7 @@ def _blocks(table: pd.DataFrame, single: list[bool], shares: dict[str, dict[str,
 def _row(row: dict[str, Any], before: dict[str, float], after: dict[str, float]) -> dict[str, Any]:
     lower, median, upper = row["lower"], row["median"], row["upper"]
     known = known_to(lower, median, upper)
-    ratio = known_to(row["ratio_lower"], row["ratio_median"], row["ratio_upper"])
+    ratios = [number(row[f"ratio_{key}"], row[f"ratio_{key}"]) for key in ("median", "lower", "upper")]
     has_ratio = pd.notna(row["ratio_median"])
     notes = [f"{row['note']}."] if row["note"] else []
     name = str(row["quantity"])
@@ -115,14 +116,14 @@ def _row(row: dict[str, Any], before: dict[str, float], after: dict[str, float])
             if (s := own.get(plain)) is not None]  # fmt: skip
     if ends and plain == name:
         notes.append(
-            f"Sparse data: the posterior sd is {listed(ends)} of the prior’s; the prior, which is the same in both "
+            f"Sparse data: the posterior sd is {listed(ends)} of the prior’s; the prior, which is alike in both "
             "periods, draws the difference towards 0."
         )
     return {
         "name": name, "unit": row["unit"], "raw": name.endswith(" raw"), "notes": notes,
         "median": number(median, known), "interval": interval(lower, upper, known), "bar": _bar(lower, median, upper),
-        "ratio": f"{number(row['ratio_median'], ratio)}" if has_ratio else "",
-        "ratio_interval": interval(row["ratio_lower"], row["ratio_upper"], ratio) if has_ratio else "",
+        "ratio": ratios[0] if has_ratio else "",
+        "ratio_interval": f"{ratios[1]} to {ratios[2]}" if has_ratio else "",
         "above": fixed(row["probability_above_zero"], 2),
     }  # fmt: skip
 
