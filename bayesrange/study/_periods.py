@@ -53,8 +53,8 @@ def for_period(settings: StudySettings, period: str | None, file: str) -> tuple[
     spans = period_spans(settings, file)
     if period is None and spans:
         raise StudyError(
-            f"{file}: the study has the periods {', '.join(spans)}, which are fitted one by one; choose one as in "
-            f"bayesrange fit STUDY --period {next(iter(spans))}."
+            f"{file}: the study has the periods {', '.join(spans)}, which are fitted one by one; choose one (in Python "
+            f'read_study(STUDY, "{next(iter(spans))}")), or fit them all by bayesrange fit STUDY.'
         )
     if period is not None and period not in spans:
         close = nearest(period, list(spans))
