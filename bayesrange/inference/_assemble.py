@@ -113,6 +113,8 @@ def build_tree(study: Study, spec: RangeSpec, derived: Derived, prior: Sites, we
     for column in ("animals_low", "animals_high"):
         if column in groups:
             constant[column] = ("group", groups[column].to_numpy(float))
+    if study.settings.fixes.detection is not None:
+        constant["detection"] = (("y", "x"), study.layers[study.settings.fixes.detection].values)
     chain_draw = ("chain", "draw")
     use = xr.Dataset(
         {

@@ -174,7 +174,16 @@ def make_data(study: Study, card: Card, spec: RangeSpec, scales: Scales, weight:
         centring=np.zeros((len(groups), spread_scale.size)),
         animals=groups[["animals_low", "animals_high"]].to_numpy(float)[list(spec.counted)] if spec.counted else None,
         a0=np.asarray(scales.a0_km2) if spec.counted else None,
+        log_detection=_log_detection(study),
     )
+
+
+def _log_detection(study: Study) -> np.ndarray | None:
+    """Log of the chance that a fix succeeds in each cell, 0 outside; None without a layer of it."""
+    name = study.settings.fixes.detection
+    if name is None:
+        return None
+    return np.log(np.where(study.grid.inside, study.layers[name].values, 1.0))
 
 
 def uncertain_animals(study: Study) -> tuple[int, ...]:

@@ -63,6 +63,7 @@ class RangeData(NamedTuple):
         centring: share of centring of each group's coefficients (see `walk_coefficients`); 0 until the mode is known.
         animals: least and largest number of animals of the groups `counted`; None if there are none.
         a0: A₀ [km²], with `animals`.
+        log_detection: log of the chance that a fix succeeds in each cell, 0 outside; None: alike everywhere.
     """
 
     setting: Setting
@@ -77,3 +78,4 @@ class RangeData(NamedTuple):
     centring: Float[Array, "groups varying"]
     animals: Float[Array, "counted 2"] | None = None
     a0: Float[Array, ""] | None = None
+    log_detection: Float[Array, "ny nx"] | None = None

@@ -56,7 +56,10 @@ def sample_parameters(spec: RangeSpec, data: RangeData) -> Parameters:
 def log_likelihood(spec: RangeSpec, data: RangeData, parameters: Parameters) -> tuple[Float[Array, " fixes"], Solution]:
     """Weighted log density of each fix [log 1/km²], and the solution it was read from."""
     solution = steady_state(parameters, data.setting, solver=spec.solver, coupled=spec.coupled)
-    log_density = log_fix_density(solution.log_density, data.reading)
+    seen = solution.log_density
+    if data.log_detection is not None:  # fixes have the density u d / ∫ u d
+        seen = seen + data.log_detection
+    log_density = log_fix_density(seen, data.reading)
     return jnp.where(data.weight > 0, data.weight * log_density, 0.0), solution
 
 

@@ -14,6 +14,7 @@ def fix_problems(s: StudySettings) -> Iterator[str]:
         expected = FixesSection.model_fields["file"].description
         yield f"[fixes] file: this is missing; expected {expected} (or a section [bearings])."
     yield from _error_problems(s.fixes)
+    yield from _detection_problems(s)
     yield from _bearing_problems(s)
 
 
@@ -40,6 +41,23 @@ _FOR = {
     "error_table": 'name the table of classes (class,error_m), such as error_table = "classes.csv".',
     "error_class": 'name the column with the class, such as error_class = "class".',
 }
+
+
+def _detection_problems(s: StudySettings) -> Iterator[str]:
+    """What is wrong with `[fixes] detection`, as a sentence that begins with the key."""
+    name = s.fixes.detection
+    if name is None:
+        return
+    if name not in s.layers:
+        known = ", ".join(s.layers) or "none"
+        yield f'[fixes] detection: there is no layer "{name}"; add a section [layers.{name}] (the study has {known}).'
+        return
+    for key, what in (("no_go", "no-go ground"), ("classes", "a layer of classes"), ("distance", "a distance")):
+        if getattr(s.layers[name], key):
+            yield (
+                f'[fixes] detection: "{name}" is {what}; expected a raster of the chance that a fix succeeds, above 0 '
+                "and at most 1."
+            )
 
 
 def _bearing_problems(s: StudySettings) -> Iterator[str]:

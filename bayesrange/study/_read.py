@@ -19,6 +19,7 @@ from bayesrange.study._area import read_area
 from bayesrange.study._card_kind import card_kind
 from bayesrange.study._cell_size import check_resolution, check_size, choose_cell
 from bayesrange.study._crs import carry, scale_warnings
+from bayesrange.study._detection import check_detection, refuse_for_tracks
 from bayesrange.study._drop import without_dropped
 from bayesrange.study._fixes import RawFixes, read_fixes
 from bayesrange.study._grid import SUB, Frame, Grid, area_sub_cells, build_grid, frame_of, without_scraps
@@ -107,6 +108,8 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     cell_m, said_of_cells = _cell(settings, fixes, area)
     frame = frame_of(area, cell_m)
     of_ranges = card_kind(settings.model.card, folder) == "range"
+    if not of_ranges:
+        refuse_for_tracks(settings, path.name)
     said_of_cells += check_size(frame, len(groups), settings.sampling) if of_ranges else []
     no_go = _no_go(settings, folder, frame, crs)
     habitable, said_of_scraps = without_scraps(area_sub_cells(area, frame) & ~no_go, frame)
@@ -178,6 +181,8 @@ def _layers(settings: StudySettings, folder: Path, grid: Grid) -> tuple[dict[str
             raise StudyError(f'[layers.{name}]: there would be two layers called "{twice}"; rename this section.')
         layers |= found.layers
         said += found.said
+        if name == settings.fixes.detection:
+            said += check_detection(found.layers[name], grid, found.said)
         filled += found.filled
     return layers, said, filled
 

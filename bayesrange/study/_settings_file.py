@@ -96,7 +96,8 @@ def read_settings_to_screen(path: str | Path) -> tuple[StudySettings, list[str]]
             said.append(f"{_sentence(path.name, error)[:-1]}: left out of this look; a fit would refuse it.")
             raw |= {name: _NOT_NEEDED[name] for name in wrong}
     for problem in _contradictions(settings):
-        if problem.startswith(("[fixes", "[animals", "[bearings")):
+        of_fixes = problem.startswith(("[fixes", "[animals", "[bearings"))
+        if of_fixes and not problem.startswith("[fixes] detection"):  # which is about a layer
             raise StudyError(f"{path.name}, {problem}")
         said.append(f"{path.name}, {problem}")
     if settings.study.sensitive != "no":
