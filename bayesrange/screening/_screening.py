@@ -180,7 +180,7 @@ def _groups(study: BareStudy, fixes: pd.DataFrame, animals: pd.DataFrame) -> pd.
     for group in dict.fromkeys([*homes, *own]):
         mine = own.get(group, fixes.iloc[:0])
         across = across_m(mine) if len(mine) >= 10 else float("nan")
-        effective = float(mine["animal"].map(per_fix).sum())
+        effective = float(mine["animal"].map(per_fix).astype(float).sum())
         cells = across / cell_m if cell_m != "auto" else float("nan")
         rows.append((group, len(mine), effective, across, cells, bool(homes.get(group, False))))
     return pd.DataFrame(rows, columns=["group", "fixes", "effective", "across_m", "cells", "home"]).astype(

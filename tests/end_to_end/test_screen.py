@@ -134,6 +134,15 @@ WRONG = {
 }
 
 
+def test_a_group_without_fixes_is_in_the_table_and_stops_nothing(tmp_path, capsys):
+    folder = write(tmp_path / "study", animals(), groups='file = "groups.csv"')
+    x, y = animals()[["x", "y"]].mean()
+    (folder / "groups.csv").write_text(f"group,x,y,animals\nnorth,,,2\nsouth,,,1\nunwatched,{x:.0f},{y:.0f},2\n")
+    assert commands.main(["screen", str(folder)]) == 0
+    found = bayesrange.screen(folder, out=tmp_path / "again").groups.set_index("group")
+    assert found.loc["unwatched", ["fixes", "effective"]].tolist() == [0, 0.0]
+
+
 @pytest.mark.parametrize("case", WRONG)
 def test_wrong_input_is_one_sentence_and_nothing_is_written(tmp_path, capsys, case):
     lines, words = WRONG[case]
