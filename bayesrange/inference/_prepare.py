@@ -21,9 +21,6 @@ from bayesrange.study import Study, Weights, autocorrelation_weights
 Made = tuple[list[Data], list[Any], dict[str, Any]]
 """Data and extra of each task, and facts for run.json that came up on the way."""
 
-TARGET_ACCEPT = {"range": 0.9, "memory": 0.8}
-"""Where the study file gives none: a steady state has rougher corners than the likelihood of steps."""
-
 
 @dataclass
 class Prepared:
@@ -65,11 +62,6 @@ class Prepared:
         chosen = {} if self.study.period is None else {"the period": self.study.period}
         return self.inputs | chosen | {f"the version of {name}": number for name, number in versions.items()}
 
-    @property
-    def target_accept(self) -> float:
-        """Target of the step size adaptation."""
-        return self.study.settings.sampling.target_accept or TARGET_ACCEPT[self.card.kind]
-
     def make_tasks(self) -> tuple[list[Task], dict[str, Any]]:
         """The workers' tasks, and facts for run.json."""
         sampling = self.study.settings.sampling
@@ -77,7 +69,7 @@ class Prepared:
         tasks = [
             Task(
                 spec, numbers, sampling.chains, sampling.warmup, sampling.draws, sampling.seed,
-                self.target_accept, self.fingerprint, label, extra,
+                sampling.target_accept, self.fingerprint, label, extra,
             )
             for spec, numbers, label, extra in zip(self.specs, data, self.labels, extras, strict=True)
         ]  # fmt: skip

@@ -132,7 +132,7 @@ def _common(prepared: Prepared, diagnostics: Diagnostics, times: dict[str, float
         "card": {}, "scales": prepared.scales.as_json(), "reading": "bilinear",
         "sampling": {
             "chains": sampling.chains, "warmup": sampling.warmup, "draws": sampling.draws, "seed": sampling.seed,
-            "target_accept": prepared.target_accept,
+            "target_accept": sampling.target_accept,
         },
         "versions": {"bayesrange": bayesrange.__version__, **{name: version(name) for name in LIBRARIES}},
         "finished": datetime.now(UTC).isoformat(timespec="seconds"), "times": times, "worker_gib": worker_gib,

@@ -197,7 +197,7 @@ class SamplingSection(Section):
     warmup: int = Field(500, ge=1, description="a whole number of at least 1")
     draws: int = Field(500, ge=1, description="a whole number of at least 1")
     seed: int = Field(20, ge=0, lt=2**32, description="a whole number from 0 to 4294967295")
-    target_accept: Share | None = Field(None, description="a number between 0 and 1")
+    target_accept: Share = Field(0.9, description="a number between 0 and 1")
 
 
 class StudySettings(Section):
