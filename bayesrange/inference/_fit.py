@@ -1,5 +1,6 @@
 """`fit`: from a study to a run folder."""
 
+import contextlib
 import json
 import shutil
 from collections.abc import Callable
@@ -104,7 +105,13 @@ def _sample(
 
 def _save_tasks(checkpoints: Path, prepared: Prepared, folders: list[Path]) -> None:
     """Write the workers' tasks, then what they were made from; tables are large and not kept in memory."""
-    tasks, facts = prepared.make_tasks()
+    try:
+        tasks, facts = prepared.make_tasks()
+    except StudyError:  # found out late; what the user was told of as wrong leaves nothing behind
+        shutil.rmtree(checkpoints)
+        with contextlib.suppress(OSError):
+            checkpoints.parent.rmdir()
+        raise
     for folder, task in zip(folders, tasks, strict=True):
         folder.mkdir(exist_ok=True)
         save_task(folder, task)

@@ -12,7 +12,7 @@ from bayesrange.inference._cards import Card
 from bayesrange.inference._covariates import code_columns
 from bayesrange.inference._memory_data import EXCESS, MemoryData, MemorySpec
 from bayesrange.inference._memory_model import animal_layout
-from bayesrange.inference._memory_study import Tracks, animal_column, make_tracks
+from bayesrange.inference._memory_study import FEWEST_STEPS, Tracks, animal_column, make_tracks
 from bayesrange.inference._memory_tables import (
     COLUMNS,
     Proof,
@@ -162,6 +162,13 @@ def make_tables(plan: MemoryPlan, study: Study) -> MemoryTables:
     count = plan.nodes or choose_count(pilot)
     cells = _surface_cells(study, spec.remembers)
     inputs, steps, proof = make_proved(inputs, count)
+    for one in inputs.animals:
+        if one.steps.time.size < FEWEST_STEPS:
+            raise StudyError(
+                f'{study.path.name}: the animal "{one.name}" has {one.steps.time.size} steps with habitable ground '
+                f"within reach of their start; at least {FEWEST_STEPS} are needed: check the no-go layers, or take its "
+                "fixes out."
+            )
     if spec.pooled:
         return MemoryTables([_memory_data(plan, study, inputs, steps, cells)], [inputs], proof, count, pilot)
     alone = replace(plan, covariates=np.zeros((1, 0)))

@@ -297,7 +297,7 @@ def _said_of_error(fixes: pd.DataFrame, median_step_m: float) -> list[str]:
     if error > median_step_m / 4:
         said += (
             f" It passes a quarter of the median step of {median_step_m:.3g} m: steps are largely noise, turns look "
-            "reversed and step_shape is biased; thin the fixes to a longer interval_h."
+            "reversed and step_shape is biased; keep fewer fixes, at a longer interval."
         )
     return [said]
 

@@ -4,6 +4,7 @@ import pytest
 from inference._tiny_tracks import BO, TOM, animals_table, fixes_table, write_tracks
 
 from bayesrange import commands
+from bayesrange.inference import _memory_tables
 
 TWO = (BO, TOM)
 NARROW = {"family": "log-normal", "median": 1.0, "spread": 0.5}
@@ -59,3 +60,13 @@ def test_wrong_study_is_answered_by_one_sentence_and_nothing_is_written(tmp_path
     assert said.err.startswith("bayesrange: ") and words in said.err, said.err
     assert said.out == "" and said.err.count("\n") == 1
     assert sorted(tmp_path.rglob("*")) == before
+
+
+def test_what_is_found_out_only_when_tables_are_made_leaves_nothing_behind(tmp_path, capsys, monkeypatch):
+    monkeypatch.setattr(_memory_tables, "COLUMNS", ((2, 2),))  # too few for any memory
+    write_tracks(tmp_path / "study")
+    before = sorted(tmp_path.rglob("*"))
+    assert commands.main(["fit", str(tmp_path / "study")]) == 2
+    assert "cannot be compressed" in capsys.readouterr().err
+    left = [path for path in tmp_path.rglob("*") if path.is_file()]
+    assert sorted(left) == [path for path in before if path.is_file()]

@@ -293,3 +293,13 @@ def test_covariate_that_the_table_lacks_is_refused(tmp_path):
     model = {"pooling": "hierarchical", "covariates": ["wingspan"]}
     with pytest.raises(StudyError, match="the animals table has no column 'wingspan'"):
         prepare(read_study(write_tracks(tmp_path, model=model)))
+
+
+def test_null_takes_the_study_file_of_its_memory_card_and_says_what_it_leaves_aside(tmp_path):
+    changes = {"encoding_range_m": 120, "memory_start": "learned", "learning_days": 2}
+    with_memory = prepare(read_study(write_tracks(tmp_path / "a", model=changes)))
+    null = prepare(read_study(write_tracks(tmp_path / "b", model={**changes, "card": "steps-home"})))
+    said = "encoding_range_m has no use for the card steps-home"
+    assert any(said in text for text in null.warnings) and not any(said in text for text in with_memory.warnings)
+    for one, other in zip(with_memory.plan.tracks.animals, null.plan.tracks.animals, strict=True):
+        assert one.counts == other.counts and one.counts["learning"] > 0
