@@ -12,7 +12,7 @@ from bayesrange.inference._cards import Card
 from bayesrange.inference._covariates import code_columns
 from bayesrange.inference._memory_data import EXCESS, MemoryData, MemorySpec
 from bayesrange.inference._memory_model import animal_layout
-from bayesrange.inference._memory_study import FEWEST_STEPS, Tracks, animal_column, make_tracks
+from bayesrange.inference._memory_study import FEWEST_STEPS, AnimalTrack, Tracks, animal_column, make_tracks
 from bayesrange.inference._memory_tables import (
     COLUMNS,
     Proof,
@@ -33,6 +33,7 @@ RANGE_TAIL = 2.0
 MOST_CELLS = 10_000
 """Cells of the recall surfaces, at the most; finer grids are thinned."""
 FEWEST_POOLED = 3
+HOME_MARGIN = 0.1
 
 
 @dataclass(frozen=True)
@@ -198,25 +199,19 @@ def _surface_cells(study: Study, remembers: bool) -> np.ndarray:
 
 
 def _memory_data(plan: MemoryPlan, study: Study, inputs: TableInput, steps: Any, cells: np.ndarray) -> MemoryData:
-    grid, animals = study.grid, inputs.animals
+    animals = inputs.animals
     decay, reach = steps.decay_basis, steps.range_basis
     unit = np.zeros(len(animals), np.int32)
     if plan.spec.pooled:
         for k, members in enumerate(plan.tracks.units):
             unit[members] = k
-    rows, columns = np.nonzero(grid.inside)
-    half = grid.cell_m / 2
-    box = [
-        grid.x_m[columns.min()] - half, grid.y_m[rows.min()] - half, grid.x_m[columns.max()] + half,
-        grid.y_m[rows.max()] + half,
-    ]  # fmt: skip
     surface = surface_table(inputs, *cells.T, decay, reach) if len(cells) else np.zeros((len(animals), 0, 0))
     units = plan.covariates.shape[0]
     return MemoryData(
         steps=jax.tree.map(np.asarray, steps),
         surface=surface.astype(np.float32),
         home=np.array([[one.track.x.mean(), one.track.y.mean()] for one in animals]),
-        box=np.array(box) / 1000,
+        box=np.stack([_home_box(one) for one in animals]),
         home_eps=np.asarray(plan.scales.home_eps_m / 1000),
         unit=unit,
         least_decay=np.asarray(plan.scales.interval_h / 2),
@@ -227,6 +222,16 @@ def _memory_data(plan: MemoryPlan, study: Study, inputs: TableInput, steps: Any,
         effect_sd=np.asarray(plan.effect_sd),
         centring=np.zeros((units, plan.spread_scale.size)),
     )
+
+
+def _home_box(one: AnimalTrack) -> np.ndarray:
+    """Where an animal's centre may lie: the rectangle around its fixes and a tenth of its longer side more [km].
+
+    A centre far off would be a constant direction to go in, which is another model.
+    """
+    x, y = one.track.x, one.track.y
+    margin = HOME_MARGIN * max(np.ptp(x), np.ptp(y))
+    return np.array([x.min() - margin, y.min() - margin, x.max() + margin, y.max() + margin])
 
 
 def _table_input(plan: MemoryPlan, study: Study) -> TableInput:

@@ -61,7 +61,7 @@ class MemoryData(NamedTuple):
         steps: the steps with their nodes and tables.
         surface: table of the past at every cell inside the area, at the end of each animal's record.
         home: first guess of each animal's centre [km].
-        box: west, south, east, north of the area [km].
+        box: west, south, east, north of where each animal's centre may lie [km].
         home_eps: softening of the distance to the centre [km].
         unit: which unit each animal belongs to.
         least_decay: shortest decay time [h].
@@ -76,7 +76,7 @@ class MemoryData(NamedTuple):
     steps: StepData
     surface: Float[Array, "animals cells columns"]
     home: Float[Array, "animals 2"]
-    box: Float[Array, " 4"]
+    box: Float[Array, "animals 4"]
     home_eps: Float[Array, ""]
     unit: Int[Array, " animals"]
     least_decay: Float[Array, ""]

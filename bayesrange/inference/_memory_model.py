@@ -83,8 +83,9 @@ class MemoryModel:
         """Where the search for the mode begins, for sites whose prior alone does not say."""
         if name in ("home_x", "home_y"):
             axis = ("home_x", "home_y").index(name)
-            margin = 1e-3 * (data.box[axis + 2] - data.box[axis])
-            return jnp.clip(jnp.asarray(data.home)[:, axis], data.box[axis] + margin, data.box[axis + 2] - margin)
+            low, high = data.box[:, axis], data.box[:, axis + 2]
+            margin = 1e-3 * (high - low)
+            return jnp.clip(jnp.asarray(data.home)[:, axis], low + margin, high - margin)
         if name == "log_encoding_range":
             return jnp.mean(jnp.log(jnp.array(self.spec.range_limits)))
         return usual
@@ -154,8 +155,7 @@ class MemoryModel:
     def _homes(self, data: MemoryData) -> Float[Array, "animals 2"]:
         if "home_pull" not in self.spec.parameters:
             return jnp.asarray(data.home)
-        west, south, east, north = data.box
-        animals = len(self.spec.animals)
-        x = numpyro.sample("home_x", dist.Uniform(west, east).expand([animals]).to_event(1))
-        y = numpyro.sample("home_y", dist.Uniform(south, north).expand([animals]).to_event(1))
+        west, south, east, north = jnp.asarray(data.box).T
+        x = numpyro.sample("home_x", dist.Uniform(west, east).to_event(1))
+        y = numpyro.sample("home_y", dist.Uniform(south, north).to_event(1))
         return jnp.stack([x, y], axis=1)

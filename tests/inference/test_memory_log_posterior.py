@@ -95,7 +95,9 @@ def test_potential_of_an_animal_alone_is_minus_its_log_posterior_worked_by_hand(
     model = request.getfixturevalue(card)
     assert model.task.label == animal
     (own,) = twin_tracks(model, layers)
-    xy = (500.0, 5600.0, 502.0, 5602.0)  # the area's bounding box [km]
+    fixes = model.study.fixes.query("animal == @animal")[["x", "y"]].to_numpy() / 1000
+    margin = 0.1 * np.ptp(fixes, axis=0).max()  # a centre lies within the rectangle of the animal's fixes and a tenth
+    xy = (*(fixes.min(axis=0) - margin), *(fixes.max(axis=0) + margin))
     for z in points(model):
         value = float(model.program.value_and_gradient(ravel_pytree(z)[0], model.data)[0])
         # Compression is proved to 1e-3 nats; without memory only single precision at the nodes is left: 1e-6 a step.
