@@ -85,12 +85,13 @@ def _units(run: Run) -> "pd.Series[str]":
 
 
 def _parameters(posterior: xr.Dataset, units: "pd.Series[str]", info: dict[str, Any]) -> Iterator[Reported]:
+    pooled = any(str(name).endswith("_population") for name in posterior)
     for variable, array in posterior.data_vars.items():
         base, part = _split(str(variable), posterior)
         inner = [str(dim) for dim in array.dims if dim not in _LEAD]
         if not set(inner) <= set(_INNER):
             continue  # correlations: of no row
-        single = not part and f"{base}_population" in posterior
+        single = not part and (f"{base}_population" in posterior or (pooled and "animal" in inner))
         for place in product(*(array[dim].values for dim in inner)):
             at = dict(zip(inner, map(str, place), strict=True))
             name = _name(base, part, at)

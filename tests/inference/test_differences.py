@@ -10,12 +10,15 @@ from scipy import stats
 from bayesrange import StudyError, differences
 from bayesrange.inference import RangeSpec, Scales, between_periods
 from bayesrange.inference._assemble import parameter_dataset
+from bayesrange.inference._cards import SIGNED
+from bayesrange.inference._memory_build import MemoryScales
+from bayesrange.inference._memory_data import EXCESS, MemorySpec
+from bayesrange.inference._memory_results import _coefficients
 from bayesrange.inference._memory_results import parameter_dataset as memory_dataset
 from bayesrange.inference._memory_rows import memory_rows
 from bayesrange.inference._reported import reported
 from bayesrange.inference._scales import LayerScale
 from bayesrange.inference._summary import parameter_table, rows
-from bayesrange.inference._write_run import prior_draws
 
 SHAPE = (4, 1000)
 # Quantiles of 4,000 independent draws each side: standard error of an end of a 90 % interval of a normal is
@@ -248,35 +251,65 @@ def test_covariates_of_other_groups_are_not_compared(tmp_path):
     assert any("localising[east, wood]" in text and 'not in the run of "after"' in text for text in found.left_out)
 
 
-@pytest.fixture(params=["pooled", "estimated"])
-def tracks(request):
-    return request.getfixturevalue(request.param)
+POOLED = MemorySpec(
+    parameters=("step_shape", "step_scale", "selection", "reference_strength", "reference_decay", "working_strength",
+                "working_decay", "recall_half", "home_pull", "step_rhythm"),
+    families=(), pooled=True, layers=("worms, day", "worms, night", "cover=wood, day", "cover=wood, night"),
+    animals=("Åse", "<b>Bo</b>", "old tom"), units=("Åse", "<b>Bo</b>", "old tom"), covariates=("sex=m", "mass"),
+    rhythm=True, estimated_range=False, range_limits=(0.1, 0.1),
+)  # fmt: skip
+ALONE = replace(
+    POOLED, parameters=(*POOLED.parameters[:8], "encoding_range", "step_rhythm"), pooled=False, covariates=(),
+    estimated_range=True,
+)  # fmt: skip
+STEPS = MemoryScales(120.0, 150.0, 2.0, 10.0, 1.0, 50.0, FROZEN.layers)
 
 
-def test_rows_of_memory_cards_are_read_back_under_their_names(tmp_path, tracks):
-    # Draws of the prior stand for a posterior; of animals fitted alone, the same draws for each.
-    spec, scales = tracks.plan.spec, tracks.plan.scales
-    drawn = prior_draws(tracks.task, 12)
-    copies = 1 if spec.pooled else len(spec.animals)
-    sites = {name: np.repeat(v.reshape(2, 6, *v.shape[1:]), copies, axis=-1) if copies > 1 else
-             v.reshape(2, 6, *v.shape[1:]) for name, v in drawn.items()}  # fmt: skip
-    posterior = memory_dataset(spec, sites, scales.interval_h / 2)
-    found = memory_rows(spec, scales, posterior, posterior, scales.interval_h / 2, 1)
+def with_families(spec):
+    law = [(EXCESS.get(name, name), "normal" if name in SIGNED else "log-normal") for name in spec.parameters]
+    return replace(spec, families=tuple(law))
+
+
+def track_sites(spec, lead, seed=0):
+    """Sites of a memory model with draws from a gamma law; excesses stand for decay times."""
+    rng, count = np.random.default_rng(seed), len(spec.animals)
+    shapes = {"step_rhythm": (4,), "recall_half": ()} if spec.pooled else {"step_rhythm": (4, count)}
+    if "home_pull" in spec.parameters:
+        shapes |= {"home_x": (count,), "home_y": (count,)}
+    for parameter in spec.parameters:
+        name = EXCESS.get(parameter, parameter)
+        layers = (len(spec.layers),) if name == "selection" else ()
+        if name in ("step_rhythm", "recall_half") and name in shapes:
+            continue
+        shapes[name] = (*layers, count)
+        if name in EXCESS.values():
+            shapes[parameter] = (count,)
+        if spec.pooled:
+            one = layers or (1,)
+            shapes |= {f"{name}_population": layers, f"{name}_spread": one, f"{name}_effect": (*one, 2)}
+    sites = {name: rng.gamma(2, size=(*lead, *shape)) for name, shape in shapes.items()}
+    free = len(_coefficients(spec))
+    return sites | ({"animal_correlation": np.broadcast_to(np.eye(free), (*lead, free, free))} if free else {})
+
+
+@pytest.mark.parametrize("spec", [with_families(POOLED), with_families(ALONE)], ids=["pooled", "alone"])
+def test_rows_of_memory_cards_are_read_back_under_their_names(tmp_path, spec):
+    posterior, prior = (memory_dataset(spec, track_sites(spec, lead), 0.5) for lead in ((2, 6), (1, 9)))
+    found = memory_rows(spec, STEPS, posterior, prior, 0.5, 1)
     info = {"card": {"name": "memory", "kind": "memory"}, "memory": {"encoding_range_m": 150.0}}
-    table = parameter_table(found)
-    run = write_run(tmp_path / "one", "before", posterior, table, scales=scales.as_json(), **info)
+    table, scales = parameter_table(found), STEPS.as_json()
+    run = write_run(tmp_path / "one", "before", posterior, table, scales=scales, **info)
     check_names_and_draws(run, found)
 
     wider = info | {"memory": {"encoding_range_m": 170.0}}
-    other = write_run(tmp_path / "two", "after", posterior, table, scales=scales.as_json(), **wider)
-    compared = between_periods([run, other]).table.set_index("quantity")["note"]
-    of_memory = compared.index.str.contains("reference_|working_|recall_half")
-    assert (
-        compared[of_memory].str.contains("remembered within 150 m and 170 m").all() and not compared[~of_memory].any()
-    )
+    other = write_run(tmp_path / "two", "after", posterior, table, scales=scales, **wider)
+    notes = between_periods([run, other]).table.set_index("quantity")["note"]
+    of_memory = notes.index.str.contains("reference_|working_|recall_half")
+    assert notes[of_memory].str.contains("remembered within 150 m and 170 m").all()
+    assert of_memory.any() and (notes[~of_memory] == "").all()
 
-    slower = scales.as_json() | {"interval_h": 2 * scales.interval_h}
-    third = write_run(tmp_path / "three", "after", posterior, table, scales=slower, **info)
-    found = between_periods([run, third])
-    assert set(found.table["quantity"]) <= {f"encoding_range[{animal}]" for animal in spec.animals}
-    assert any("belongs to the interval between fixes, 1 h and 2 h" in text for text in found.left_out)
+    third = write_run(tmp_path / "three", "after", posterior, table, scales=scales | {"interval_h": 2.0}, **info)
+    slower = between_periods([run, third])
+    kept = "home_" if spec.pooled else "encoding_range["
+    assert len(slower.table) and slower.table["quantity"].str.startswith(kept).all()
+    assert any("belongs to the interval between fixes, 1 h and 2 h" in text for text in slower.left_out)
