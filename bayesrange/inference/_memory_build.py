@@ -1,18 +1,18 @@
 """From a study and a memory card to specification, scales and arrays."""
 
-from dataclasses import asdict, dataclass, replace
+from dataclasses import dataclass, replace
 from typing import Any
 
 import jax
 import numpy as np
-import pandas as pd
 
 from bayesrange._errors import StudyError
 from bayesrange.inference._cards import Card
-from bayesrange.inference._covariates import code_columns
+from bayesrange.inference._memory_checks import check_card, is_pooled, unit_covariates
 from bayesrange.inference._memory_data import EXCESS, MemoryData, MemorySpec
 from bayesrange.inference._memory_model import animal_layout
-from bayesrange.inference._memory_study import FEWEST_STEPS, AnimalTrack, Tracks, animal_column, make_tracks
+from bayesrange.inference._memory_scales import MemoryScales, memory_scales, prior_in_km, range_limits_of, upper_end
+from bayesrange.inference._memory_study import FEWEST_STEPS, AnimalTrack, Tracks, make_tracks
 from bayesrange.inference._memory_tables import (
     COLUMNS,
     Proof,
@@ -22,51 +22,13 @@ from bayesrange.inference._memory_tables import (
     surface_table,
 )
 from bayesrange.inference._priors import Prior
-from bayesrange.inference._scales import LayerScale, layer_scales
+from bayesrange.inference._scales import layer_scales
 from bayesrange.memory import Landscape, Steps, choose_count, quadrature_error, wide_reference
 from bayesrange.study import Study
 
-TAIL = 3.3
-"""Prior sds (of the logarithm) that the table of decay times covers: 99.9 % of the prior."""
-RANGE_TAIL = 2.0
-"""The same for an estimated encoding range, whose prior is cut off there."""
 MOST_CELLS = 10_000
 """Cells of the recall surfaces, at the most; finer grids are thinned."""
-FEWEST_POOLED = 3
 HOME_MARGIN = 0.1
-
-
-@dataclass(frozen=True)
-class MemoryScales:
-    """The frozen scales of a fit of steps.
-
-    Attributes:
-        median_step_m: median step [m]; the unit of some priors.
-        encoding_range_m: encoding range, or the middle of its prior where it is estimated [m].
-        area_length_km: root of the habitable area [km].
-        shortest_step_m: steps below it count as rest [m].
-        interval_h: nominal sampling interval [h].
-        home_eps_m: softening of the distance to a centre, half a cell [m].
-        layers: scale of each layer, in the model's order.
-    """
-
-    median_step_m: float
-    encoding_range_m: float
-    area_length_km: float
-    shortest_step_m: float
-    interval_h: float
-    home_eps_m: float
-    layers: dict[str, LayerScale]
-
-    def as_json(self) -> dict[str, Any]:
-        """Plain numbers for run.json."""
-        return asdict(self)
-
-    @classmethod
-    def from_json(cls, table: dict[str, Any]) -> "MemoryScales":
-        """The scales that a run.json holds."""
-        layers = {name: LayerScale(**scale) for name, scale in table["layers"].items()}
-        return cls(**{**table, "layers": layers})
 
 
 @dataclass(frozen=True)
@@ -115,12 +77,12 @@ def make_plan(study: Study, card: Card) -> MemoryPlan:
     Raises:
         StudyError: the two do not fit together.
     """
-    _check_card(study, card)
+    check_card(study, card)
     model = study.settings.model
     tracks = make_tracks(study)
-    pooled = _pooled(study, tracks)
+    pooled = is_pooled(study, tracks)
     layers = study.model_layers if "resources" in card.terms else ()
-    scales = _scales(study, tracks, layer_scales(study, list(layers)))
+    scales = memory_scales(study, tracks, layer_scales(study, list(layers)))
     optional = (("encoding_range",) if _estimates_range(study, card) else ()) + (
         ("step_rhythm",) if "step_length" in model.vary else ()
     )
@@ -128,10 +90,10 @@ def make_plan(study: Study, card: Card) -> MemoryPlan:
         if name not in card.priors:
             raise StudyError(f"{card.file.name}: no prior for {name}; write [priors.{name}] with family and numbers.")
     names = card.parameters + optional
-    priors = {EXCESS.get(name, name): _prior(card.priors[name], name, scales) for name in names}
+    priors = {EXCESS.get(name, name): prior_in_km(card.priors[name], name, scales) for name in names}
     by_day = "selection" in model.vary
     named = tuple(f"{layer}, {part}" for layer in layers for part in ("day", "night")) if by_day else layers
-    covariates = _covariates(study, tracks, pooled)
+    covariates = unit_covariates(study, tracks, pooled)
     spec = MemorySpec(
         parameters=names,
         families=tuple((name, prior.family) for name, prior in priors.items()),
@@ -142,7 +104,7 @@ def make_plan(study: Study, card: Card) -> MemoryPlan:
         covariates=tuple(name for name, _ in covariates),
         rhythm="step_rhythm" in optional,
         estimated_range="encoding_range" in optional,
-        range_limits=_range_limits(priors, scales),
+        range_limits=range_limits_of(priors, scales),
     )
     layout = animal_layout(spec)
     spreads = [_spread(card, name) for name, _, count in layout.coefficients for _ in range(count)] if layout else []
@@ -262,138 +224,8 @@ def _decays(plan: MemoryPlan) -> tuple[float, float] | None:
     return least, least + sum(upper_end(plan.priors[name], between[name]) for name in EXCESS.values())
 
 
-def upper_end(prior: Prior, between: float = 0.0) -> float:
-    """Value that a positive prior, of an animal whose logarithm spreads by `between`, hardly ever passes (99.9 %)."""
-    if prior.family == "log-normal":
-        return prior.numbers[0] * float(np.exp(TAIL * np.hypot(prior.numbers[1], between)))
-    tail = {"half-normal": TAIL, "exponential": 7.0}.get(prior.family, 1.0)
-    return tail * prior.numbers[-1] * float(np.exp(TAIL * between))
-
-
-def _range_limits(priors: dict[str, Prior], scales: MemoryScales) -> tuple[float, float]:
-    prior = priors.get("encoding_range")
-    if prior is None:
-        return scales.encoding_range_m / 1000, scales.encoding_range_m / 1000
-    if prior.family != "log-normal":
-        raise StudyError(
-            f'[model.priors] encoding_range: expected family = "log-normal", because its table needs an end on both '
-            f"sides; got {prior.family}."
-        )
-    median, spread = prior.numbers
-    return float(median * np.exp(-RANGE_TAIL * spread)), float(median * np.exp(RANGE_TAIL * spread))
-
-
-def _check_card(study: Study, card: Card) -> None:
-    model, where = study.settings.model, study.path.name
-    if model.pooling == "shared":
-        raise StudyError(
-            f'{where}, [model] pooling: memory cards take "individual" or "hierarchical"; "shared" is for range cards.'
-        )
-    selects = "resources" in card.terms
-    for key, given, needs in (
-        ("perception_m", model.perception_m is not None, "a range card"),
-        ("over_marking", model.over_marking, "a range card"),
-        ("reading", model.reading != "bilinear", "a range card"),
-        (
-            "autocorrelation",
-            "autocorrelation" in model.model_fields_set,
-            "a range card: steps follow one another anyway",
-        ),
-    ):
-        if given:
-            raise StudyError(f"{where}, [model] {key}: {card.name} has no use for it; it is for {needs}: take it out.")
-    if selects and not model.layers:
-        raise StudyError(
-            f"{where}, [model] layers: the card {card.name} responds to layers; list at least one, such as "
-            'layers = ["forage"].'
-        )
-    if model.layers and not selects:
-        raise StudyError(
-            f"{where}, [model] layers: the card {card.name} has no resource term; take the list out or choose another "
-            "card."
-        )
-    if "selection" in model.vary and not selects:
-        raise StudyError(f'{where}, [model] vary: the card {card.name} has no selection; take "selection" out.')
-    for name, optional in (
-        ("encoding_range", model.encoding_range_m == "estimate"),
-        ("step_rhythm", "step_length" in model.vary),
-    ):
-        if name in model.priors and not optional:
-            raise StudyError(
-                f"{where}, [model.priors] {name}: this prior has no use here; set "
-                f"{'encoding_range_m = "estimate"' if name == 'encoding_range' else 'vary = ["step_length"]'} in "
-                "[model], or take the prior out."
-            )
-
-
-def said_of_unused(study: Study, card: Card) -> list[str]:
-    """Keys that a card without memory leaves aside, so that a null takes the same study file as the card it is for."""
-    if "memory" in card.terms or study.settings.model.encoding_range_m is None:
-        return []
-    return [f"[model] encoding_range_m has no use for the card {card.name} and is left aside."]
-
-
-def _pooled(study: Study, tracks: Tracks) -> bool:
-    model, where, units = study.settings.model, study.path.name, len(tracks.units)
-    if model.pooling == "hierarchical" and units < FEWEST_POOLED:
-        raise StudyError(
-            f'{where}, [model] pooling: "hierarchical" needs at least {FEWEST_POOLED} animals that travel apart, the '
-            f'study has {units}; use "individual".'
-        )
-    pooled = model.pooling == "hierarchical" or (model.pooling is None and units >= FEWEST_POOLED)
-    if pooled and "new animal" in {one.name for one in tracks.animals}:
-        raise StudyError(
-            f'{where}: an animal is called "new animal", which is what the tables call one from the population; '
-            "rename it."
-        )
-    if model.covariates and not pooled:
-        raise StudyError(f'{where}, [model] covariates: covariates of animals need pooling = "hierarchical".')
-    return pooled
-
-
-def _covariates(study: Study, tracks: Tracks, pooled: bool) -> list[tuple[str, np.ndarray]]:
-    """Coded covariates of the units; animals that travel together must agree."""
-    columns = {}
-    for name in study.settings.model.covariates if pooled else ():
-        found = animal_column(study, name)
-        where = f"{study.path.name}, [model] covariates"
-        if found is None or name in ("animal", "tag", "from", "until"):
-            raise StudyError(f"{where}: the animals table has no column {name!r} that could be a covariate.")
-        values = [[found.get(tracks.animals[i].name, "") for i in unit] for unit in tracks.units]
-        for unit, own in zip(tracks.units, values, strict=True):
-            if len(set(own)) > 1:
-                names = " and ".join(tracks.animals[i].name for i in unit)
-                raise StudyError(
-                    f"{where}: {names} travel together and count as one, but differ in {name!r}; leave it out, or set "
-                    'travelling_together = "counted_each".'
-                )
-        columns[name] = pd.Series([own[0] for own in values]).replace("", np.nan)
-    units = [" + ".join(tracks.animals[i].name for i in unit) for unit in tracks.units]
-    return code_columns(columns, units, "animal", f"{study.path.name}, [model] covariates")
-
-
-def _scales(study: Study, tracks: Tracks, layers: dict[str, LayerScale]) -> MemoryScales:
-    given = study.settings.model.encoding_range_m
-    return MemoryScales(
-        median_step_m=tracks.median_step_m,
-        encoding_range_m=float(given) if isinstance(given, int | float) else tracks.median_step_m,
-        area_length_km=float(np.sqrt(study.grid.habitable_km2)),
-        shortest_step_m=tracks.shortest_m, interval_h=tracks.interval_h, home_eps_m=study.grid.cell_m / 2,
-        layers=layers,
-    )  # fmt: skip
-
-
 def _estimates_range(study: Study, card: Card) -> bool:
     return study.settings.model.encoding_range_m == "estimate" and "memory" in card.terms
-
-
-def _prior(prior: Prior, name: str, scales: MemoryScales) -> Prior:
-    """The prior in the units of the numerics: lengths in km."""
-    if prior.scaled_by == "median_step":
-        return prior.times(scales.median_step_m / 1000)
-    if prior.scaled_by == "1/area_length":
-        return prior.times(1 / scales.area_length_km)
-    return prior.times(1 / 1000) if name in ("step_scale", "encoding_range") else prior
 
 
 def _spread(card: Card, coefficient: str) -> float:

@@ -7,8 +7,9 @@ import pandas as pd
 import xarray as xr
 from scipy import stats
 
+from bayesrange.inference._companions import SIMULTANEOUS
 from bayesrange.inference._memory_build import MemoryPlan
-from bayesrange.inference._memory_study import SIMULTANEOUS, AnimalTrack
+from bayesrange.inference._memory_study import AnimalTrack
 
 MOST_SHIFT = 0.1
 """Shift by the quadrature that is let pass [posterior sd]."""

@@ -116,7 +116,8 @@ def _range(study: Study, card: Card, inputs: dict[str, str]) -> Prepared:
 
 
 def _memory(study: Study, card: Card, inputs: dict[str, str]) -> Prepared:
-    from bayesrange.inference._memory_build import make_plan, make_tables, said_of_unused, specs_of
+    from bayesrange.inference._memory_build import make_plan, make_tables, specs_of
+    from bayesrange.inference._memory_checks import said_of_unused
 
     plan = make_plan(study, card)
 

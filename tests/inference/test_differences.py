@@ -11,11 +11,11 @@ from bayesrange import StudyError, differences
 from bayesrange.inference import RangeSpec, Scales, between_periods
 from bayesrange.inference._assemble import parameter_dataset
 from bayesrange.inference._cards import SIGNED
-from bayesrange.inference._memory_build import MemoryScales
 from bayesrange.inference._memory_data import EXCESS, MemorySpec
 from bayesrange.inference._memory_results import _coefficients
 from bayesrange.inference._memory_results import parameter_dataset as memory_dataset
 from bayesrange.inference._memory_rows import memory_rows
+from bayesrange.inference._memory_scales import MemoryScales
 from bayesrange.inference._reported import reported
 from bayesrange.inference._scales import LayerScale
 from bayesrange.inference._summary import parameter_table, rows

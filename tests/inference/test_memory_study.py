@@ -20,7 +20,8 @@ from inference._tiny_tracks import (
 )
 
 from bayesrange import StudyError
-from bayesrange.inference._memory_study import make_tracks, nominal_interval, travelling_together
+from bayesrange.inference._companions import travelling_together
+from bayesrange.inference._memory_study import make_tracks, nominal_interval
 from bayesrange.inference._prepare import prepare
 from bayesrange.study import read_study
 
