@@ -143,6 +143,9 @@ def make_data(study: Study, card: Card, spec: RangeSpec, scales: Scales, weight:
     error, bearings = fixes["error_m"].to_numpy(float), bearings_of(fixes, study.bearings)
     cell, log_share = fix_entries(grid, x, y, error, study.settings.model.reading, ellipse, bearings)
     owner = fixes["group"].map({name: i for i, name in enumerate(groups["group"])}).to_numpy(np.int32)
+    come_and_go = study.epochs if spec.coupled else None  # without scent it makes no difference who is there
+    if come_and_go is not None:
+        owner = (come_and_go.set_of(fixes["time"]) * len(groups) + owner).astype(np.int32)
     share = grid.basis_share if study.settings.model.reading == "bilinear" else grid.habitable
     padding = -len(fixes) % BUCKET
     reading = Reading(
@@ -175,6 +178,7 @@ def make_data(study: Study, card: Card, spec: RangeSpec, scales: Scales, weight:
         animals=groups[["animals_low", "animals_high"]].to_numpy(float)[list(spec.counted)] if spec.counted else None,
         a0=np.asarray(scales.a0_km2) if spec.counted else None,
         log_detection=_log_detection(study),
+        share=None if come_and_go is None else come_and_go.share,
     )
 
 

@@ -63,6 +63,8 @@ class RangeData(NamedTuple):
         centring: share of centring of each group's coefficients (see `walk_coefficients`); 0 until the mode is known.
         animals: least and largest number of animals of the groups `counted`; None if there are none.
         a0: A₀ [km²], with `animals`.
+        share: where groups come and go, share of each group's time in each of the sets of groups that are there
+            together (columns sum to 1; 0: not there); `reading.group` is then set × groups + group. Else None.
         log_detection: log of the chance that a fix succeeds in each cell, 0 outside; None: alike everywhere.
     """
 
@@ -79,3 +81,4 @@ class RangeData(NamedTuple):
     animals: Float[Array, "counted 2"] | None = None
     a0: Float[Array, ""] | None = None
     log_detection: Float[Array, "ny nx"] | None = None
+    share: Float[Array, "sets groups"] | None = None

@@ -6,6 +6,7 @@ Site names are the parameter names of the cards; units are those of the numerics
 
 from typing import Any
 
+import jax
 import jax.numpy as jnp
 import numpy as np
 import numpyro
@@ -14,11 +15,13 @@ from jaxtyping import Array, Bool, Float
 
 from bayesrange.inference._cards import SIGNED
 from bayesrange.inference._derived import ISOPLETHS, isopleth_levels, overlaps, rank_mass
+from bayesrange.inference._groups_there import each_set, mean_solution
 from bayesrange.inference._hierarchy import Layout, distribution, sample_units
 from bayesrange.inference._range_data import RangeData, RangeSpec
 from bayesrange.spaceuse import (
     SOLVED,
     Parameters,
+    Setting,
     Solution,
     arrival_scent,
     gibbs,
@@ -54,9 +57,28 @@ def sample_parameters(spec: RangeSpec, data: RangeData) -> Parameters:
 
 
 def log_likelihood(spec: RangeSpec, data: RangeData, parameters: Parameters) -> tuple[Float[Array, " fixes"], Solution]:
-    """Weighted log density of each fix [log 1/km²], and the solution it was read from."""
-    solution = steady_state(parameters, data.setting, solver=spec.solver, coupled=spec.coupled)
-    seen = solution.log_density
+    """Weighted log density of each fix [log 1/km²], and the solution it was read from.
+
+    Where groups come and go, fixes are read from the steady state of the set of groups that was there; the solution
+    returned is the mean over each group's time.
+    """
+
+    def solve(setting: Setting) -> Solution:
+        return steady_state(parameters, setting, solver=spec.solver, coupled=spec.coupled)
+
+    if data.share is None:
+        solution = solve(data.setting)
+        seen = solution.log_density
+    else:
+        parameters, by_set = each_set(parameters, data)
+
+        def of_set(marking: Array) -> Solution:
+            return solve(data.setting._replace(marking=marking))
+
+        # `flux` at once: a loop would share its analysis between the sets and free it more than once.
+        solutions = jax.vmap(of_set)(by_set) if spec.solver == "flux" else jax.lax.map(of_set, by_set)
+        solution = mean_solution(solutions, data.share)
+        seen = solutions.log_density.reshape(-1, *solution.log_density.shape[1:])
     if data.log_detection is not None:  # fixes have the density u d / ∫ u d
         seen = seen + data.log_detection
     log_density = log_fix_density(seen, data.reading)
@@ -127,14 +149,22 @@ class RangeModel:
 
     def other_state(self, parameters: Parameters, data: RangeData) -> Bool[Array, ""]:
         """Whether groups that arrive one by one, in either order, settle in another steady state."""
-        usual = gibbs(parameters, data.setting)
-        order = range(len(self.spec.groups))
-        differs = jnp.zeros((), bool)
-        for arrival in (order, order[::-1]):
-            other = gibbs(parameters, data.setting, start=arrival_scent(parameters, data.setting, arrival))
-            gap = jnp.max(jnp.abs(other.density - usual.density)) / jnp.max(usual.density)
-            differs = differs | ((other.result == SOLVED) & (gap > 1e-5))
-        return differs
+        if data.share is None:
+            return _two_states(parameters, data.setting)
+        parameters, by_set = each_set(parameters, data)
+        return jax.lax.map(lambda own: _two_states(parameters, data.setting._replace(marking=own)), by_set).any()
+
+
+def _two_states(parameters: Parameters, setting: Setting) -> Bool[Array, ""]:
+    """Whether groups that arrive one by one, in either order, settle in another steady state."""
+    usual = gibbs(parameters, setting)
+    order = range(setting.marking.shape[0])
+    differs = jnp.zeros((), bool)
+    for arrival in (order, order[::-1]):
+        other = gibbs(parameters, setting, start=arrival_scent(parameters, setting, arrival))
+        gap = jnp.max(jnp.abs(other.density - usual.density)) / jnp.max(usual.density)
+        differs = differs | ((other.result == SOLVED) & (gap > 1e-5))
+    return differs
 
 
 def _population(spec: RangeSpec, data: RangeData, name: str) -> Array:

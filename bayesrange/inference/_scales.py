@@ -32,7 +32,7 @@ class Scales:
     """The frozen scales of a fit.
 
     Attributes:
-        a0_km2: A₀, habitable area per marking animal [km²].
+        a0_km2: A₀, habitable area per marking animal [km²]; where groups come and go, per animal there on the average.
         home_length_km: L₀ = √(habitable area / groups) = √(A₀ × mean animals per group) [km].
         perception_m: sd of the Gaussian over which scent is perceived [m].
         eps_m: softening of the distance to the home centre, half a cell [m].
@@ -63,9 +63,12 @@ def make_scales(study: Study, layers: list[str]) -> Scales:
         StudyError: a layer that the study lacks, or one without variation.
     """
     grid = study.grid
-    area, animals = grid.habitable_km2, float(study.groups["animals"].sum())
+    area, animals, groups = grid.habitable_km2, float(study.groups["animals"].sum()), float(len(study.groups))
+    if study.epochs is not None:  # on the average over the time
+        animals = float(study.groups["animals"].to_numpy(float) @ study.epochs.there)
+        groups = float(study.epochs.there.sum())
     perception = study.settings.model.perception_m or 2 * grid.cell_m
-    home_length = float(np.sqrt(area / len(study.groups)))
+    home_length = float(np.sqrt(area / groups))
     return Scales(area / animals, home_length, perception, grid.cell_m / 2, layer_scales(study, layers))
 
 

@@ -104,6 +104,7 @@ def _range_facts(prepared: Prepared, effective: float) -> dict[str, Any]:
     return {
         "card": card_facts(prepared, study.settings.model.pooling or "shared", words, reasons),
         "reading": study.settings.model.reading, "detection": study.settings.fixes.detection,
+        "epochs": [] if study.epochs is None else study.epochs.as_json(list(study.groups["group"])),
         "effective": {
             "fixes": count, "effective": effective, "sentence": sentence, "animals": animals,
             "autocorrelation": study.settings.model.autocorrelation,

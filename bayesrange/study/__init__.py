@@ -8,6 +8,7 @@ from bayesrange.study._bare import BareStudy as BareStudy
 from bayesrange.study._bare import read_bare as read_bare
 from bayesrange.study._cell_size import across_m as across_m
 from bayesrange.study._daylight import solar_clock as solar_clock
+from bayesrange.study._epochs import Epochs as Epochs
 from bayesrange.study._flags import DROPPABLE as DROPPABLE
 from bayesrange.study._flags import FLAGS as FLAGS
 from bayesrange.study._flags import find_flags as find_flags

@@ -46,10 +46,12 @@ class Weights:
 def autocorrelation_weights(fixes: pd.DataFrame) -> Weights:
     """Weights of a study's fixes from one Ornstein–Uhlenbeck fit an animal.
 
-    Takes columns animal, time, x, y [m] and error_m [m]; no animal may have two fixes at one time. Where a record is
-    too short to bound the crossing time from above, the record's length is taken (few effective fixes: the cautious
-    end). Below 10 fixes the median of the other animals is taken, or without any others the animal counts once.
+    Takes columns animal, time, x, y [m] and error_m [m]; no animal may have two fixes at one time. With a column group,
+    an animal that switches groups has a fit in each: two ranges in one would look like a long crossing time. Where a
+    record is too short to bound the crossing time from above, the record's length is taken (few effective fixes: the
+    cautious end). Below 10 fixes the median of the others is taken, or without any others the animal counts once.
     """
+    fixes = fixes.assign(animal=_records(fixes))
     parts = {str(animal): _Track(rows) for animal, rows in fixes.reset_index(drop=True).groupby("animal", sort=True)}
     fitted = {animal: t.crossing_time() for animal, t in parts.items() if t.size >= FEWEST_FIXES}
     pooled = float(np.median([used_hours(time) for time in fitted.values()])) if fitted else np.inf
@@ -78,6 +80,15 @@ def interval_weights(interval_h: Float[NDArray, " intervals"], tau_h: float) -> 
 def used_hours(time: CrossingTime) -> float:
     """The crossing time that weights use: the cautious end where the record does not bound it."""
     return time.upper_h if time.open_ended else time.hours
+
+
+def _records(fixes: pd.DataFrame) -> pd.Series:
+    """Name of the record that each fix belongs to: the animal, of one that switches groups with its group."""
+    animal = fixes["animal"].astype(str)
+    if "group" not in fixes:
+        return animal
+    switches = fixes.groupby("animal")["group"].transform("nunique") > 1
+    return animal.where(~switches, animal + " in " + fixes["group"].astype(str))
 
 
 class _Track:

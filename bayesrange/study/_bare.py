@@ -20,6 +20,7 @@ from bayesrange.study._cell_size import choose_cell
 from bayesrange.study._classes import classes_on_cells
 from bayesrange.study._crs import scale_warnings
 from bayesrange.study._deployments import assign_animals
+from bayesrange.study._epochs import Epochs
 from bayesrange.study._fixes import RawFixes, read_fixes
 from bayesrange.study._grid import LARGEST, Grid, area_sub_cells, build_grid, frame_of
 from bayesrange.study._layer_keys import class_names
@@ -93,8 +94,8 @@ def read_bare(path: str | Path) -> BareStudy:
     span = Span(fixes["time"].min(), fixes["time"].max())
     groups: pd.DataFrame | None = None
     if settings.groups is not None:
-        none: tuple[pd.DataFrame | None, list[str]] = (None, [])
-        groups, of_groups = _tried(lambda: placed_groups(settings, folder, fixes, fixes_crs, crs, span), none, said)
+        none: tuple[pd.DataFrame | None, Epochs | None, list[str]] = (None, None, [])
+        groups, _, of_groups = _tried(lambda: placed_groups(settings, folder, fixes, fixes_crs, crs, span), none, said)
         said += of_groups
     grid, classes = _classes(settings, folder, fixes, area, crs, said)
     return BareStudy(

@@ -1,6 +1,7 @@
-"""The groups table: home centres, numbers of marking adults, covariates."""
+"""The groups table: home centres, numbers of marking adults, when they are there, covariates."""
 
 from pathlib import Path
+from typing import NamedTuple
 
 import numpy as np
 import pandas as pd
@@ -10,26 +11,33 @@ from bayesrange.study._marking_animals import count_animals
 from bayesrange.study._moments import bounds
 from bayesrange.study._periods import Span
 from bayesrange.study._tables import column_or_error, counted, first_few, numbers, one_name_each, read_table
+from bayesrange.study._texts import shown
 
 _OWN = ("group", "x", "y", "animals", "from", "until")
 
 
-def read_groups(
-    path: Path, name: str, covariates: list[str], span: Span, zone: str | None
-) -> tuple[pd.DataFrame, list[str]]:
+class GroupsTable(NamedTuple):
+    """Groups that are there at some time of the fit, when every group of the file is there, and remarks."""
+
+    groups: pd.DataFrame
+    stays: pd.DataFrame
+    said: list[str]
+
+
+def read_groups(path: Path, name: str, covariates: list[str], span: Span, zone: str | None) -> GroupsTable:
     """Groups in the order of the file, coordinates as written there, and what has to be said.
 
     Args:
         path: where the file is.
         name: what the user calls it.
         covariates: columns that the model uses.
-        span: time that is fitted; a group marks through all of it, or is not there at all and left out.
+        span: time that is fitted; a group that is never there in it is left out.
         zone: of the study's clock.
 
     Returns:
-        Columns group, x, y [as written; NaN = to be estimated], animals (and where a number is uncertain also
-        animals_low and animals_high, see `count_animals`), then every further column: numbers where all its cells are
-        numbers, else text.
+        `groups` with columns group, x, y [as written; NaN = to be estimated], animals (and where a number is uncertain
+        also animals_low and animals_high, see `count_animals`), then every further column: numbers where all its cells
+        are numbers, else text; `stays` with group, from and until (UTC).
 
     Raises:
         StudyError: names file, line and column of what is wrong.
@@ -44,7 +52,8 @@ def read_groups(
     if again.any():
         raise StudyError(f'{name}, line {table.index[again][0]}: the group "{group[again].iloc[0]}" stands twice.')
     one_name_each(group, "groups", name)
-    there = _there(table, name, span, zone)
+    stays = _stays(table, name, zone)
+    there = ((stays["from"] < span.end) & (stays["until"] > span.start)).to_numpy()
     absent = group[~there]
     table, group = table[there], group[there]
     if table.empty:
@@ -65,25 +74,18 @@ def read_groups(
             column_or_error(table.drop(columns=[*_OWN], errors="ignore"), column, name, "[model] covariates names")
     if len(absent):
         said.append(f"{name}: not there in the time that is fitted, and left out: {first_few(absent)}.")
-    return groups, said
+    return GroupsTable(groups, stays, said)
 
 
-def _there(table: pd.DataFrame, name: str, span: Span, zone: str | None) -> np.ndarray:
-    """Which groups mark through the whole time that is fitted, by their columns from and until."""
+def _stays(table: pd.DataFrame, name: str, zone: str | None) -> pd.DataFrame:
+    """When each group is there, by its columns from and until; blanks are open."""
     blank = pd.Series("", index=table.index)
     start = bounds(table.get("from", blank), zone, name, end=False)
     end = bounds(table.get("until", blank), zone, name, end=True)
     back = (end <= start).to_numpy()
     if back.any():
         raise StudyError(f"{name}, line {table.index[back][0]}: until is not after from; mend one of them.")
-    some = ((start < span.end) & (end > span.start)).to_numpy()
-    partly = some & ~((start <= span.start) & (end >= span.end)).to_numpy()
-    if partly.any():
-        raise StudyError(
-            f'{name}, line {table.index[partly][0]}: the group "{table["group"][partly].iloc[0]}" is there only part '
-            "of the time that is fitted, which is not built yet; fit [periods] in which none comes or goes."
-        )
-    return some
+    return pd.DataFrame({"group": table["group"].astype("str"), "from": start, "until": end}).reset_index(drop=True)
 
 
 def groups_of_fixes(fixes: pd.DataFrame) -> tuple[pd.DataFrame, list[str]]:
@@ -113,7 +115,7 @@ def match_groups(fixes: pd.DataFrame, groups: pd.DataFrame, name: str) -> list[s
         )
     strange = ~fixes["group"].isin(known) & bool(known)
     if strange.any():
-        which = first_few(f'"{g}"' for g in sorted(set(fixes["group"][strange])))
+        which = first_few(f'"{shown(g)}"' for g in sorted(set(fixes["group"][strange])))
         number = counted(int(strange.sum()), "fix is", "fixes are")
         raise StudyError(
             f"{number} of a group that is not in {name}: {which} ({first_few(places[strange])}); "

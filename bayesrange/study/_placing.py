@@ -9,6 +9,7 @@ import pyproj
 from bayesrange._errors import StudyError
 from bayesrange.study._crs import carry, crs_text, look_like_degrees, metric_crs, parse_crs, utm_for
 from bayesrange.study._ellipses import place_ellipses
+from bayesrange.study._epochs import Epochs, make_epochs, refuse_absent
 from bayesrange.study._fixes import RawFixes
 from bayesrange.study._groups import groups_of_fixes, match_groups, read_groups
 from bayesrange.study._periods import Span
@@ -58,13 +59,16 @@ def placed(table: pd.DataFrame, source: pyproj.CRS, target: pyproj.CRS) -> pd.Da
 
 def placed_groups(
     settings: StudySettings, folder: Path, fixes: pd.DataFrame, fixes_crs: pyproj.CRS, crs: pyproj.CRS, span: Span
-) -> tuple[pd.DataFrame, list[str]]:
-    """Groups in the study's reference system, matched to the fixes."""
+) -> tuple[pd.DataFrame, Epochs | None, list[str]]:
+    """Groups in the study's reference system, matched to the fixes; epochs, if groups come and go; and remarks."""
     if settings.groups is None:
         groups, said = groups_of_fixes(fixes)
-        return groups, said + match_groups(fixes, groups, "[fixes] group")
+        return groups, None, said + match_groups(fixes, groups, "[fixes] group")
     name = settings.groups.file
-    groups, said = read_groups(folder / name, name, settings.model.covariates, span, settings.fixes.zone)
+    groups, stays, said = read_groups(folder / name, name, settings.model.covariates, span, settings.fixes.zone)
+    refuse_absent(fixes, stays, name)
+    epochs = make_epochs(stays[stays["group"].isin(set(groups["group"]))], span)
+    said += [] if epochs is None else [epochs.sentence(list(groups["group"]), name)]
     given = groups["x"].notna().to_numpy()
     x, y = groups["x"].to_numpy(dtype=float)[given], groups["y"].to_numpy(dtype=float)[given]
     source = crs if settings.study.crs else fixes_crs
@@ -76,4 +80,4 @@ def placed_groups(
     elif source.is_geographic and len(x) and not look_like_degrees(x, y):
         raise StudyError(f"{name}: expected home centres in degrees as the fixes are, or say [study] crs.")
     groups.loc[given, "x"], groups.loc[given, "y"] = carry(x, y, source, crs)
-    return groups, said + match_groups(fixes, groups, name)
+    return groups, epochs, said + match_groups(fixes, groups, name)

@@ -21,6 +21,7 @@ from bayesrange.study._cell_size import check_resolution, check_size, choose_cel
 from bayesrange.study._crs import carry, scale_warnings
 from bayesrange.study._detection import check_detection, refuse_for_tracks
 from bayesrange.study._drop import without_dropped
+from bayesrange.study._epochs import Epochs
 from bayesrange.study._fixes import RawFixes, read_fixes
 from bayesrange.study._grid import SUB, Frame, Grid, area_sub_cells, build_grid, frame_of, without_scraps
 from bayesrange.study._keep import keep_fixes
@@ -58,6 +59,7 @@ class Study:
         rounding_m: step to which the fixes' coordinates were written [m]; 0 if not known.
         bearings: file and row (of the fix), x and y of the station [m], azimuth_deg from grid north and sd_deg of each
             bearing whose fix may be read from them instead of its ellipse; None without bearings.
+        epochs: of the fitted time, where groups come and go; None where every group is there all the time.
     """
 
     path: Path
@@ -75,6 +77,7 @@ class Study:
     deployments: pd.DataFrame | None = None
     rounding_m: float = 0.0
     bearings: pd.DataFrame | None = None
+    epochs: Epochs | None = None
 
     @property
     def model_layers(self) -> tuple[str, ...]:
@@ -103,14 +106,18 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     fixes, raw = without_dropped(placed(raw.table, fixes_crs, crs), raw, settings.fixes, area)
     fixes, raw = _used(fixes, raw, settings, span, period, crs)
     span = span or Span(fixes["time"].min(), fixes["time"].max())
-    groups, said_of_groups = placed_groups(settings, folder, fixes, fixes_crs, crs, span)
+    groups, epochs, said_of_groups = placed_groups(settings, folder, fixes, fixes_crs, crs, span)
 
     cell_m, said_of_cells = _cell(settings, fixes, area)
     frame = frame_of(area, cell_m)
     of_ranges = card_kind(settings.model.card, folder) == "range"
     if not of_ranges:
         refuse_for_tracks(settings, path.name)
-    said_of_cells += check_size(frame, len(groups), settings.sampling) if of_ranges else []
+    said_of_cells += (
+        check_size(frame, len(groups) * (1 if epochs is None else len(epochs.sets)), settings.sampling)
+        if of_ranges
+        else []
+    )
     no_go = _no_go(settings, folder, frame, crs)
     habitable, said_of_scraps = without_scraps(area_sub_cells(area, frame) & ~no_go, frame)
     grid = build_grid(frame, crs, habitable)
@@ -129,7 +136,7 @@ def read_study(path: str | Path, period: str | None = None) -> Study:
     return Study(
         path, settings, crs, area, grid, fixes, groups, layers, counts, warnings, hashes, period, raw.deployments,
         rounding(*raw.table[["x", "y"]].to_numpy(dtype=float).T, fixes_crs.is_geographic),
-        None if raw.bearings is None else raw.bearings.in_system(crs),
+        None if raw.bearings is None else raw.bearings.in_system(crs), epochs,
     )  # fmt: skip
 
 

@@ -246,7 +246,12 @@ def test_a_group_that_nothing_is_known_of(folder):
 
 def test_groups_that_come_and_go(folder):
     folder.groups["from"] = ["", "2031-03-05", ""]
-    refused(folder, 'groups.csv, line 3: the group "south" is there only part of the time that is fitted, which is not')
+    folder.fixes = folder.fixes.iloc[::-1]  # S1's fixes are then in lines 62 to 121, the last first
+    refused(
+        folder,
+        '25 fixes are of a group at a time when it is not there by from and until in groups.csv: "south" (fixes.csv '
+        "line 97, fixes.csv line 98, fixes.csv line 99 and 22 more); mend from and until, or the group of these fixes.",
+    )
     folder.groups["until"] = ["", "2031-03-01", ""]
     refused(folder, "groups.csv, line 3: until is not after from")
 
