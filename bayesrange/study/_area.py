@@ -11,6 +11,7 @@ import shapely
 from pyogrio.errors import DataSourceError
 
 from bayesrange._errors import StudyError
+from bayesrange.study._texts import shown
 
 _ENDINGS = (".geojson", ".json", ".gpkg")
 _PIECES_PER_SIDE = 50  # an edge is cut this often before it is reprojected, so that it bends as it should
@@ -53,12 +54,39 @@ def read_area(path: Path, name: str, crs: pyproj.CRS) -> shapely.Polygon | shape
 
 def _geojson(path: Path, name: str) -> dict[str, Any]:
     try:
-        content = json.loads(path.read_text(encoding="utf-8-sig"))
-    except (UnicodeDecodeError, json.JSONDecodeError) as error:
+        content = json.loads(path.read_text(encoding="utf-8-sig"), parse_constant=_no_constant)
+    except ValueError as error:  # wrong bytes, wrong JSON
         raise StudyError(f"{name}: this is not valid GeoJSON: {error}.") from None
+    except RecursionError:
+        raise StudyError(f"{name}: brackets are nested too deep for GeoJSON; save it again.") from None
     if not isinstance(content, dict) or "type" not in content:
         raise StudyError(f'{name}: this is not GeoJSON; expected an object with a "type".')
+    _check_crs_member(content, name)
     return content
+
+
+def _no_constant(text: str) -> float:
+    raise ValueError(f"{text} is no number")
+
+
+def _check_crs_member(content: dict[str, Any], name: str) -> None:
+    """A "crs" member that is not understood would be passed over, and the coordinates taken for degrees.
+
+    Raises:
+        StudyError: it names no known reference system.
+    """
+    if content.get("crs") is None:
+        return
+    member = content["crs"]
+    properties = member.get("properties") if isinstance(member, dict) else None
+    given = str(properties.get("name") if isinstance(properties, dict) else member)
+    try:
+        pyproj.CRS.from_user_input(given)
+    except pyproj.exceptions.CRSError:
+        raise StudyError(
+            f'{name}: its "crs" member says "{shown(given)}", which is no reference system that is known; expected a '
+            'name such as "urn:ogc:def:crs:EPSG::32631".'
+        ) from None
 
 
 def _polygon(table: geopandas.GeoDataFrame, name: str) -> shapely.Polygon | shapely.MultiPolygon:

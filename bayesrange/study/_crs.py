@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from pyproj.exceptions import CRSError, ProjError
 
 from bayesrange._errors import StudyError
+from bayesrange.study._texts import shown
 
 _WARN_AT, _REFUSE_AT = 0.01, 0.05
 
@@ -21,7 +22,7 @@ def parse_crs(text: str, key: str) -> pyproj.CRS:
         return pyproj.CRS.from_user_input(text)
     except CRSError:
         raise StudyError(
-            f'{key}: "{text}" is no reference system that is known; expected a code such as "EPSG:32631".'
+            f'{key}: "{shown(text)}" is no reference system that is known; expected a code such as "EPSG:32631".'
         ) from None
 
 

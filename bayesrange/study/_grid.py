@@ -19,6 +19,7 @@ from scipy import ndimage
 from bayesrange._errors import StudyError
 
 SUB = 8  # sub-cells along a cell's edge
+_MOST_ALONG = 100_000  # cells along a side, beyond which the grid is not even laid out to tell its size
 LARGEST = 400  # cells along a side, above which a fit would take days
 _EDGE = 0.06  # an overhang by this share of a cell holds no sub-cell's centre (those lie 1/16 in): no cells for it
 
@@ -138,9 +139,21 @@ def frame_of(area: shapely.Polygon | shapely.MultiPolygon, cell_m: float) -> Fra
 
     Rounded coordinates (GeoJSON has 6 or 7 decimals of a degree) do not add a row of empty cells.
     """
-    west, south, east, north = (np.asarray(area.bounds) / cell_m).tolist()
+    with np.errstate(over="ignore"):
+        west, south, east, north = (np.asarray(area.bounds) / cell_m).tolist()
+    if not max(east - west, north - south) < _MOST_ALONG:
+        raise StudyError(
+            f"[study] cell_m: cells of {cell_m:g} m would be more than {_MOST_ALONG:,} along a side of the study area; "
+            "use larger ones."
+        )
     first_x, first_y = int(np.floor(west + _EDGE)), int(np.floor(south + _EDGE))
     last_x, last_y = int(np.ceil(east - _EDGE)), int(np.ceil(north - _EDGE))
+    if last_x <= first_x or last_y <= first_y:
+        wide, high = (area.bounds[k + 2] - area.bounds[k] for k in (0, 1))
+        raise StudyError(
+            f"[study] cell_m: the study area is only {wide:.3g} m by {high:.3g} m, too small for cells of "
+            f"{cell_m:g} m; check the area's polygon, or use smaller cells."
+        )
     return Frame(first_x * cell_m, first_y * cell_m, cell_m, last_y - first_y, last_x - first_x)
 
 

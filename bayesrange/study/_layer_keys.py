@@ -33,6 +33,21 @@ def layer_problems(name: str, layer: LayerSection) -> Iterator[str]:
     yield from class_problems(name, layer.classes, layer.reference)
 
 
+def name_problems(names: list[str]) -> Iterator[str]:
+    """What is wrong with the names of layers: a blank one, or two that differ only by upper case or blanks."""
+    seen: dict[str, str] = {}
+    for name in names:
+        plain = "".join(name.casefold().split())
+        if not plain:
+            yield "[layers]: the name of a layer is blank; give it one, as in [layers.earthworms]."
+        elif plain in seen:
+            yield (
+                f'[layers]: the names "{seen[plain]}" and "{name}" differ only by upper case or blanks; give the '
+                "layers names that differ."
+            )
+        seen[plain] = name
+
+
 def class_names(classes: dict[str, str]) -> list[str]:
     """The classes' names in the order of the study file; several codes may share one."""
     return list(dict.fromkeys(classes.values()))

@@ -9,6 +9,9 @@ from bayesrange.study._tables import numbers, shown
 _RANGE = r"(\d+)\s*[-–]\s*(\d+)"
 _DATE = r"\d{1,2}[-. ]+[^\W\d_]{3,}\.?|[^\W\d_]{3,}[-. ]+\d{1,4}|\d+[./-]\d+[./-]\d+"  # what spreadsheets make of 3-5
 
+MOST_ANIMALS = 10_000
+"""Marking animals of one group at the most; a larger number is a coordinate or a date in the wrong column."""
+
 ANIMALS = ("animals", "animals_low", "animals_high")
 """Columns of `count_animals`; the last two are there where some number is uncertain."""
 
@@ -42,6 +45,12 @@ def count_animals(table: pd.DataFrame, name: str) -> tuple[dict[str, np.ndarray]
     wrong = (low < 1) | (high < low)
     if wrong.any():
         _refuse(texts, wrong, name)
+    if (high > MOST_ANIMALS).any():
+        line, text = texts.index[high > MOST_ANIMALS][0], texts[high > MOST_ANIMALS].iloc[0]
+        raise StudyError(
+            f'{name}, line {line}, column "animals": {shown(text)} animals are more than one group holds; expected at '
+            f"most {MOST_ANIMALS:,}."
+        )
     if (low == high).all():
         return {"animals": low.astype(np.int64)}, said
     for column in ANIMALS[1:]:

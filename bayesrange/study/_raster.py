@@ -118,6 +118,8 @@ def _opened(path: Path) -> rasterio.DatasetReader:
 def _system(source: rasterio.DatasetReader, file: str) -> pyproj.CRS:
     if source.crs is None:
         raise StudyError(f"{file}: the raster does not say its reference system; save it with one.")
+    if not abs(source.transform.determinant) > 0:
+        raise StudyError(f"{file}: the raster's pixels have no size; save it anew with its place on the ground.")
     return pyproj.CRS.from_user_input(source.crs)
 
 

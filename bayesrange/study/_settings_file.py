@@ -14,9 +14,10 @@ from pydantic import BaseModel, ValidationError
 
 from bayesrange._errors import StudyError
 from bayesrange.study._fix_keys import fix_problems
-from bayesrange.study._layer_keys import layer_problems
+from bayesrange.study._layer_keys import layer_problems, name_problems
 from bayesrange.study._period_keys import animal_problems, period_problems
 from bayesrange.study._settings import LayerSection, PeriodSection, Section, StudySettings
+from bayesrange.study._texts import refuse_odd_texts, shown
 
 NOT_GIVEN = "(not given)"
 """Area and card of a study that is only looked at, where the study file names none."""
@@ -117,11 +118,15 @@ def nearest(word: str, known: list[str]) -> str | None:
 
 def _parse(path: Path) -> dict[str, Any]:
     try:
-        return tomllib.loads(path.read_bytes().decode("utf-8-sig"))
+        content = tomllib.loads(path.read_bytes().decode("utf-8-sig"))
     except UnicodeDecodeError:
         raise StudyError(f"{path.name}: the file is not UTF-8 text; save it as UTF-8.") from None
     except tomllib.TOMLDecodeError as error:
-        raise StudyError(f"{path.name}: this is not valid TOML: {error}.") from None
+        raise StudyError(f"{path.name}: this is not valid TOML: {shown(str(error), 200)}.") from None
+    except RecursionError:
+        raise StudyError(f"{path.name}: brackets are nested too deep; expected sections with plain keys.") from None
+    refuse_odd_texts(content, path.name)
+    return content
 
 
 class _Fields(NamedTuple):
@@ -217,6 +222,7 @@ def _contradictions(s: StudySettings) -> Iterator[str]:
     yield from fix_problems(s)
     for name, layer in s.layers.items():
         yield from layer_problems(name, layer)
+    yield from name_problems(list(s.layers))
     yield from period_problems(s)
     yield from animal_problems(s)
     for name in s.model.layers:

@@ -17,6 +17,8 @@ import pandas as pd
 
 from bayesrange._errors import StudyError
 from bayesrange.study._settings_file import nearest
+from bayesrange.study._texts import LONGEST, is_too_long
+from bayesrange.study._texts import shown as shown
 
 _SHOWN = 3
 _NUMBER = r"[+-]?(\d+[.,]?\d*|[.,]\d+)([eE][+-]?\d+)?"
@@ -142,12 +144,6 @@ def has_decimal_commas(texts: pd.Series) -> bool:
     return not with_comma.str.fullmatch(r"[+-]?[1-9]\d{0,2}(,\d{3})+").all()
 
 
-def shown(text: str, most: int = 60) -> str:
-    """A piece of the user's text fit to stand in a sentence: on one line, nothing invisible, not too long."""
-    plain = "".join(c if c.isprintable() else repr(c)[1:-1] for c in str(text)[: most + 1])
-    return plain if len(plain) <= most else f"{plain[:most]}…"
-
-
 def first_few(items: Iterable[object]) -> str:
     """The first three items and how many more there are: "4, 9, 17 and 5 more"."""
     items = list(items)
@@ -169,6 +165,10 @@ def one_name_each(names: Iterable[str], what: str, name: str) -> None:
                 f'{name}: among the {what} is "{shown(item)}", which has a line break or an invisible character in it; '
                 "write the name without."
             )
+        if is_too_long(item):
+            raise StudyError(
+                f'{name}: among the {what} is "{shown(item)}", which is longer than {LONGEST} characters; shorten it.'
+            )
         plain = "".join(item.casefold().split())
         other = seen.setdefault(plain, item)
         if other != item:
@@ -181,6 +181,8 @@ def one_name_each(names: Iterable[str], what: str, name: str) -> None:
 def _decode(path: Path, name: str) -> str:
     if path.is_dir():
         raise StudyError(f"{name}: this is a folder; expected a file.")
+    if path.exists() and not path.is_file():
+        raise StudyError(f"{name}: this is no ordinary file; expected a text table.")
     try:
         raw = path.read_bytes()
     except FileNotFoundError:

@@ -11,6 +11,9 @@ from bayesrange.study._tables import counted, first_few, shown
 
 _CLOCK, _OFFSET = r"[T ][0-9]{2}:[0-9]{2}(?::[0-9]{2}(?:[.,][0-9]+)?)?", r" ?(?:Z|[+-][0-9]{2}(?::?[0-9]{2})?)"
 ISO = rf"[0-9]{{4}}-[0-9]{{2}}-[0-9]{{2}}(?:{_CLOCK}(?:{_OFFSET})?)?"
+YEARS = (1700, 2260)
+"""Years that moments in nanoseconds can hold, with some room."""
+
 _EXAMPLE = "expected ISO 8601 such as 2031-03-01T04:00:00+01:00"
 
 
@@ -67,10 +70,12 @@ def clock_minutes(texts: pd.Series, times: pd.Series, zone: str | None) -> np.nd
 
 def _parsed(texts: pd.Series, original: pd.Series, name: str) -> pd.Series:
     """Moments read as if in UTC where no offset is given."""
-    times = pd.to_datetime(texts, format="ISO8601", utc=True, errors="coerce").astype("datetime64[ns, UTC]")
+    times = pd.to_datetime(texts, format="ISO8601", utc=True, errors="coerce")
     lost = original.loc[texts.index]
     _refuse(lost, times.isna().to_numpy(), name, "there is no such day or time of day")
-    return times
+    first, last = YEARS
+    _refuse(lost, ~times.dt.year.between(first, last).to_numpy(), name, f"expected a year from {first} to {last}")
+    return times.astype("datetime64[ns, UTC]")
 
 
 def _in_zone(local: pd.Series, texts: pd.Series, zone: str, name: str) -> pd.Series:
