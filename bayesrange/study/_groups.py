@@ -52,6 +52,11 @@ def read_groups(path: Path, name: str, covariates: list[str], span: Span, zone: 
     if again.any():
         raise StudyError(f'{name}, line {table.index[again][0]}: the group "{group[again].iloc[0]}" stands twice.')
     one_name_each(group, "groups", name)
+    if "where" in table.columns and (table["where"] != "").any():
+        raise StudyError(
+            f"{name}, line {table.index[table['where'] != ''][0]}: a polygon in the column where, for a home centre "
+            "that is not known better, is not built yet; give x and y, or take the column out."
+        )
     stays = _stays(table, name, zone)
     there = ((stays["from"] < span.end) & (stays["until"] > span.start)).to_numpy()
     absent = group[~there]

@@ -244,6 +244,13 @@ def test_a_group_that_nothing_is_known_of(folder):
     refused(folder, 'the group "west" has neither fixes nor a home centre')
 
 
+def test_a_home_centre_somewhere_in_a_polygon_is_not_built_yet(folder):
+    folder.groups["where"] = ["", "", ""]
+    folder.read()
+    folder.groups["where"] = ["", "wood.geojson", ""]
+    refused(folder, "groups.csv, line 3: a polygon in the column where, for a home centre that is not known better, is")
+
+
 def test_groups_that_come_and_go(folder):
     folder.groups["from"] = ["", "2031-03-05", ""]
     folder.fixes = folder.fixes.iloc[::-1]  # S1's fixes are then in lines 62 to 121, the last first
