@@ -76,7 +76,7 @@ def _fitted(run: MemoryContents) -> dict[str, Any]:
         "not_when": str(card.get("not_when") or ""),
         "pooling": POOLING.get(card.get("pooling"), ""),
         "terms": [(str(term), TERMS.get(term, "")) for term in card["terms"]],
-        "priors": priors(run, spreads=True),
+        "priors": priors(run),
         "references": [str(text) for text in card.get("references") or []],
         "counts": [(COUNTS.get(key, spaced(key)), whole(value)) for key, value in counts],
         "grid": grid(run),

@@ -88,21 +88,14 @@ def grid(run: RunContents) -> str:
     return f"{cells}, {habitable_km2:,.4g} km² habitable, {run.crs.name}"
 
 
-def priors(run: RunContents, spreads: bool = False) -> list[tuple[str, str, str]]:
-    """Name, prior in words, and why this one, or that the study file changed it; parameters of this fit only.
-
-    Args:
-        run: what the run folder holds.
-        spreads: list the priors of the spreads and of the effects of covariates too.
-    """
+def priors(run: RunContents) -> list[tuple[str, str, str]]:
+    """Name, prior in words, and why this one, or that the study file changed it; parameters of this fit only."""
     card = run.facts["card"]
-    fitted = {split_name(str(name))[0] for name in run.parameters["parameter"]}
-    if spreads:
-        fitted |= set(run.parameters["parameter"]) | {"covariate"}
+    fitted = {split_name(str(name))[0] for name in run.parameters["parameter"]} | {"covariate"}
     reasons, changed = card.get("prior_reasons") or {}, card.get("changed_priors") or []
     rows = []
     for name, words in (card.get("priors") or {}).items():
-        if name not in fitted:
+        if name.removesuffix(" spread") not in fitted:
             continue
         why = str(reasons.get(name) or "")
         rows.append((str(name), str(words), f"Set in the study file. {why}".strip() if name in changed else why))
