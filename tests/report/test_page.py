@@ -12,6 +12,7 @@ from page_text import Page
 from bayesrange import StudyError
 from bayesrange.report import Contents, read_contents, write
 from bayesrange.report._format import bar, interval, number
+from bayesrange.report._page_parts import priors
 from bayesrange.report._parameters import Gate, parameter_blocks, split_name
 from bayesrange.report._sentences import CAUTIONS, NOTES, sparse_note
 
@@ -221,3 +222,11 @@ def read_rows(table):
 )
 def test_parameter_names_are_taken_apart(name, parts):
     assert split_name(name) == parts
+
+
+def test_priors_of_spreads_and_covariates_are_listed_and_those_of_other_parameters_are_not():
+    empty, names = xr.Dataset(), ("localising", "localising spread", "covariate", "over_marking")
+    facts = {"card": {"priors": {name: f"prior of {name}" for name in names}}}
+    table = pd.DataFrame({"parameter": ["localising", "localising spread", "localising:size", "localising[north]"]})
+    run = Contents(Path("nowhere"), facts, table, empty, empty, empty, empty, empty)
+    assert [name for name, _, _ in priors(run)] == ["localising", "localising spread", "covariate"]
