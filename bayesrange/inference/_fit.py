@@ -1,6 +1,7 @@
 """`fit`: from a study to a run folder."""
 
 import contextlib
+import ctypes
 import json
 import shutil
 from collections.abc import Callable
@@ -80,6 +81,7 @@ def _sample(
     if not (checkpoints / "inputs.json").exists():
         tell({"stage": "tables", "kind": prepared.card.kind})
         _save_tasks(checkpoints, prepared, folders)
+        _give_memory_back()
     log = checkpoints / "workers.log"
     sampling = prepared.study.settings.sampling
     at_once = min(processes or cores(), sampling.chains * len(folders))
@@ -101,6 +103,12 @@ def _sample(
     ]
     run_workers(todo, at_once, tell, log)
     return seconds, gib
+
+
+def _give_memory_back() -> None:
+    """Let the system have what tables took while they were made: glibc keeps it, though this process only waits now."""
+    with contextlib.suppress(OSError, AttributeError):  # not glibc
+        ctypes.CDLL(None).malloc_trim(0)
 
 
 def _save_tasks(checkpoints: Path, prepared: Prepared, folders: list[Path]) -> None:
